@@ -1,0 +1,1 @@
+"""Shape figures across scales for shorelines, rivers, land cover and basins."""

@@ -1,0 +1,1 @@
+"""Plan, parts, executor, commit and run record."""

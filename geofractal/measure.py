@@ -1,0 +1,144 @@
+"""The plug-in contract: what a measure is, what it is given and what it gives back.
+
+A measure is a stateless class named by an entry point of the group ``geofractal.measures``; the
+shipped ones use the same door as anybody else's. It never opens a file: the batch hands it a chunk of
+projected lines and takes one value per feature and column.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from dataclasses import dataclass
+from typing import ClassVar, Generic, Literal, TypeVar
+
+import numpy as np
+from numpy.typing import NDArray
+from pydantic import BaseModel, ConfigDict
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+PLANES = (
+    "feature-azimuthal",
+    "feature-conic",
+    "layer-azimuthal",
+    "layer-conic",
+    "three-dimensions",
+    "as-given",
+)
+"""Where a feature was measured: on an equidistant plane of its own or its layer's, in three
+dimensions on the ellipsoid, or on the plane of a local (engineering) CRS as it is."""
+
+
+@dataclass(frozen=True, slots=True)
+class Lines:
+    """Features as projected lines: owned arrays, metres throughout.
+
+    Feature ``i`` owns parts ``feature_offsets[i]:feature_offsets[i + 1]``; part ``j`` owns vertices
+    ``part_offsets[j]:part_offsets[j + 1]``. A feature has at least one part and a part at least two
+    vertices; no coordinate is missing or infinite. A closed part repeats its first vertex at its end.
+
+    Attributes
+    ----------
+    rows : (n,) source row of each feature, or the number of its group
+    xy : (m, 2) metres on a plane, or (m, 3) geocentric metres; one chunk is all of one kind
+    part_offsets : (p + 1,)
+    feature_offsets : (n + 1,)
+    closed : (p,) whether the part is a ring
+    source_vertex : (m,) False for vertices added to keep long edges straight in the source's CRS
+    plane : (n,) index into `PLANES`
+    distortion : (n,) worst relative distance error over the feature (0.001 = 0.1 %)
+    radius : (n,) radius in metres that turns a ruler into its chord; infinite on a plane
+    """
+
+    rows: Ints
+    xy: Floats
+    part_offsets: Ints
+    feature_offsets: Ints
+    closed: Bools
+    source_vertex: Bools
+    plane: NDArray[np.uint8]
+    distortion: Floats
+    radius: Floats
+
+    def __len__(self) -> int:
+        """Return the number of features."""
+        return len(self.rows)
+
+
+@dataclass(frozen=True, slots=True)
+class Column:
+    """One result column: a name of whole words with its unit last, and what a reviewer must know of it.
+
+    `kind` is ``number`` (float64, NaN is null), ``count`` (int64, negative is null), ``text``
+    (str or None) or ``flag`` (1, 0, negative is null). `short` is the name in formats that hold ten
+    bytes. `unit` is empty where the column has none.
+    """
+
+    name: str
+    short: str
+    kind: Literal["number", "count", "text", "flag"]
+    unit: str
+    meaning: str
+    formula: str = ""
+    source: str = ""
+
+
+class Options(BaseModel):
+    """Base of every measure's options: frozen, strict, no free keys; YAML spells them with hyphens."""
+
+    model_config = ConfigDict(
+        frozen=True,
+        strict=True,
+        extra="forbid",
+        alias_generator=lambda name: name.replace("_", "-"),
+        validate_by_name=True,
+        validate_by_alias=True,
+    )
+
+
+O = TypeVar("O", bound=Options)  # noqa: E741 - the one option type of a measure
+
+Values = dict[str, NDArray[np.generic] | NDArray[np.object_]]
+"""One array per column, one value per feature of the chunk, nulls as `Column.kind` says."""
+
+
+class Measure(ABC, Generic[O]):
+    """A measure of lines, one result row per feature.
+
+    Class attributes
+    ----------------
+    name : the word in the YAML file; equals the entry point's name
+    title, formula, sources : text for the tables, the report and ``geofractal measures``
+    stem : prefix of the note column, ``<stem>_note``
+    version : part of the content key; raise it whenever results change
+    holds_gil : True (the safe default) sends the work to processes instead of threads
+    """
+
+    name: ClassVar[str]
+    title: ClassVar[str]
+    formula: ClassVar[str]
+    sources: ClassVar[tuple[str, ...]]
+    stem: ClassVar[str]
+    needs: ClassVar[Literal["lines"]] = "lines"
+    version: ClassVar[int] = 1
+    holds_gil: ClassVar[bool] = True
+    options: ClassVar[type[Options]]
+
+    @abstractmethod
+    def columns(self, options: O) -> tuple[Column, ...]:
+        """Return the columns that `measure` fills under these options, the note included."""
+
+    @abstractmethod
+    def measure(self, lines: Lines, options: O) -> Values:
+        """Measure a chunk. Pure: the same chunk and options give the same values.
+
+        Returns one array of ``len(lines)`` per column. A feature that deserves no figure has nulls
+        and says why in the note; it never raises.
+        """
+
+    def note_column(self) -> Column:
+        """Return the text column that says why a figure is missing or limited."""
+        meaning = "why a figure is missing or limited; null where nothing is to be said"
+        return Column(f"{self.stem}_note", f"{self.stem[:5]}_note", "text", "", meaning)

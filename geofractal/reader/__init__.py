@@ -1,0 +1,1 @@
+"""Layers in: vector streams, raster strips, and the planes they are measured on."""

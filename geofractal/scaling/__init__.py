@@ -1,0 +1,1 @@
+"""Ladder, fit, interval and verdict: shared by every estimator, knows no files."""
