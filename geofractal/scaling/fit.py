@@ -1,0 +1,52 @@
+"""The straight line through a ladder on log-log axes."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from geofractal.kernels.ladder_fit import fit_lines
+
+if TYPE_CHECKING:
+    from geofractal.measure import Floats, Ints
+    from geofractal.scaling.ladder import Ladders
+
+
+@dataclass(frozen=True, slots=True)
+class Fit:
+    """Least squares of ln y on ln r, one value per feature; NaN where fewer than two rungs have a y.
+
+    Attributes
+    ----------
+    slope, intercept : (n,) of ln y on ln r, rulers in metres
+    r2 : (n,) share of variance explained; says nothing about whether a power law holds
+    rungs : (n,) rungs used
+    """
+
+    slope: Floats
+    intercept: Floats
+    r2: Floats
+    rungs: Ints
+
+
+def fit_power_law(ladders: Ladders, values: Floats) -> Fit:
+    """Fit ln `values` on ln ruler by least squares, feature by feature.
+
+    Parameters
+    ----------
+    ladders : of n features, k rungs in all
+    values : (k,) positive quantity at each rung (walked length in metres, boxes counted); a NaN
+        or a value that is not positive leaves its rung out
+
+    Examples
+    --------
+    >>> ladders = Ladders(np.array([0, 3, 3]), np.array([1.0, 2.0, 4.0]))
+    >>> fit_power_law(ladders, np.array([8.0, 4.0, 2.0])).slope
+    array([-1., nan])
+    """
+    logs = np.full(len(values), np.nan)
+    np.log(values, out=logs, where=values > 0)
+    table = fit_lines(ladders.offsets, np.log(ladders.rulers), logs)
+    return Fit(table[:, 0].copy(), table[:, 1].copy(), table[:, 2].copy(), table[:, 3].astype(np.int64))

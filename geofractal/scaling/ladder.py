@@ -1,0 +1,81 @@
+"""The ladder: which rulers a feature is walked with, chosen from its own detail."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from geofractal.kernels.line_scales import line_scales
+
+if TYPE_CHECKING:
+    from geofractal.measure import Floats, Ints, Lines
+
+FIRST_RUNG_SEGMENTS = 3.0
+"""First rung, in median source segments: below it the vertices themselves are what is measured."""
+
+LAST_RUNG_EXTENT = 1.0 / 6.0
+"""Last rung as a share of the extent: above it too few steps are left to count."""
+
+RUNGS_PER_DECADE = 12
+
+
+@dataclass(frozen=True, slots=True)
+class Ladders:
+    """Geometric ladders of n features: feature i owns ``rulers[offsets[i]:offsets[i + 1]]``.
+
+    Attributes
+    ----------
+    offsets : (n + 1,)
+    rulers : (k,) metres, ascending within a feature; a feature without usable scales owns none
+    """
+
+    offsets: Ints
+    rulers: Floats
+
+    def __len__(self) -> int:
+        """Return the number of features."""
+        return len(self.offsets) - 1
+
+
+def divider_ladders(
+    lines: Lines,
+    *,
+    ruler_min_m: float | None = None,
+    ruler_max_m: float | None = None,
+    rungs: int | None = None,
+) -> Ladders:
+    """Choose each feature's rulers from its own vertex spacing and extent.
+
+    Parameters
+    ----------
+    lines : projected lines
+    ruler_min_m, ruler_max_m : first and last ruler in metres; None chooses them from the feature
+    rungs : number of rulers; None takes `RUNGS_PER_DECADE` a decade
+
+    Returns
+    -------
+    Ladders
+        A feature without length, or whose first ruler is not below its last, owns no rung.
+    """
+    scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
+    n = len(lines)
+    lowest = np.full(n, ruler_min_m) if ruler_min_m is not None else FIRST_RUNG_SEGMENTS * scales[:, 0]
+    highest = np.full(n, ruler_max_m) if ruler_max_m is not None else LAST_RUNG_EXTENT * scales[:, 1]
+    highest[np.isnan(scales[:, 0])] = np.nan
+    return geometric_ladders(lowest, highest, rungs)
+
+
+def geometric_ladders(lowest: Floats, highest: Floats, rungs: int | None = None) -> Ladders:
+    """Return one geometric ladder a feature, both ends included; none where not lowest < highest."""
+    usable = (lowest > 0) & (lowest < highest) & np.isfinite(highest)
+    decades = np.zeros(len(lowest))
+    decades[usable] = np.log10(highest[usable] / lowest[usable])
+    counts = np.ceil(decades * RUNGS_PER_DECADE).astype(np.int64) + 1 if rungs is None else rungs
+    counts = np.where(usable, counts, 0)
+    offsets = np.concatenate(([0], np.cumsum(counts)))
+    place = np.arange(offsets[-1]) - np.repeat(offsets[:-1], counts)
+    share = place / np.repeat(np.maximum(counts - 1, 1), counts)
+    rulers = np.repeat(lowest, counts) * 10.0 ** (share * np.repeat(decades, counts))
+    return Ladders(offsets.astype(np.int64), rulers)
