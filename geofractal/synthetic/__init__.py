@@ -22,7 +22,7 @@ from geofractal.synthetic.koch import (
 from geofractal.synthetic.lattice import dragon_boundary
 from geofractal.synthetic.similarity import similarity_dimension
 from geofractal.synthetic.smooth import arc, circle, line, meander
-from geofractal.synthetic.trails import fractional_trail
+from geofractal.synthetic.trails import fractional_trail, loop_erased_walk, percolation_border
 
 __all__ = [
     "CARPET",
@@ -40,8 +40,10 @@ __all__ = [
     "gosper_island",
     "koch",
     "line",
+    "loop_erased_walk",
     "meander",
     "minkowski_island",
+    "percolation_border",
     "polygonised",
     "quadratic_koch",
     "random_carpet",
