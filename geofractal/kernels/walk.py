@@ -1,0 +1,444 @@
+"""The exact divider walk over ragged lines, in the plane or in three dimensions.
+
+From a point of the line the next one is the first along the line at straight distance r. Distance is
+convex along a straight segment, so it is enough to find the first *vertex* that is not inside the
+circle; a hierarchy of bounding boxes passes over whole stretches that are.
+"""
+
+# ruff: noqa: FBT001 - kernels take flat values one by one, by position
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from geofractal.kernels.jit import kernel
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
+
+TIE = 1e-9
+"""Relative tolerance at which a vertex counts as lying on the circle: rounding would otherwise make a
+walk miss circles that only touch the line, as they do all along a Koch curve."""
+
+_SNAP = 1e-6
+"""A start within this share of a segment from its end is the vertex itself."""
+
+_SHIFT = 3  # a box holds 2**3 vertices, or as many boxes of the level below
+_EDGE = (1 << _SHIFT) - 1
+
+
+@kernel
+def _ring_order(xy: Floats, first: int, last: int) -> tuple[int, int]:
+    """Find a starting vertex and a direction of a ring that do not depend on how its vertices were stored.
+
+    The start is the vertex farthest from the centre of the outline, the direction anticlockwise (in
+    three dimensions: seen from outside the globe).
+    """
+    size = xy.shape[1]
+    centre = np.zeros(3)
+    total = 0.0
+    area = np.zeros(3)
+    a = np.zeros(3)
+    b = np.zeros(3)
+    for i in range(first, last - 1):
+        square = 0.0
+        for k in range(size):
+            a[k] = xy[i, k] - xy[first, k]
+            b[k] = xy[i + 1, k] - xy[first, k]
+            square += (b[k] - a[k]) ** 2
+        step = math.sqrt(square)
+        total += step
+        for k in range(3):
+            centre[k] += step * (a[k] + b[k]) / 2
+        area[0] += a[1] * b[2] - a[2] * b[1]
+        area[1] += a[2] * b[0] - a[0] * b[2]
+        area[2] += a[0] * b[1] - a[1] * b[0]
+    if total > 0:
+        centre /= total
+    up = area[2]
+    if size == 3:
+        up = area[0] * xy[first, 0] + area[1] * xy[first, 1] + area[2] * xy[first, 2]
+    best = -1.0
+    origin = first
+    for i in range(first, last - 1):
+        square = 0.0
+        for k in range(size):
+            square += (xy[i, k] - xy[first, k] - centre[k]) ** 2
+        if square > best:
+            best = square
+            origin = i
+    return origin, (1 if up >= 0 else -1)
+
+
+@kernel
+def _line_order(xy: Floats, first: int, last: int) -> tuple[int, int]:
+    """End and direction of an open line that do not depend on which way it was drawn."""
+    for k in range(xy.shape[1]):
+        if xy[first, k] < xy[last - 1, k]:
+            return first, 1
+        if xy[first, k] > xy[last - 1, k]:
+            return last - 1, -1
+    return first, 1
+
+
+@kernel
+def _order(xy: Floats, first: int, last: int, closed: bool) -> tuple[int, int]:
+    """First vertex and direction in which a part is taken, whichever way it is stored."""
+    return _ring_order(xy, first, last) if closed else _line_order(xy, first, last)
+
+
+@kernel
+def _next(i: int, first: int, last: int, way: int, closed: bool) -> int:
+    """Vertex after `i`; a ring's last vertex is its first."""
+    i += way
+    if closed and i == last - 1:
+        return first
+    return last - 2 if closed and i < first else i
+
+
+@kernel
+def _gap(xy: Floats, i: int, j: int) -> float:
+    """Straight distance of two vertices."""
+    square = 0.0
+    for k in range(xy.shape[1]):
+        square += (xy[j, k] - xy[i, k]) ** 2
+    return math.sqrt(square)
+
+
+@kernel
+def _total(xy: Floats, first: int, last: int, origin: int, way: int, closed: bool) -> float:
+    """Length of a part's polyline, summed in the order in which it is taken."""
+    total = 0.0
+    i = origin
+    for _ in range(last - first - 1):
+        j = _next(i, first, last, way, closed)
+        total += _gap(xy, i, j)
+        i = j
+    return total
+
+
+@kernel
+def _lay_path(
+    xy: Floats, first: int, last: int, origin: int, way: int, closed: bool, starts: int, total: float
+) -> tuple[Floats, Ints]:
+    """Copy a part with vertices inserted where walks start: at every ``total / starts`` of its length.
+
+    Returns the path and the index of each start; a ring ends with its first vertex repeated.
+    """
+    size = xy.shape[1]
+    path = np.empty((last - first + starts - 1, size))
+    marks = np.zeros(starts, np.int64)
+    path[0] = xy[origin]
+    filled = 1
+    mark = 1
+    along = 0.0
+    i = origin
+    for _ in range(last - first - 1):
+        j = _next(i, first, last, way, closed)
+        step = _gap(xy, i, j)
+        while mark < starts and total * mark / starts < along + step * (1 - _SNAP):
+            t = (total * mark / starts - along) / step
+            if t > _SNAP:
+                for k in range(size):
+                    path[filled, k] = xy[i, k] + t * (xy[j, k] - xy[i, k])
+                filled += 1
+            marks[mark] = filled - 1
+            mark += 1
+        path[filled] = xy[j]
+        filled += 1
+        along += step
+        i = j
+    return path[:filled], marks
+
+
+@kernel
+def _box_levels(count: int) -> Ints:
+    """First box of each level of the hierarchy over `count` vertices, and the number of all boxes."""
+    levels = 0
+    size = count >> _SHIFT
+    while size > 1:
+        levels += 1
+        size >>= _SHIFT
+    bases = np.zeros(levels + 1, np.int64)
+    size = count
+    for level in range(levels):
+        size = (size + _EDGE) >> _SHIFT
+        bases[level + 1] = bases[level] + size
+    return bases
+
+
+@kernel
+def _boxes(path: Floats, bases: Ints) -> Floats:
+    """Bounding boxes of every 8, 64, 512, ... vertices: lowest corner, then highest."""
+    size = path.shape[1]
+    levels = bases.size - 1
+    boxes = np.empty((bases[levels], 2 * size))
+    for level in range(levels):
+        below = path.shape[0] if level == 0 else bases[level] - bases[level - 1]
+        for b in range(bases[level + 1] - bases[level]):
+            start = b << _SHIFT
+            end = min(start + _EDGE + 1, below)
+            for k in range(size):
+                low = math.inf
+                high = -math.inf
+                for i in range(start, end):
+                    low = min(low, path[i, k] if level == 0 else boxes[bases[level - 1] + i, k])
+                    high = max(high, path[i, k] if level == 0 else boxes[bases[level - 1] + i, size + k])
+                boxes[bases[level] + b, k] = low
+                boxes[bases[level] + b, size + k] = high
+    return boxes
+
+
+@kernel
+def _box_inside(boxes: Floats, b: int, cx: float, cy: float, cz: float, near: float) -> bool:
+    """Whether the farthest corner of a box is inside the circle of squared radius `near`."""
+    flat = boxes.shape[1] == 4
+    high = 2 if flat else 3
+    dx = max(cx - boxes[b, 0], boxes[b, high] - cx)
+    dy = max(cy - boxes[b, 1], boxes[b, high + 1] - cy)
+    dz = 0.0 if flat else max(cz - boxes[b, 2], boxes[b, 5] - cz)
+    return bool(dx * dx + dy * dy + dz * dz < near)
+
+
+@kernel
+def _first_outside(
+    path: Floats,
+    boxes: Floats,
+    bases: Ints,
+    levels: int,
+    k: int,
+    stop: int,
+    way: int,
+    cx: float,
+    cy: float,
+    cz: float,
+    near: float,
+) -> int:
+    """First vertex from `k` to `stop` that is not inside the circle of squared radius `near`, or -1."""
+    flat = path.shape[1] == 2
+    corner = 0 if way > 0 else _EDGE
+    while (stop - k) * way >= 0:
+        if levels > 0 and k & _EDGE == corner and _box_inside(boxes, k >> _SHIFT, cx, cy, cz, near):
+            level = 0
+            block = k >> _SHIFT
+            climbing = True
+            while climbing:
+                climbing = (
+                    level + 1 < levels
+                    and block & _EDGE == corner
+                    and _box_inside(boxes, bases[level + 1] + (block >> _SHIFT), cx, cy, cz, near)
+                )
+                if climbing:
+                    level += 1
+                    block >>= _SHIFT
+            k += way << (_SHIFT * (level + 1))
+        else:
+            dx = path[k, 0] - cx
+            dy = path[k, 1] - cy
+            dz = 0.0 if flat else path[k, 2] - cz
+            if dx * dx + dy * dy + dz * dz >= near:
+                return k
+            k += way
+    return -1
+
+
+@kernel
+def _walk(
+    path: Floats,
+    boxes: Floats,
+    bases: Ints,
+    levels: int,
+    total: float,
+    start: int,
+    way: int,
+    closed: bool,
+    chord: float,
+) -> tuple[int, float]:
+    """Walk from vertex `start` to the end of the line, or once around; count steps, measure the rest."""
+    flat = path.shape[1] == 2
+    near = (chord * (1 - TIE)) ** 2
+    cx, cy, cz = path[start, 0], path[start, 1], 0.0 if flat else path[start, 2]
+    k = start + way
+    stop = len(path) - 1 if way > 0 else 0
+    end = start if closed else stop
+    lap_left = closed
+    on_segment = True  # the present point lies on the segment that ends at vertex k
+    steps = 0
+    for _ in range(int(total / chord * (1 + 1e-6)) + 4):
+        j = _first_outside(path, boxes, bases, levels, k, stop, way, cx, cy, cz, near)
+        if j < 0 and lap_left:
+            lap_left = False
+            k, stop, on_segment = 1, start, False
+        elif j < 0:
+            break
+        else:
+            bx, by, bz = path[j, 0], path[j, 1], 0.0 if flat else path[j, 2]
+            dx, dy, dz = bx - cx, by - cy, bz - cz
+            far = math.sqrt(dx * dx + dy * dy + dz * dz)
+            count = 1
+            snap = far <= chord * (1 + TIE)
+            if j == k and on_segment:
+                count = int(far / chord + TIE)
+                snap = far - count * chord <= TIE * chord
+                t = count * chord / far
+                px, py, pz = cx, cy, cz
+            else:
+                px, py, pz = path[j - way, 0], path[j - way, 1], 0.0 if flat else path[j - way, 2]
+                wx, wy, wz = px - cx, py - cy, pz - cz
+                dx, dy, dz = bx - px, by - py, bz - pz
+                A = dx * dx + dy * dy + dz * dz
+                B = wx * dx + wy * dy + wz * dz
+                C = wx * wx + wy * wy + wz * wz - chord * chord
+                t = (math.sqrt(max(B * B - A * C, 0.0)) - B) / A if not snap else 1.0
+            steps += count
+            if snap:
+                cx, cy, cz = bx, by, bz
+                k = j + way
+            else:
+                cx, cy, cz = px + t * dx, py + t * dy, pz + t * dz
+                k = j
+            on_segment = True
+    dx, dy, dz = path[end, 0] - cx, path[end, 1] - cy, 0.0 if flat else path[end, 2] - cz
+    return steps, math.sqrt(dx * dx + dy * dy + dz * dz)
+
+
+@kernel
+def _chord(arc: float, radius: float) -> float:
+    """Straight distance under an arc on a sphere; NaN where the arc passes the antipode."""
+    if math.isinf(radius):
+        return arc
+    return 2 * radius * math.sin(arc / (2 * radius)) if arc <= math.pi * radius else math.nan
+
+
+@kernel
+def _arc(chord: float, radius: float) -> float:
+    """Arc on a sphere over a straight distance."""
+    if math.isinf(radius):
+        return chord
+    return 2 * radius * math.asin(min(chord / (2 * radius), 1.0))
+
+
+@kernel
+def _walk_rung(
+    path: Floats,
+    boxes: Floats,
+    bases: Ints,
+    marks: Ints,
+    total: float,
+    closed: bool,
+    radius: float,
+    ruler: float,
+    starts: int,
+) -> tuple[float, float, float, int]:
+    """Mean and variance of L(r) over a part's walks, their mean steps, and the fewest steps taken.
+
+    The fewest are those of any walk of a ring, and of the walks from the two ends of an open line.
+    """
+    chord = _chord(ruler, radius)
+    if not chord > 0:
+        return math.nan, math.nan, 0.0, 0
+    levels = bases.size - 1
+    stride = len(marks) // starts
+    ends = 0 if closed else 1
+    walked = np.empty(starts + ends)
+    steps = 0
+    fewest = -1
+    for s in range(starts + ends):
+        if closed:
+            n, d = _walk(path, boxes, bases, levels, total, marks[s * stride], 1, closed, chord)
+            rest = _arc(d, radius)
+        elif s == starts:
+            n, d = _walk(path, boxes, bases, levels, total, len(path) - 1, -1, closed, chord)
+            rest = _arc(d, radius)
+        else:
+            n, d = _walk(path, boxes, bases, levels, total, marks[s * stride], 1, closed, chord)
+            rest = _arc(d, radius)
+            if s > 0:
+                back, d = _walk(path, boxes, bases, levels, total, marks[s * stride], -1, closed, chord)
+                n += back
+                rest += _arc(d, radius)
+        walked[s] = ruler * n + rest
+        steps += n
+        if closed or s in (0, starts):
+            fewest = n if fewest < 0 else min(fewest, n)
+    mean = walked.sum() / len(walked)
+    variance = ((walked - mean) ** 2).sum() / (len(walked) - 1) if len(walked) > 1 else math.nan
+    return mean, variance, steps / len(walked), fewest
+
+
+@kernel
+def walk_ladders(
+    xy: Floats,
+    part_offsets: Ints,
+    feature_offsets: Ints,
+    closed: Bools,
+    radius: Floats,
+    rung_offsets: Ints,
+    rulers: Floats,
+    starts: Ints,
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """Walk every feature with every ruler of its own ladder.
+
+    A part is long enough for a ruler where a whole step can be taken from each end of an open line, or
+    from every starting point of a ring. The lengths of such parts add up; of the others the length of
+    the polyline is left out.
+
+    Parameters
+    ----------
+    xy, part_offsets, feature_offsets, closed, radius : as in `geofractal.measure.Lines`
+    rung_offsets : (n + 1,) feature ``i`` owns rulers ``rung_offsets[i]:rung_offsets[i + 1]``
+    rulers : (q,) metres
+    starts : (q,) starting points a part, evenly spaced along it; within a feature each divides the
+        largest. A ring is walked once from each, an open line from both ends and from every other
+        starting point to both ends.
+
+    Returns
+    -------
+    length : (q,) mean walked length in metres; NaN where no part is long enough
+    spread : (q,) standard deviation of one walk over starts and directions; NaN for a single walk
+    steps : (q,) mean number of whole steps
+    left_out : (q,) polyline length in metres of the parts that are not long enough
+    """
+    length = np.zeros(rulers.size)
+    spread = np.zeros(rulers.size)
+    steps = np.zeros(rulers.size)
+    left_out = np.zeros(rulers.size)
+    for f in range(feature_offsets.size - 1):
+        lo = rung_offsets[f]
+        hi = rung_offsets[f + 1]
+        if lo == hi:
+            continue
+        most = starts[lo:hi].max()
+        for p in range(feature_offsets[f], feature_offsets[f + 1]):
+            first = part_offsets[p]
+            last = part_offsets[p + 1]
+            origin, way = _order(xy, first, last, closed[p])
+            total = _total(xy, first, last, origin, way, closed[p])
+            if total > 0:
+                if closed[p] or most > 1:
+                    path, marks = _lay_path(xy, first, last, origin, way, closed[p], most, total)
+                else:
+                    path, marks = xy[first:last], np.zeros(1, np.int64)
+                bases = _box_levels(len(path))
+                boxes = _boxes(path, bases)
+                for q in range(lo, hi):
+                    mean, variance, taken, fewest = _walk_rung(
+                        path, boxes, bases, marks, total, closed[p], radius[f], rulers[q], starts[q]
+                    )
+                    if fewest > 0:
+                        length[q] += mean
+                        spread[q] += variance
+                        steps[q] += taken
+                    else:
+                        left_out[q] += total
+        for q in range(lo, hi):
+            if steps[q] > 0:
+                spread[q] = math.sqrt(spread[q])
+            else:
+                length[q] = math.nan
+                spread[q] = math.nan
+    return length, spread, steps, left_out
