@@ -46,6 +46,11 @@ class SourceCrs:
     b: float
     unit: float
 
+    @property
+    def e2(self) -> float:
+        """Square of the ellipsoid's first eccentricity."""
+        return 1.0 - (self.b / self.a) ** 2
+
     def lonlat(self, xy: Floats) -> Floats:
         """Return (m, 2) longitude and latitude in radians on the layer's own ellipsoid.
 
@@ -60,22 +65,24 @@ class SourceCrs:
         out *= radians
         return out
 
-    def in_world(self, xy: Floats, lonlat: Floats, size: Floats) -> Bools:
-        """Return which points, of features of `size` (in coordinate units), lie in the CRS's world.
-
-        Latitudes end at the poles and longitudes 1.5 turns from the zero meridian. A projected point
-        must come back from its longitude and latitude to within a millionth of its feature.
-        """
-        inside = np.abs(lonlat[:, 1]) <= WORLD_LATITUDE
-        inside &= np.abs(lonlat[:, 0]) <= WORLD_LONGITUDE
-        if self.kind == "projected":
-            undo, radians = _inverse(self.wkt)
-            back = undo.transform(lonlat[:, 0] / radians, lonlat[:, 1] / radians, direction="INVERSE")
-            allowed = ROUND_TRIP * size + 1e-9 * np.abs(xy).max(axis=1)
-            with np.errstate(invalid="ignore"):
-                off = np.hypot(back[0] - xy[:, 0], back[1] - xy[:, 1])
-            inside &= off <= allowed
+    def in_world(self, lonlat: Floats) -> Bools:
+        """Return which points (radians) lie between the poles and within 1.5 turns of longitude."""
+        with np.errstate(invalid="ignore"):
+            inside: Bools = np.abs(lonlat[:, 1]) <= WORLD_LATITUDE
+            inside &= np.abs(lonlat[:, 0]) <= WORLD_LONGITUDE
         return inside
+
+    def comes_back(self, xy: Floats, lonlat: Floats, size: Floats) -> Bools:
+        """Return which points of a projected layer their longitude and latitude lead back to.
+
+        Allowed is a millionth of `size`, the extent of the point's feature in coordinate units.
+        """
+        undo, radians = _inverse(self.wkt)
+        back = undo.transform(lonlat[:, 0] / radians, lonlat[:, 1] / radians, direction="INVERSE")
+        allowed = ROUND_TRIP * size + 1e-9 * np.abs(xy).max(axis=1)
+        with np.errstate(invalid="ignore"):
+            near: Bools = np.hypot(back[0] - xy[:, 0], back[1] - xy[:, 1]) <= allowed
+        return near
 
 
 @cache
@@ -112,7 +119,7 @@ def source_crs(text: str) -> SourceCrs:
     if not unit > 0.0:
         raise LayerError(f"CRS {crs.name!r} states no unit; give the layer a CRS with a known unit")
     wkt = crs.to_wkt()
-    if _is_local(crs):
+    if crs.is_engineering:
         return SourceCrs("as-given", crs.name, wkt, np.nan, np.nan, unit)
     ellipsoid = crs.ellipsoid
     if ellipsoid is None or not (crs.is_geographic or crs.is_projected):
@@ -158,7 +165,10 @@ def crs_doubt(text: str, bounds: Bounds) -> str | None:
     corners = np.array([(x, y) for x in bounds[::2] for y in bounds[1::2]])
     lonlat = source.lonlat(corners)
     size = np.full(4, np.hypot(bounds[2] - bounds[0], bounds[3] - bounds[1]))
-    if not source.in_world(corners, lonlat, size).all():
+    inside = source.in_world(lonlat)
+    if source.kind == "projected":
+        inside &= source.comes_back(corners, lonlat, size)
+    if not inside.all():
         return f"bounds {box} lie outside the world of {source.name}; is the CRS (.prj) wrong?"
     return _outside_area(crs, source, lonlat, box)
 
@@ -187,17 +197,12 @@ def _horizontal(crs: pyproj.CRS) -> pyproj.CRS:
     return crs
 
 
-def _is_local(crs: pyproj.CRS) -> bool:
-    return bool(crs.is_engineering)
-
-
 @cache
 def _inverse(wkt: str) -> tuple[pyproj.Transformer, float]:
     """Return the transformer to the CRS's own base and the radians in its base's unit."""
-    crs = pyproj.CRS.from_wkt(wkt)
-    base = crs.geodetic_crs
-    if base is None:
-        raise LayerError(f"CRS {crs.name!r} has no geographic base")
+    crs = base = pyproj.CRS.from_wkt(wkt)
+    while base.is_derived and base.source_crs is not None:
+        base = base.source_crs
     try:
         undo = pyproj.Transformer.from_crs(crs, base, always_xy=True)
     except ProjError as error:
