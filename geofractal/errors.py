@@ -14,6 +14,33 @@ A single feature never raises: its row stays, its new columns are null, and its 
 Every message says what failed, which one, what was allowed and what to try.
 """
 
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True, slots=True)
+class Problem:
+    """One thing that is wrong in a batch file: where it stands, what stood there, what may stand there.
+
+    `line` and `column` count from 1; both are 0 where the batch did not come from a file.
+    """
+
+    file: str
+    line: int
+    column: int
+    key: str
+    said: str
+    allowed: str = ""
+    near: str = ""
+
+    def __str__(self) -> str:
+        """Return ``file:line:column: key: what is wrong; allowed: ...; did you mean ...?``."""
+        place = f"{self.file}:{self.line}:{self.column}" if self.line else self.file
+        text = ": ".join(part for part in (place, self.key, self.said) if part)
+        text += f"; allowed: {self.allowed}" if self.allowed else ""
+        return text + (f"; did you mean {self.near!r}?" if self.near else "")
+
 
 class GeofractalError(Exception):
     """Root of all errors that geofractal raises on purpose."""
@@ -22,9 +49,16 @@ class GeofractalError(Exception):
 
 
 class ConfigError(GeofractalError):
-    """The batch file or an option is wrong; nothing has been measured."""
+    """The batch file or an option is wrong; nothing has been measured.
+
+    `problems` lists everything that is wrong with the file, in the order of its lines.
+    """
 
     exit_code = 2
+
+    def __init__(self, message: str, problems: tuple[Problem, ...] = ()) -> None:
+        super().__init__(message)
+        self.problems = problems
 
 
 class MeasureError(GeofractalError):

@@ -92,6 +92,7 @@ class Options(BaseModel):
         frozen=True,
         strict=True,
         extra="forbid",
+        allow_inf_nan=False,
         alias_generator=lambda name: name.replace("_", "-"),
         validate_by_name=True,
         validate_by_alias=True,
