@@ -23,7 +23,7 @@ class Walked:
     left_out: np.ndarray
 
 
-def walk(parts, rulers, *, starts=1, closed=False, radius=math.inf):
+def walk(parts, rulers, *, starts=1, enough=10**9, closed=False, radius=math.inf):
     """Walk one feature made of `parts` with each ruler."""
     xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
     offsets = np.concatenate(([0], np.cumsum([len(p) for p in parts])))
@@ -37,7 +37,9 @@ def walk(parts, rulers, *, starts=1, closed=False, radius=math.inf):
             np.array([radius]),
             np.array([0, len(rulers)]),
             rulers,
-            np.full(len(rulers), starts),
+            starts,
+            enough,
+            True,
         )
     )
 
@@ -266,7 +268,9 @@ def test_each_feature_has_its_own_ladder():
         np.full(3, math.inf),
         np.array([0, 2, 3, 4]),
         rulers,
-        np.ones(4, np.int64),
+        1,
+        0,
+        False,
     )
     last = (plain_length(lines[2], 1.0) + plain_length(lines[2][::-1], 1.0)) / 2
     assert length == pytest.approx([4 / 3, 16 / 9, 8 / 3, last])
@@ -297,7 +301,9 @@ def test_compiled_and_interpreted_kernels_agree(interpreted):
             np.array([math.inf if size == 2 else 100.0]),
             np.array([0, 5]),
             np.geomspace(0.4, 8, 5),
-            np.array([4, 4, 2, 1, 1]),
+            4,
+            30,
+            True,
         )
         for one, other in pairwise((walk_ladders(*arguments), interpreted(*arguments))):
             for a, b in zip(one, other, strict=True):

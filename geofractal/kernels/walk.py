@@ -323,6 +323,32 @@ def _arc(chord: float, radius: float) -> float:
 
 
 @kernel
+def _walk_through(
+    path: Floats,
+    boxes: Floats,
+    bases: Ints,
+    levels: int,
+    total: float,
+    mark: int,
+    closed: bool,
+    radius: float,
+    ruler: float,
+    chord: float,
+) -> tuple[int, float]:
+    """Return steps and L(r) of a walk from vertex `mark`: around a ring, or to both ends of an open line."""
+    steps = 0
+    rest = 0.0
+    if mark < len(path) - 1:
+        steps, gap = _walk(path, boxes, bases, levels, total, mark, 1, closed, chord)
+        rest = _arc(gap, radius)
+    if mark > 0 and not closed:
+        back, gap = _walk(path, boxes, bases, levels, total, mark, -1, closed, chord)
+        steps += back
+        rest += _arc(gap, radius)
+    return steps, ruler * steps + rest
+
+
+@kernel
 def _walk_rung(
     path: Floats,
     boxes: Floats,
@@ -332,42 +358,42 @@ def _walk_rung(
     closed: bool,
     radius: float,
     ruler: float,
-    starts: int,
-) -> tuple[float, float, float, int]:
-    """Mean and variance of L(r) over a part's walks, their mean steps, and the fewest steps taken.
+    enough: int,
+) -> tuple[int, float, float, float]:
+    """Walk a part from its first start, and a line from its other end, then from as many as are needed.
 
-    The fewest are those of any walk of a ring, and of the walks from the two ends of an open line.
+    Returns the number of walks, the mean and variance of their L(r), and their mean steps. No walk
+    counts where a line cannot be left behind by one step from each end, a ring from each start.
     """
     chord = _chord(ruler, radius)
-    if not chord > 0:
-        return math.nan, math.nan, 0.0, 0
     levels = bases.size - 1
+    walked = np.empty(len(marks) + 1)
+    if not chord > 0:
+        return 0, 0.0, 0.0, 0.0
+    n, walked[0] = _walk_through(path, boxes, bases, levels, total, marks[0], closed, radius, ruler, chord)
+    steps, count, possible = n, 1, n > 0
+    if not closed:
+        n, walked[1] = _walk_through(
+            path, boxes, bases, levels, total, len(path) - 1, closed, radius, ruler, chord
+        )
+        steps, count, possible = steps + n, 2, possible and n > 0
+    starts = min(len(marks), 3 - count)
+    while starts < len(marks) and starts * n < enough:
+        starts = min(2 * starts, len(marks))
     stride = len(marks) // starts
-    ends = 0 if closed else 1
-    walked = np.empty(starts + ends)
-    steps = 0
-    fewest = -1
-    for s in range(starts + ends):
-        if closed:
-            n, d = _walk(path, boxes, bases, levels, total, marks[s * stride], 1, closed, chord)
-            rest = _arc(d, radius)
-        elif s == starts:
-            n, d = _walk(path, boxes, bases, levels, total, len(path) - 1, -1, closed, chord)
-            rest = _arc(d, radius)
-        else:
-            n, d = _walk(path, boxes, bases, levels, total, marks[s * stride], 1, closed, chord)
-            rest = _arc(d, radius)
-            if s > 0:
-                back, d = _walk(path, boxes, bases, levels, total, marks[s * stride], -1, closed, chord)
-                n += back
-                rest += _arc(d, radius)
-        walked[s] = ruler * n + rest
-        steps += n
-        if closed or s in (0, starts):
-            fewest = n if fewest < 0 else min(fewest, n)
-    mean = walked.sum() / len(walked)
-    variance = ((walked - mean) ** 2).sum() / (len(walked) - 1) if len(walked) > 1 else math.nan
-    return mean, variance, steps / len(walked), fewest
+    s = 1
+    while s < starts and possible:
+        n, walked[count] = _walk_through(
+            path, boxes, bases, levels, total, marks[s * stride], closed, radius, ruler, chord
+        )
+        steps, count, possible = steps + n, count + 1, n > 0 or not closed
+        s += 1
+    if not possible:
+        return 0, 0.0, 0.0, 0.0
+    walked = walked[:count]
+    mean = walked.sum() / count
+    variance = ((walked - mean) ** 2).sum() / (count - 1) if count > 1 else math.nan
+    return count, mean, variance, steps / count
 
 
 @kernel
@@ -379,9 +405,15 @@ def walk_ladders(
     radius: Floats,
     rung_offsets: Ints,
     rulers: Floats,
-    starts: Ints,
+    most_starts: int,
+    enough_steps: int,
+    inner_starts: bool,
 ) -> tuple[Floats, Floats, Floats, Floats]:
     """Walk every feature with every ruler of its own ladder.
+
+    An open line is walked from both ends, a ring around from one start; where one such walk takes
+    fewer than `enough_steps`, further starts are added, evenly spaced along the part, until
+    starts x steps reach that number. A further start of an open line is walked to both ends.
 
     A part is long enough for a ruler where a whole step can be taken from each end of an open line, or
     from every starting point of a ring. The lengths of such parts add up; of the others the length of
@@ -392,15 +424,15 @@ def walk_ladders(
     xy, part_offsets, feature_offsets, closed, radius : as in `geofractal.measure.Lines`
     rung_offsets : (n + 1,) feature ``i`` owns rulers ``rung_offsets[i]:rung_offsets[i + 1]``
     rulers : (q,) metres
-    starts : (q,) starting points a part, evenly spaced along it; within a feature each divides the
-        largest. A ring is walked once from each, an open line from both ends and from every other
-        starting point to both ends.
+    most_starts : starts of a part at most, a power of two
+    enough_steps : steps that one ruler's walks of a part should take together
+    inner_starts : whether open lines have further starts, or rings alone
 
     Returns
     -------
     length : (q,) mean walked length in metres; NaN where no part is long enough
-    spread : (q,) standard deviation of one walk over starts and directions; NaN for a single walk
-    steps : (q,) mean number of whole steps
+    spread : (q,) standard deviation of one walk over starts and directions; NaN where only one was made
+    steps : (q,) mean number of whole steps of a walk
     left_out : (q,) polyline length in metres of the parts that are not long enough
     """
     length = np.zeros(rulers.size)
@@ -412,24 +444,23 @@ def walk_ladders(
         hi = rung_offsets[f + 1]
         if lo == hi:
             continue
-        most = starts[lo:hi].max()
         for p in range(feature_offsets[f], feature_offsets[f + 1]):
             first = part_offsets[p]
             last = part_offsets[p + 1]
             origin, way = _order(xy, first, last, closed[p])
             total = _total(xy, first, last, origin, way, closed[p])
             if total > 0:
-                if closed[p] or most > 1:
-                    path, marks = _lay_path(xy, first, last, origin, way, closed[p], most, total)
+                if closed[p] or (inner_starts and most_starts > 1):
+                    path, marks = _lay_path(xy, first, last, origin, way, closed[p], most_starts, total)
                 else:
                     path, marks = xy[first:last], np.zeros(1, np.int64)
                 bases = _box_levels(len(path))
                 boxes = _boxes(path, bases)
                 for q in range(lo, hi):
-                    mean, variance, taken, fewest = _walk_rung(
-                        path, boxes, bases, marks, total, closed[p], radius[f], rulers[q], starts[q]
+                    walks, mean, variance, taken = _walk_rung(
+                        path, boxes, bases, marks, total, closed[p], radius[f], rulers[q], enough_steps
                     )
-                    if fewest > 0:
+                    if walks > 0:
                         length[q] += mean
                         spread[q] += variance
                         steps[q] += taken

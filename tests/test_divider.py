@@ -1,0 +1,187 @@
+"""The measure `divider-dimension`: its columns, its ladders and lengths, its refusals."""
+
+import math
+
+import numpy as np
+import pytest
+from pydantic import ValidationError
+
+from geofractal.estimators.divider import DividerDimension, DividerOptions, walk_rulers
+from geofractal.measure import PLANES, Lines
+from geofractal.registry import check_measure_class, columns_of
+
+
+def lines_of(*features, closed=False, radius=math.inf, source_vertex=None):
+    """Return features, each an array of vertices or a list of such parts, as a chunk of lines."""
+    features = [feature if isinstance(feature, list) else [feature] for feature in features]
+    parts = [part for feature in features for part in feature]
+    xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
+    n = len(features)
+    return Lines(
+        rows=np.arange(n),
+        xy=xy,
+        part_offsets=np.concatenate(([0], np.cumsum([len(part) for part in parts]))),
+        feature_offsets=np.concatenate(([0], np.cumsum([len(feature) for feature in features]))),
+        closed=np.full(len(parts), closed),
+        source_vertex=np.ones(len(xy), bool) if source_vertex is None else source_vertex,
+        plane=np.zeros(n, np.uint8) if math.isinf(radius) else np.full(n, 4, np.uint8),
+        distortion=np.full(n, 0.002),
+        radius=np.full(n, radius),
+    )
+
+
+def measured(lines, **options):
+    return DividerDimension().measure(lines, DividerOptions(**options))
+
+
+def koch(level, size=1.0):
+    points = np.array([0, size], complex)
+    for _ in range(level):
+        a, third = points[:-1], np.diff(points) / 3
+        tip = a + third + third * np.exp(1j * np.pi / 3)
+        points = np.append(np.column_stack([a, a + third, tip, a + 2 * third]).ravel(), size)
+    return np.column_stack([points.real, points.imag])
+
+
+def wander(seed=0, count=3000):
+    return np.cumsum(np.random.default_rng(seed).normal(size=(count, 2)), axis=0)
+
+
+def test_the_class_keeps_the_contract():
+    check_measure_class(DividerDimension, "divider-dimension")
+
+
+def test_every_column_is_filled_for_every_feature():
+    lines = lines_of(koch(4, 1e4), wander())
+    options = DividerOptions(lengths_at_m=(1000.0, 2500.5))
+    values = DividerDimension().measure(lines, options)
+    names = [column.name for column in columns_of(DividerDimension(), options)]
+    assert list(values) == names
+    assert {len(column) for column in values.values()} == {2}
+
+
+def test_rulers_name_their_columns():
+    columns = DividerDimension().columns(DividerOptions(lengths_at_m=(1000.0, 0.5, 2500.5, 1e6, 1.25e6)))
+    named = {column.name: column.short for column in columns if column.name.startswith("length")}
+    assert named == {
+        "length_at_1000m_ruler_km": "len1000m",
+        "length_at_0_5m_ruler_km": "len0_5m",
+        "length_at_2500_5m_ruler_km": "len2500_5m",
+        "length_at_1000000m_ruler_km": "len_4",
+        "length_at_1250000m_ruler_km": "len_5",
+    }
+
+
+def test_the_koch_curve_has_dimension_log_4_over_log_3_on_rulers_that_divide_it():
+    found = measured(lines_of(koch(8)), ruler_min_m=3.0**-7, ruler_max_m=1 / 3, rungs=7, starts=1)
+    assert found["divider_dim"][0] == pytest.approx(math.log(4) / math.log(3), rel=1e-9)
+    assert found["divider_r2"][0] == pytest.approx(1)
+    assert found["divider_ruler_min_m"][0] == pytest.approx(3.0**-7)
+    assert found["divider_ruler_max_m"][0] == pytest.approx(1 / 3)
+    assert found["divider_rungs"][0] == 7
+
+
+def test_a_straight_line_has_dimension_one():
+    straight = np.linspace(0, 1, 2000)[:, None] * [3000.0, 4000.0]
+    assert measured(lines_of(straight))["divider_dim"][0] == pytest.approx(1, abs=1e-9)
+
+
+@pytest.mark.parametrize("unit", [1e-3, 1.0, 1e4])
+def test_the_dimension_does_not_depend_on_the_unit(unit):
+    expected = measured(lines_of(wander()))["divider_dim"][0]
+    assert measured(lines_of(wander() * unit))["divider_dim"][0] == pytest.approx(expected, rel=1e-9)
+
+
+def test_reversal_changes_not_one_bit_on_a_given_ladder():
+    ladder = {"ruler_min_m": 5.0, "ruler_max_m": 50.0, "rungs": 9, "lengths_at_m": (10.0,)}
+    there, back = measured(lines_of(wander()), **ladder), measured(lines_of(wander()[::-1]), **ladder)
+    assert there["divider_dim"][0] == back["divider_dim"][0]
+    assert there["length_at_10m_ruler_km"][0] == back["length_at_10m_ruler_km"][0]
+
+
+@pytest.mark.parametrize(
+    "options",
+    [{"ruler_min_m": 9.0}, {"ruler_max_m": 20.0}, {"rungs": 7}, {"starts": 1}],
+    ids=lambda options: next(iter(options)),
+)
+def test_every_option_changes_the_dimension(options):
+    lines = lines_of(wander(count=400))
+    assert measured(lines, **options)["divider_dim"][0] != measured(lines)["divider_dim"][0]
+
+
+def test_a_ruler_below_three_median_segments_gives_no_length():
+    regular = np.column_stack([np.arange(500.0) * 10, np.zeros(500)])
+    found = measured(lines_of(regular), lengths_at_m=(29.9, 30.0))
+    assert math.isnan(found["length_at_29_9m_ruler_km"][0])
+    assert found["length_at_30m_ruler_km"][0] == pytest.approx(4.99)
+    assert found["divider_note"][0] == "the source is too coarse for a ruler of 29.9 m"
+
+
+def test_vertices_added_by_the_reader_make_no_detail():
+    regular = np.column_stack([np.arange(500.0) * 10, np.zeros(500)])
+    source = np.arange(500) % 10 == 0
+    source[-1] = True
+    found = measured(lines_of(regular, source_vertex=source), lengths_at_m=(30.0,))
+    assert math.isnan(found["length_at_30m_ruler_km"][0])
+
+
+def test_a_ruler_that_does_not_fit_gives_no_length():
+    found = measured(lines_of(wander(count=50)), lengths_at_m=(1e6,))
+    assert math.isnan(found["length_at_1000000m_ruler_km"][0])
+    assert "too short for a ruler of 1000000 m" in found["divider_note"][0]
+
+
+def test_a_ring_no_start_of_which_leaves_the_circle_has_no_length():
+    angle = np.linspace(0, 2 * np.pi, 1001)
+    circle = np.column_stack([np.cos(angle), np.sin(angle)]) * 1000
+    circle[-1] = circle[0]
+    found = measured(lines_of(circle, closed=True), lengths_at_m=(1000.0, 2100.0))
+    # a chord of one radius spans a sixth of the circle (the polygon of 1000 sides all but that)
+    assert found["length_at_1000m_ruler_km"][0] == pytest.approx(6, rel=1e-3)
+    assert math.isnan(found["length_at_2100m_ruler_km"][0])
+
+
+def test_lines_without_length_or_detail_are_refused_in_words():
+    dot, stick = np.zeros((3, 2)), np.array([[0.0, 0.0], [5.0, 5.0]])
+    found = measured(lines_of(dot, stick), lengths_at_m=(1.0,))
+    assert np.isnan(found["divider_dim"]).all()
+    assert found["divider_rungs"].tolist() == [0, 0]
+    assert found["divider_note"][0] == "the line has no length"
+    assert found["divider_note"][1].startswith("no dimension: too few rulers")
+
+
+def test_parts_are_measured_together():
+    one, other = wander(1), wander(2)
+    found = measured(lines_of([one, other], one, other), lengths_at_m=(10.0,))["length_at_10m_ruler_km"]
+    assert found[0] == pytest.approx(found[1] + found[2])
+
+
+def test_plane_and_distortion_are_written():
+    found = measured(lines_of(wander()))
+    assert found["divider_plane"][0] == PLANES[0]
+    assert found["divider_distortion_percent"][0] == pytest.approx(0.2)
+
+
+def test_open_lines_are_the_mean_of_both_directions_alone():
+    line = np.array([[0.0, 0.0], [10.0, 0.0], [10.0, 3.0]])
+    # forwards: 2 steps of 4, then from (8, 0) to where x = 10 and y = sqrt(16 - 4) > 3: the rest is
+    # sqrt(2^2 + 3^2); backwards: from (10, 3) to (10 - sqrt(7), 0), one more step, and the rest
+    forwards = 2 * 4 + math.sqrt(13)
+    backwards = 4 + 4 + (10 - math.sqrt(7) - 4)
+    assert walk_rulers(lines_of(line), (4.0,)).length[0, 0] == pytest.approx((forwards + backwards) / 2)
+
+
+@pytest.mark.parametrize(
+    ("options", "message"),
+    [
+        ({"lengths_at_m": (5.0, 5.0)}, "stands twice"),
+        ({"ruler_min_m": 10.0, "ruler_max_m": 5.0}, r"ruler-min-m \(10\) must be below ruler-max-m \(5\)"),
+        ({"lengths_at_m": (0.0,)}, "greater than 0"),
+        ({"ruler_min_m": math.inf}, "finite"),
+        ({"rungs": 3}, "greater than or equal to 4"),
+        ({"ruler": 3.0}, "Extra inputs"),
+    ],
+)
+def test_options_that_make_no_sense_are_refused(options, message):
+    with pytest.raises(ValidationError, match=message):
+        DividerOptions(**options)
