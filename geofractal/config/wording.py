@@ -102,6 +102,9 @@ def _unknown(tree: YamlTree, path: KeyPath, keys: Sequence[str]) -> Problem:
 
 def _refused(tree: YamlTree, path: KeyPath, group: Sequence[ErrorDetails], *, on_key: bool) -> Problem:
     value = path[-1] if on_key else tree.at(path)
+    own = [str(details["ctx"]["error"]) for details in group if details["type"] == "value_error"]
+    if own:  # a validator's own words say what is wrong, not what is allowed
+        return tree.problem(path, "; ".join(own))
     allowed = " or ".join(dict.fromkeys(_words(details, value) for details in group))
     contexts = [details.get("ctx", {}) for details in group]
     choices = re.findall(r"'([^']*)'", " ".join(context.get("expected", "") for context in contexts))
@@ -114,7 +117,7 @@ def _refused(tree: YamlTree, path: KeyPath, group: Sequence[ErrorDetails], *, on
 def _words(details: ErrorDetails, value: Any) -> str:
     words = _ALLOWED.get(details["type"])
     if words is None:
-        return details["msg"].removeprefix("Value error, ").removeprefix("Input should be ")
+        return details["msg"].removeprefix("Input should be ")
     if details["type"] == "string_type" and isinstance(value, bool | int | float):
         words += "; write it in quotes"
     return words.format_map(details.get("ctx", {}))

@@ -1,0 +1,214 @@
+"""For authors of measures: small specimens, and one check that a measure keeps the contract on them."""
+
+from __future__ import annotations
+
+import copy
+import pickle
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from geofractal.measure import PLANES, Column, Lines, Measure, Options, Values
+from geofractal.registry import check_measure_class, columns_of
+
+_DTYPES = {"number": np.float64, "count": np.int64, "text": object, "flag": np.int8}
+
+
+def lines_of(features: Sequence[Sequence[ArrayLike]]) -> Lines:
+    """Return features on a plane in metres.
+
+    Parameters
+    ----------
+    features : for each feature its parts, for each part (k, 2) vertices, k at least 2; a part whose
+        first and last vertex are one is a ring
+    """
+    parts = [np.asarray(part, np.float64) for feature in features for part in feature]
+    n = len(features)
+    return Lines(
+        rows=np.arange(n, dtype=np.int64),
+        xy=np.concatenate([np.empty((0, 2)), *parts]),
+        part_offsets=_offsets([len(part) for part in parts]),
+        feature_offsets=_offsets([len(feature) for feature in features]),
+        closed=np.array([len(part) > 2 and bool((part[0] == part[-1]).all()) for part in parts], np.bool_),
+        source_vertex=np.ones(sum(map(len, parts)), np.bool_),
+        plane=np.zeros(n, np.uint8),
+        distortion=np.full(n, 1e-6),
+        radius=np.full(n, np.inf),
+    )
+
+
+def specimens() -> dict[str, Lines]:
+    """Return chunks that a measure meets: ordinary features, odd ones, none at all, and two on the globe."""
+    return {
+        "ordinary": lines_of(_ordinary()),
+        "degenerate": lines_of([*_degenerate(), *_ordinary()]),
+        "empty": lines_of([]),
+        "three dimensions": _on_the_globe(),
+    }
+
+
+def take(lines: Lines, order: Sequence[int]) -> Lines:
+    """Return the features of those numbers, in that order."""
+    parts = [part for i in order for part in range(lines.feature_offsets[i], lines.feature_offsets[i + 1])]
+    spans = [slice(lines.part_offsets[part], lines.part_offsets[part + 1]) for part in parts]
+    vertices = np.concatenate([np.empty(0, np.int64), *(np.arange(s.start, s.stop) for s in spans)])
+    chosen = np.asarray(order, np.int64)
+    return Lines(
+        rows=lines.rows[chosen],
+        xy=np.ascontiguousarray(lines.xy[vertices]),
+        part_offsets=_offsets([span.stop - span.start for span in spans]),
+        feature_offsets=_offsets(np.diff(lines.feature_offsets)[chosen]),
+        closed=lines.closed[np.asarray(parts, np.int64)],
+        source_vertex=lines.source_vertex[vertices],
+        plane=lines.plane[chosen],
+        distortion=lines.distortion[chosen],
+        radius=lines.radius[chosen],
+    )
+
+
+def check_measure(measure_class: type[Measure[Any]], options: Options | None = None) -> None:
+    """Check that a measure keeps the contract on the specimens.
+
+    Checked are: its class and columns, that it pickles, that it is pure and leaves its input alone, that
+    a feature's values depend neither on its neighbours nor on their order, that each value is an array
+    of the type its column says, and that what deserves no figure is null and has a note.
+
+    Parameters
+    ----------
+    measure_class : the class that the entry point names
+    options : its options; the defaults where left out
+
+    Raises
+    ------
+    MeasureError
+        where the class or its columns break the contract
+    AssertionError
+        where a result does; the message names the specimen and the column
+    """
+    check_measure_class(measure_class)
+    measure = measure_class()
+    options = measure_class.options() if options is None else options
+    columns = columns_of(measure, options)
+    twin, twin_options = pickle.loads(pickle.dumps((measure, options)))  # noqa: S301 - our own bytes
+    for name, lines in specimens().items():
+        before = copy.deepcopy(lines)
+        values = measure.measure(lines, options)
+        _check_arrays(name, values, columns, len(lines))
+        _check_nulls(name, values, columns, measure.note_column().name)
+        _check_same(f"{name}, its input", _arrays_of(before), _arrays_of(lines))
+        _check_same(f"{name}, measured again", values, measure.measure(lines, options))
+        _check_same(f"{name}, pickled", values, twin.measure(lines, twin_options))
+        _check_independence(name, measure, options, lines, values)
+    _check_no_length(measure, options, columns[0])
+
+
+def _check_arrays(name: str, values: Values, columns: Sequence[Column], n: int) -> None:
+    expected = [column.name for column in columns]
+    if sorted(values) != sorted(expected):
+        raise AssertionError(f"{name}: values for {sorted(values)}, but the columns are {sorted(expected)}")
+    for column in columns:
+        array = values[column.name]
+        if array.shape != (n,):
+            raise AssertionError(f"{name}: {column.name} has shape {array.shape}, not ({n},)")
+        if array.dtype != _DTYPES[column.kind]:
+            wanted = np.dtype(_DTYPES[column.kind])
+            raise AssertionError(
+                f"{name}: {column.name} is a {column.kind} of type {array.dtype}, not {wanted}"
+            )
+        if column.kind == "number" and np.isinf(array.astype(np.float64)).any():
+            raise AssertionError(f"{name}: {column.name} is infinite somewhere; null is NaN")
+        if column.kind == "text" and not all(text is None or isinstance(text, str) for text in array):
+            raise AssertionError(f"{name}: {column.name} holds something other than text and None")
+
+
+def _check_nulls(name: str, values: Values, columns: Sequence[Column], note: str) -> None:
+    missing = _is_null(values[columns[0].name], columns[0])
+    for feature in np.flatnonzero(missing):
+        if not values[note][feature]:
+            said = f"{columns[0].name} is null and {note} does not say why"
+            raise AssertionError(f"{name}: feature {feature}: {said}")
+
+
+def _check_independence(
+    name: str, measure: Measure[Any], options: Options, lines: Lines, values: Values
+) -> None:
+    backwards = list(range(len(lines)))[::-1]
+    turned = measure.measure(take(lines, backwards), options)
+    _check_same(f"{name}, in reverse order", {key: array[backwards] for key, array in values.items()}, turned)
+    for feature in range(len(lines)):
+        alone = measure.measure(take(lines, [feature]), options)
+        _check_same(f"{name}, feature {feature} alone", {k: v[[feature]] for k, v in values.items()}, alone)
+
+
+def _check_no_length(measure: Measure[Any], options: Options, first: Column) -> None:
+    point = lines_of([[[(5.0, 5.0), (5.0, 5.0)]]])
+    if not _is_null(measure.measure(point, options)[first.name], first).all():
+        raise AssertionError(f"a line without length: {first.name} is not null")
+
+
+def _check_same(where: str, expected: dict[str, Any], found: dict[str, Any]) -> None:
+    for key, array in expected.items():
+        if not _same(array, found[key]):
+            raise AssertionError(f"{where}: {key} differs: {array!r} and {found[key]!r}")
+
+
+def _same(one: NDArray[Any], other: NDArray[Any]) -> bool:
+    equal_nan = one.dtype.kind == "f"
+    return one.dtype == other.dtype and np.array_equal(one, other, equal_nan=equal_nan)
+
+
+def _is_null(array: NDArray[Any], column: Column) -> NDArray[np.bool_]:
+    if column.kind == "number":
+        return np.isnan(array)
+    if column.kind == "text":
+        return np.array([text is None for text in array], np.bool_)
+    return np.less(array, 0)
+
+
+def _arrays_of(lines: Lines) -> dict[str, Any]:
+    return {name: getattr(lines, name) for name in Lines.__dataclass_fields__}
+
+
+def _offsets(counts: ArrayLike) -> NDArray[np.int64]:
+    return np.concatenate([[0], np.cumsum(np.asarray(counts, np.int64))]).astype(np.int64)
+
+
+def _ordinary() -> list[list[ArrayLike]]:
+    """Return a straight line, a winding one, a ring, and one of two parts."""
+    along = np.linspace(0.0, 10_000.0, 401)
+    winding = np.column_stack([along, 400.0 * np.sin(along / 300.0) + 60.0 * np.sin(along / 40.0)])
+    turn = np.linspace(0.0, 2.0 * np.pi, 301)
+    ring = np.column_stack([np.cos(turn), np.sin(turn)]) * (2_000.0 + 150.0 * np.sin(9.0 * turn))[:, None]
+    ring[-1] = ring[0]
+    return [[[(0.0, 0.0), (1000.0, 0.0), (3000.0, 0.0)]], [winding], [ring], [winding[:200], winding[210:]]]
+
+
+def _degenerate() -> list[list[ArrayLike]]:
+    """Return lines of no length, a repeated vertex, the shortest line, a spike, and a ring of no area."""
+    return [
+        [[(0.0, 0.0), (0.0, 0.0)]],
+        [[(7.0, 7.0)] * 5],
+        [[(0.0, 0.0), (0.0, 0.0), (1.0, 0.0), (1.0, 0.0)]],
+        [[(0.0, 0.0), (1e-9, 0.0)]],
+        [[(0.0, 0.0), (100.0, 0.0), (0.0, 0.0)]],
+        [[(0.0, 0.0), (0.0, 0.0)], [(0.0, 0.0), (500.0, 300.0)]],
+    ]
+
+
+def _on_the_globe() -> Lines:
+    """Return an arc of a great circle and a wavy line beside it, on a sphere, as geocentric metres."""
+    earth = 6_371_000.0
+    longitude = np.radians(np.linspace(0.0, 40.0, 500))
+    plane = lines_of([[np.zeros((500, 2))], [np.zeros((500, 2))]])
+    xyz = []
+    for latitude in (np.zeros(500), np.radians(2.0 * np.sin(40.0 * longitude))):
+        x, y = np.cos(latitude) * np.cos(longitude), np.cos(latitude) * np.sin(longitude)
+        xyz.append(earth * np.column_stack([x, y, np.sin(latitude)]))
+    globe = {
+        "xy": np.concatenate(xyz),
+        "plane": np.full(2, PLANES.index("three-dimensions"), np.uint8),
+        "radius": np.full(2, earth),
+    }
+    return Lines(**{**_arrays_of(plane), **globe, "closed": np.zeros(2, np.bool_), "distortion": np.zeros(2)})
