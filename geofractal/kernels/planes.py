@@ -113,16 +113,17 @@ def cut(
 
 @kernel
 def cut_on_geodesics(
-    lonlat: Floats, xyz: Floats, part_offsets: Ints, pieces: Ints, e2: float
+    lonlat: Floats, xyz: Floats, part_offsets: Ints, pieces: Ints, a: float, e2: float
 ) -> tuple[Floats, Ints, Bools]:
-    """Return the same as `cut` with the new vertices on the great ellipses through the edges' ends.
+    """Return the same as `cut` with the new vertices above their edge's chord, along the surface's normal.
 
-    A great ellipse is the ellipsoid's section through its centre; up to 1,000 km it leaves the geodesic
-    by less than 1e-6 of the edge's length. Edges go the short way; between antipodes none is shorter.
+    They leave the geodesic by less than 1e-6 of the edge's length up to 1,000 km. Latitude by Bowring's
+    formula (1976). Edges go the short way; between antipodes none is shorter.
     """
     total = pieces.sum()
     out, offsets = np.empty((total, 2)), np.zeros(len(part_offsets), np.int64)
     marks = np.zeros(total, np.bool_)
+    b = a * math.sqrt(1.0 - e2)
     at = 0
     for part in range(len(part_offsets) - 1):
         for i in range(part_offsets[part], part_offsets[part + 1]):
@@ -133,8 +134,11 @@ def cut_on_geodesics(
                 x = (1.0 - share) * xyz[i, 0] + share * xyz[i + 1, 0]
                 y = (1.0 - share) * xyz[i, 1] + share * xyz[i + 1, 1]
                 z = (1.0 - share) * xyz[i, 2] + share * xyz[i + 1, 2]
+                axial = math.hypot(x, y)
+                reduced = math.atan2(a * z, b * axial)
+                up = z + e2 / (1.0 - e2) * b * math.sin(reduced) ** 3
                 out[at, 0] = math.atan2(y, x)
-                out[at, 1] = math.atan2(z, (1.0 - e2) * math.hypot(x, y))
+                out[at, 1] = math.atan2(up, axial - e2 * a * math.cos(reduced) ** 3)
                 at += 1
         offsets[part + 1] = at
     return out, offsets, marks
@@ -150,6 +154,39 @@ def geocentric(lonlat: Floats, a: float, e2: float) -> Floats:
         out[i, 0] = prime * cos_lat * math.cos(lonlat[i, 0])
         out[i, 1] = prime * cos_lat * math.sin(lonlat[i, 0])
         out[i, 2] = prime * (1.0 - e2) * sin_lat
+    return out
+
+
+@kernel
+def centres(xyz: Floats, part_offsets: Ints, feature_offsets: Ints, closed: Bools, e2: float) -> Floats:
+    """Return (n, 2) longitude and latitude of each feature's middle, that of its box as seen from above.
+
+    Seen from above the mean of its vertices, a ring's last left out: no seam, no pole, and the same
+    middle from whichever vertex a ring starts.
+    """
+    out = np.empty((len(feature_offsets) - 1, 2))
+    for feature in range(len(feature_offsets) - 1):
+        x = y = z = 0.0
+        for part in range(feature_offsets[feature], feature_offsets[feature + 1]):
+            for i in range(part_offsets[part], part_offsets[part + 1] - closed[part]):
+                x, y, z = x + xyz[i, 0], y + xyz[i, 1], z + xyz[i, 2]
+        lon, lat = math.atan2(y, x), math.atan2(z, math.hypot(x, y))
+        sin_lon, cos_lon, sin_lat, cos_lat = math.sin(lon), math.cos(lon), math.sin(lat), math.cos(lat)
+        west = south = math.inf
+        east = north = -math.inf
+        square = 0.0
+        first, last = part_offsets[feature_offsets[feature]], part_offsets[feature_offsets[feature + 1]]
+        for i in range(first, last):
+            right = cos_lon * xyz[i, 1] - sin_lon * xyz[i, 0]
+            up = cos_lat * xyz[i, 2] - sin_lat * (cos_lon * xyz[i, 0] + sin_lon * xyz[i, 1])
+            west, east, south, north = min(west, right), max(east, right), min(south, up), max(north, up)
+            square = max(square, xyz[i, 0] ** 2 + xyz[i, 1] ** 2 + xyz[i, 2] ** 2)
+        right, up = 0.5 * (west + east), 0.5 * (south + north)
+        outward = math.sqrt(max(square - right * right - up * up, 0.0))
+        across = cos_lat * outward - sin_lat * up
+        x, y = cos_lon * across - sin_lon * right, sin_lon * across + cos_lon * right
+        z = sin_lat * outward + cos_lat * up
+        out[feature, 0], out[feature, 1] = math.atan2(y, x), math.atan2(z, (1.0 - e2) * math.hypot(x, y))
     return out
 
 

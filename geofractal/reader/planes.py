@@ -91,10 +91,12 @@ class Projector:
         chunks : planar features in one, three-dimensional ones in another; none is empty, order is kept
         problems : index of each feature left out, and why
         """
+        if not len(rows):
+            return (), {}
         source = source_crs(self.crs)
         given = _Ragged(rows, xy, part_offsets, feature_offsets, closed, np.ones(len(xy), np.bool_))
         if source.kind == "as-given":
-            return _as_given(given, source), {}
+            return (_as_given(given, source),), {}
         lonlat = source.lonlat(xy)
         outside = _outside(source, given, lonlat)
         problems = dict.fromkeys(np.flatnonzero(outside).tolist(), OUTSIDE)
@@ -143,9 +145,9 @@ def _offsets(counts: Ints) -> Ints:
     return np.concatenate([np.zeros(1, np.int64), np.cumsum(counts)])
 
 
-def _as_given(given: _Ragged, source: SourceCrs) -> tuple[Lines, ...]:
+def _as_given(given: _Ragged, source: SourceCrs) -> Lines:
     n = len(given.rows)
-    lines = Lines(
+    return Lines(
         given.rows,
         given.xy * source.unit,
         given.part_offsets,
@@ -156,7 +158,6 @@ def _as_given(given: _Ragged, source: SourceCrs) -> tuple[Lines, ...]:
         np.zeros(n),
         np.full(n, np.inf),
     )
-    return (lines,) if n else ()
 
 
 def _outside(source: SourceCrs, given: _Ragged, lonlat: Floats) -> Bools:
@@ -166,7 +167,7 @@ def _outside(source: SourceCrs, given: _Ragged, lonlat: Floats) -> Bools:
     one of them is lost, every feature's.
     """
     runs = given.runs
-    outside = np.maximum.reduceat(~source.in_world(lonlat), runs[:-1])
+    outside: Bools = np.logical_or.reduceat(~source.in_world(lonlat), runs[:-1])
     if source.kind == "projected" and not _comes_back(source, given.xy, lonlat, runs[[0, -1]]).all():
         outside |= ~_comes_back(source, given.xy, lonlat, runs)
     return outside
@@ -178,7 +179,7 @@ def _comes_back(source: SourceCrs, xy: Floats, lonlat: Floats, runs: Ints) -> Bo
     width, height = xy[outer[:, 1], 0] - xy[outer[:, 0], 0], xy[outer[:, 3], 1] - xy[outer[:, 2], 1]
     size = np.repeat(np.hypot(width, height), 4)
     at = outer.ravel()
-    return source.comes_back(xy[at], lonlat[at], size).reshape(-1, 4).all(axis=1)
+    return np.asarray(source.comes_back(xy[at], lonlat[at], size).reshape(-1, 4).all(axis=1))
 
 
 def _densify(edges: str, source: SourceCrs, given: _Ragged, lonlat: Floats) -> _Ragged:
@@ -188,7 +189,9 @@ def _densify(edges: str, source: SourceCrs, given: _Ragged, lonlat: Floats) -> _
         xyz = kernels.geocentric(lonlat, source.a, source.e2)
         pieces = kernels.pieces_by_length(xyz, offsets, LONGEST_PIECE_M)
         if pieces.max() > 1:
-            lonlat, offsets, marks = kernels.cut_on_geodesics(lonlat, xyz, offsets, pieces, source.e2)
+            lonlat, offsets, marks = kernels.cut_on_geodesics(
+                lonlat, xyz, offsets, pieces, source.a, source.e2
+            )
     elif source.kind == "geographic":
         pieces = kernels.pieces_on_graticule(lonlat, offsets, LONGEST_PIECE_M / source.a)
         if pieces.max() > 1:
@@ -226,16 +229,16 @@ def _lay(projector: Projector, source: SourceCrs, given: _Ragged) -> tuple[tuple
     """Choose the plane of each feature, given in radians, and lay it there."""
     runs = given.runs
     xyz = kernels.geocentric(given.xy, source.a, source.e2)
+    centres = kernels.centres(xyz, given.part_offsets, given.feature_offsets, given.closed, source.e2)
     if projector.plane == "layer":
         laid = _lay_on_layer(projector, source, given.xy, xyz, runs)
     else:
-        centres = _centres(kernels.boxes(xyz, runs), source.e2)
         xy, distortion = kernels.azimuthal(xyz, runs, centres, source.a, source.e2)
         laid = _Laid.on(xy, distortion, FEATURE_AZIMUTHAL)
     refused: dict[int, str] = {}
     for i in np.flatnonzero(laid.distortion > projector.budget).tolist():
         run = slice(runs[i], runs[i + 1])
-        text = _over_budget(projector, source, given.xy[run], xyz[run], laid, i, run)
+        text = _over_budget(projector, source, laid, i, run, given.xy[run], xyz[run], centres[i])
         if text:
             refused[i] = text
     keep = np.ones(len(runs) - 1, np.bool_)
@@ -261,7 +264,14 @@ class _Laid:
 
 
 def _over_budget(
-    projector: Projector, source: SourceCrs, lonlat: Floats, xyz: Floats, laid: _Laid, i: int, run: slice
+    projector: Projector,
+    source: SourceCrs,
+    laid: _Laid,
+    i: int,
+    run: slice,
+    lonlat: Floats,
+    xyz: Floats,
+    centre: Floats,
 ) -> str:
     """Move one feature to a plane, or space, that keeps the budget; return why there is none, else empty."""
     least = laid.distortion[i]
@@ -275,7 +285,7 @@ def _over_budget(
     if not projector.three_dimensions:
         return _refusal(least, projector.budget, "allow three-dimensions or raise budget-percent")
     laid.plane[i] = THREE_DIMENSIONS
-    laid.radius[i], laid.distortion[i] = _ruler_radius(source, xyz)
+    laid.radius[i], laid.distortion[i] = _ruler_radius(source, xyz, centre)
     if laid.distortion[i] > projector.budget:
         return _refusal(laid.distortion[i], projector.budget, "raise budget-percent")
     return ""
@@ -305,35 +315,24 @@ def _chunk(given: _Ragged, points: Floats, laid: _Laid, chosen: Bools) -> Lines:
     )
 
 
-def _centres(boxes: Floats, e2: float) -> Floats:
-    """Return (n, 2) longitude and latitude under the middle of geocentric boxes: no seam, no pole."""
-    x, y, z = (0.5 * (boxes[:, k] + boxes[:, k + 3]) for k in range(3))
-    return np.column_stack([np.arctan2(y, x), np.arctan2(z, (1.0 - e2) * np.hypot(x, y))])
-
-
-def _ruler_radius(source: SourceCrs, xyz: Floats) -> tuple[float, float]:
+def _ruler_radius(source: SourceCrs, xyz: Floats, centre: Floats) -> tuple[float, float]:
     """Return the radius that turns a ruler into its chord, and the worst relative error of doing so.
 
     Every curvature radius met lies between the meridian's at the lowest latitude that the feature's
-    surroundings reach and the prime vertical's at the highest; rulers go up to the feature's extent.
+    surroundings reach and the prime vertical's at the highest. Rulers go up to the feature's extent, at
+    most a quarter of the globe: beyond it a chord hardly grows with its arc.
     """
-    low, high = xyz.min(axis=0), xyz.max(axis=0)
-    centre = _centres(np.concatenate([low, high])[None], source.e2)
-    middle = kernels.geocentric(centre, source.a, source.e2)[0]
-    reach = 2.0 * np.arcsin(min(1.0, np.sqrt(((xyz - middle) ** 2).sum(axis=1).max()) / (2.0 * source.b)))
-    latitude = abs(centre[0, 1])
-    lowest, highest = np.sin(max(0.0, latitude - reach)), np.sin(min(0.5 * np.pi, latitude + reach))
-    radii = np.array(
-        [
-            source.a * (1.0 - source.e2) / (1.0 - source.e2 * lowest**2) ** 1.5,
-            source.a / np.sqrt(1.0 - source.e2 * highest**2),
-        ]
-    )
+    middle = kernels.geocentric(centre[None], source.a, source.e2)
+    farthest = np.sqrt(((xyz - middle) ** 2).sum(axis=1).max())
+    reach = 2.0 * np.arcsin(min(1.0, farthest / (2.0 * source.b)))
+    lowest = np.sin(max(0.0, abs(centre[1]) - reach))
+    highest = np.sin(min(0.5 * np.pi, abs(centre[1]) + reach))
+    least = source.a * (1.0 - source.e2) / (1.0 - source.e2 * lowest**2) ** 1.5
+    radii = np.array([least, source.a / np.sqrt(1.0 - source.e2 * highest**2)])
     radius = float(radii.mean())
-    chord = min(float(np.linalg.norm(high - low)), 2.0 * radius * np.sin(min(reach, 0.5 * np.pi)))
-    ruler = 2.0 * radius * np.arcsin(min(1.0, chord / (2.0 * radius)))
-    walked = 2.0 * radii * np.arcsin(np.minimum(1.0, chord / (2.0 * radii)))
-    return radius, float(np.abs(walked / max(ruler, 1.0) - 1.0).max()) if ruler > 0.0 else 0.0
+    angle = min(reach, 0.25 * np.pi)
+    walked = radii * np.arcsin(np.minimum(1.0, radius * np.sin(angle) / radii))
+    return radius, float(np.abs(walked - radius * angle).max() / (radius * angle)) if angle > 0.0 else 0.0
 
 
 @cache
@@ -349,7 +348,7 @@ def layer_plane(crs: str, bounds: Bounds) -> LayerPlane:
     lonlat = sample_bounds(source, bounds)
     xyz = kernels.geocentric(lonlat, source.a, source.e2)
     runs = np.array([0, len(lonlat)])
-    centre = _centres(kernels.boxes(xyz, runs), source.e2)
+    centre = kernels.centres(xyz, runs, np.array([0, 1]), np.array([False]), source.e2)
     _, distortion = kernels.azimuthal(xyz, runs, centre, source.a, source.e2)
     return LayerPlane((centre[0, 0], centre[0, 1]), float(distortion[0]), fit_conic(source, lonlat))
 
