@@ -125,7 +125,8 @@ class PlainProgress(Progress):
         now = time.monotonic()
         waited, gained = now - self._last_line[0], stage.done - self._last_line[1]
         grown = stage.total is not None and gained >= LINE_EVERY_SHARE * stage.total
-        if waited >= LINE_EVERY_S or (grown and waited >= LINES_APART_S):
+        ended = stage.done == stage.total  # told by the closing line
+        if not ended and (waited >= LINE_EVERY_S or (grown and waited >= LINES_APART_S)):
             self._last_line = (now, stage.done)
             self._write(running_line(stage))
 

@@ -161,10 +161,12 @@ def _same(one: NDArray[Any], other: NDArray[Any]) -> bool:
 
 def _is_null(array: NDArray[Any], column: Column) -> NDArray[np.bool_]:
     if column.kind == "number":
-        return np.isnan(array)
-    if column.kind == "text":
-        return np.array([text is None for text in array], np.bool_)
-    return np.less(array, 0)
+        nulls = np.isnan(array)
+    elif column.kind == "text":
+        nulls = np.array([text is None for text in array], np.bool_)
+    else:
+        nulls = array < 0
+    return np.asarray(nulls, np.bool_)
 
 
 def _arrays_of(lines: Lines) -> dict[str, Any]:

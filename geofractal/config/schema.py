@@ -30,7 +30,7 @@ def json_schema() -> dict[str, Any]:
     batch["required"].append("measures")
     head = {"$schema": DRAFT, "title": "geofractal batch file", "description": Batch.__doc__}
     tidied: dict[str, Any] = _tidied({**batch, "definitions": definitions})
-    return {**tidied, **head}
+    return {**head, **tidied, **head}  # the head first, and in its own words
 
 
 def _entry(measure: Measure[Any], definitions: dict[str, Any]) -> dict[str, Any]:

@@ -1,0 +1,80 @@
+"""What a measure is, from its own metadata: for the command line and the tables of the guide."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import asdict
+from typing import Any
+
+from geofractal.measure import Column, Measure
+
+
+def as_dict(measure: Measure[Any]) -> dict[str, Any]:
+    """Return a measure's word, title, formula, sources, options and columns as plain data.
+
+    The columns are those under default options, None where an option has no default.
+    """
+    columns = _default_columns(measure)
+    return {
+        "measure": measure.name,
+        "title": measure.title,
+        "formula": measure.formula,
+        "sources": list(measure.sources),
+        "needs": measure.needs,
+        "version": measure.version,
+        "options": _options(measure),
+        "columns": None if columns is None else [asdict(column) for column in columns],
+    }
+
+
+def as_lines(measure: Measure[Any]) -> list[str]:
+    """Return the same as text."""
+    told = as_dict(measure)
+    text = [f"{told['measure']}: {told['title']}", f"  formula: {told['formula']}"]
+    text += [f"  source: {source}" for source in told["sources"]]
+    text += [f"  version: {told['version']}; measures {told['needs']}", "  options:"]
+    for option in told["options"]:
+        default = "required" if option["required"] else f"default {json.dumps(option['default'])}"
+        text.append(f"    {option['key']} ({option['type']}; {default}): {option['meaning']}")
+    if not told["options"]:
+        text.append("    none")
+    text.append("  columns, under default options:")
+    for column in told["columns"] or ():
+        unit = f", {column['unit']}" if column["unit"] else ""
+        text.append(f"    {column['name']} ({column['short']}; {column['kind']}{unit}): {column['meaning']}")
+    return [*text, ""]
+
+
+def _options(measure: Measure[Any]) -> list[dict[str, Any]]:
+    schema = measure.options.model_json_schema(by_alias=True)
+    return [
+        {
+            "key": key,
+            "type": _type_text(part),
+            "required": key in schema.get("required", ()),
+            "default": part.get("default"),
+            "meaning": part["description"],
+        }
+        for key, part in schema["properties"].items()
+    ]
+
+
+def _type_text(schema: dict[str, Any]) -> str:
+    """Return a schema's type in a few words."""
+    if "anyOf" in schema:
+        return " or ".join(dict.fromkeys(_type_text(member) for member in schema["anyOf"]))
+    if "enum" in schema:
+        return " or ".join(map(str, schema["enum"]))
+    if "const" in schema:
+        return str(schema["const"])
+    if schema.get("type") == "array":
+        return f"list of {_type_text(schema['items'])}"
+    names = {"integer": "whole number", "string": "text", "boolean": "true or false", "object": "mapping"}
+    kind = schema.get("type", "mapping")
+    return names.get(kind, str(kind))
+
+
+def _default_columns(measure: Measure[Any]) -> tuple[Column, ...] | None:
+    if any(field.is_required() for field in measure.options.model_fields.values()):
+        return None
+    return measure.columns(measure.options())
