@@ -31,30 +31,29 @@ def _batch(draw_rows):
 
 @given(st.permutations(range(30)), st.integers(1, 30))
 def test_parts_in_any_order_come_back_in_row_order(tmp_path_factory, order, size):
-    spool = RowSpool(tmp_path_factory.mktemp("spool") / "rows", COLUMNS, 30)
-    for start in range(0, 30, size):
-        rows = np.sort(np.array(order[start : start + size], dtype=np.int64))
-        spool.write(rows, _batch(rows.tolist()), fids=rows + 100)
-    assert spool.rows_written == 30
-    assert spool.read(0, 30).equals(_batch(list(range(30))))
-    assert spool.read(7, 11).equals(_batch(list(range(7, 11))))
-    assert spool.fids(3, 6).tolist() == [103, 104, 105]
-    spool.close()
+    path = tmp_path_factory.mktemp("spool") / "rows"
+    with RowSpool(path, COLUMNS, 30) as spool:
+        for start in range(0, 30, size):
+            rows = np.sort(np.array(order[start : start + size], dtype=np.int64))
+            spool.write(rows, _batch(rows.tolist()), fids=rows + 100)
+        assert spool.rows_written == 30
+        assert spool.read(0, 30).equals(_batch(list(range(30))))
+        assert spool.read(7, 11).equals(_batch(list(range(7, 11))))
+        assert spool.fids(3, 6).tolist() == [103, 104, 105]
+    assert not path.exists()
 
 
 def test_rows_without_feature_ids_say_so(tmp_path):
-    spool = RowSpool(tmp_path / "rows", COLUMNS, 2)
-    spool.write(np.arange(2), _batch([0, 1]))
-    assert spool.fids(0, 2) is None
-    spool.close()
+    with RowSpool(tmp_path / "rows", COLUMNS, 2) as spool:
+        spool.write(np.arange(2), _batch([0, 1]))
+        assert spool.fids(0, 2) is None
 
 
 @pytest.mark.parametrize("kind", ["number", "count", "text", "flag"])
 def test_a_column_of_nulls_stays_a_column_of_nulls(tmp_path, kind):
     types = {"number": pa.float64(), "count": pa.int64(), "text": pa.string(), "flag": pa.bool_()}
     column = Column("empty", "empty", kind, "", "nothing")
-    spool = RowSpool(tmp_path / "rows", (column,), 3)
     nulls = pa.RecordBatch.from_arrays([pa.nulls(3, types[kind])], names=["empty"])
-    spool.write(np.arange(3), nulls)
-    assert spool.read(0, 3).equals(nulls)
-    spool.close()
+    with RowSpool(tmp_path / "rows", (column,), 3) as spool:
+        spool.write(np.arange(3), nulls)
+        assert spool.read(0, 3).equals(nulls)

@@ -6,14 +6,30 @@ import sys
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from datetime import UTC, datetime
+from typing import TYPE_CHECKING, Any, Self
 
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from geofractal.batch.parts import note_name
+from geofractal.config.models import Batch, MeasureRequest
+from geofractal.errors import GeofractalError
 from geofractal.measure import Column
+from geofractal.registry import load_measure
+from geofractal.versions import show_versions
+
+if TYPE_CHECKING:
+    from geofractal.batch.run import Measured
 
 REASONS_KEPT = 50
+
+CAUTIONS = (
+    "The figures describe mapped geometry at stated scales. They are not for navigation, flood or erosion "
+    "hazard lines, legal boundaries or title, or engineering design; such uses follow local codes, the "
+    "competent authority and licensed practice. Habitat and river decisions need field evidence and a "
+    "qualified ecologist or geomorphologist."
+)
 
 
 def peak_memory_mb() -> float | None:
@@ -33,7 +49,7 @@ class MeasureTally:
     A row counts as refused where the measure's first column is null; the reason is its note.
     """
 
-    measure: str
+    request: MeasureRequest
     columns: Sequence[Column]
     note: str
     rows: int = 0
@@ -41,6 +57,11 @@ class MeasureTally:
     reasons: Counter[str] = field(default_factory=Counter)
     ranges: dict[str, tuple[float, float]] = field(default_factory=dict)
     words: dict[str, Counter[str]] = field(default_factory=dict)
+
+    @classmethod
+    def of(cls, request: MeasureRequest) -> Self:
+        """Return an empty tally of one measure asked of one layer."""
+        return cls(request, request.columns(), note_name(request))
 
     def add(self, batch: pa.RecordBatch) -> None:
         """Add the rows of one part."""
@@ -64,7 +85,9 @@ class MeasureTally:
         if len(kept) > REASONS_KEPT:
             reasons["other reasons"] = sum(count for _, count in kept[REASONS_KEPT:])
         return {
-            "measure": self.measure,
+            "measure": self.request.measure,
+            "version": load_measure(self.request.measure).version,
+            "options": self.request.options.model_dump(mode="json", by_alias=True),
             "rows": self.rows,
             "answered": self.rows - self.refused,
             "refused": self.refused,
@@ -77,3 +100,58 @@ class MeasureTally:
 def _counted(values: pa.Array) -> dict[str, int]:
     counts = pc.value_counts(values.fill_null("no reason given"))
     return {entry["values"]: entry["counts"] for entry in counts.to_pylist()}
+
+
+def run_record(
+    batch: Batch, measured: Sequence[Measured], failed: dict[str, GeofractalError], started: datetime
+) -> dict[str, Any]:
+    """Return the record of a run that has ended."""
+    refused = sum(tally.refused for found in measured for tally in found.tallies)
+    return {
+        "batch": batch.name,
+        "batch_file": str(batch.file) if batch.file else None,
+        "started": started.isoformat(timespec="seconds"),
+        "seconds": round((datetime.now(UTC) - started).total_seconds(), 3),
+        "peak_memory_mb": peak_memory_mb(),
+        "exit_code": 3 if failed else int(refused > 0 and batch.run.refusals == "fail"),
+        "refused": refused,
+        "inputs": [
+            {"path": path, "size_bytes": found.before.size, "sha256": found.before.sha256}
+            for path, found in sorted({str(found.plan.info.path): found for found in measured}.items())
+        ],
+        "layers": {found.plan.name: layer_record(found) for found in measured},
+        "failed_layers": {name: str(error) for name, error in failed.items()},
+        "versions": show_versions(),
+        "cautions": CAUTIONS,
+    }
+
+
+def layer_record(found: Measured) -> dict[str, Any]:
+    """Return what the record says of a measured layer."""
+    info, work = found.plan.info, found.plan.work
+    return {
+        "source": str(info.path),
+        "layer": info.layer,
+        "format": info.driver,
+        "geometry": info.geometry,
+        "crs": info.crs,
+        "rows": info.features,
+        "where": found.plan.layer.where,
+        "prepare": work.prepare.model_dump(mode="json", by_alias=True),
+        "plane": {
+            "asked": work.projector.plane,
+            "budget_percent": 100.0 * work.projector.budget,
+            "three_dimensions": work.projector.three_dimensions,
+            "edges": work.projector.edges,
+        },
+        "measures": [tally.summary() for tally in found.tallies],
+        "copies": {
+            word: {
+                "files": [str(path) for path in written.paths],
+                "rows": written.rows,
+                "losses": [str(loss) for loss in written.losses],
+            }
+            for word, written in found.written.items()
+        },
+        "seconds": {"measuring": round(found.seconds, 3), "writing": round(found.writing_s, 3)},
+    }

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any
+from typing import Any, Self
 
 import numpy as np
 import pyarrow as pa
@@ -12,7 +12,6 @@ import pyarrow as pa
 from geofractal.measure import Column, Ints
 
 _STORED = {"number": "<f8", "count": "<i8", "text": "<i4", "flag": "i1"}
-ARROW_TYPES = {"number": pa.float64(), "count": pa.int64(), "text": pa.string(), "flag": pa.bool_()}
 _FID = "\x00fid"
 
 
@@ -36,6 +35,7 @@ class RowSpool:
         self._record = np.dtype([(_FID, "<i8"), *((c.name, _STORED[c.kind]) for c in self.columns)])
         self._texts: list[str] = []
         self._codes: dict[str, int] = {}
+        self._path = path
         self._file = path.open("w+b")
 
     def write(self, rows: Ints, batch: pa.RecordBatch, fids: Ints | None = None) -> None:
@@ -62,9 +62,14 @@ class RowSpool:
         fids = self._records(start, stop)[_FID].astype(np.int64)
         return None if len(fids) and fids[0] < 0 else fids
 
-    def close(self) -> None:
-        """Close the file; whoever named it removes it."""
+    def __enter__(self) -> Self:
+        """Return the spool itself."""
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        """Close the file and remove it."""
         self._file.close()
+        self._path.unlink(missing_ok=True)
 
     def _records(self, start: int, stop: int) -> Any:
         size = self._record.itemsize

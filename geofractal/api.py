@@ -1,0 +1,196 @@
+"""The Python API: the batch's own code on geometries at hand, frames in and frames out."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterator, Sequence
+from functools import partial
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+from pydantic import ValidationError
+
+from geofractal.batch.parts import ROW, LayerWork, RowsPart, measure_part
+from geofractal.batch.run import run_batch
+from geofractal.config.load import load_config
+from geofractal.config.models import MeasureRequest, Prepare
+from geofractal.errors import ConfigError
+from geofractal.reader.planes import Projector
+from geofractal.registry import load_measure
+
+if TYPE_CHECKING:
+    from typing import TypeAlias
+
+    import geopandas as gpd
+    import pandas as pd
+    import shapely
+
+    Geometries: TypeAlias = gpd.GeoDataFrame | gpd.GeoSeries | Sequence[shapely.Geometry | None]
+    Edges: TypeAlias = Literal["straight", "geodesic"]
+
+_ROWS_PER_PART = 5_000
+
+
+def run(path: str | os.PathLike[str]) -> dict[str, Any]:
+    """Run the batch that a YAML file describes and return its run record.
+
+    Parameters
+    ----------
+    path : the batch file; paths in it are seen from its folder
+
+    Raises
+    ------
+    ConfigError
+        with everything that is wrong with the file; nothing has been measured
+    GeofractalError
+        as `geofractal.batch.run.run_batch`
+    """
+    return run_batch(load_config(path))
+
+
+def divider_dimension(
+    geometries: Geometries,
+    *,
+    crs: Any = None,
+    lengths_at_m: Sequence[float] = (),
+    ruler_min_m: float | None = None,
+    ruler_max_m: float | None = None,
+    rungs: int | None = None,
+    starts: int | None = None,
+    boundaries: Literal["all", "outer"] = "all",
+    repair: bool = False,
+    edges: Edges = "straight",
+    budget_percent: float = 0.5,
+    three_dimensions: bool = True,
+) -> pd.DataFrame:
+    """Measure the divider dimension of lines, or of the boundaries of polygons.
+
+    Parameters
+    ----------
+    geometries : GeoDataFrame, GeoSeries, or a sequence of shapely geometries (None where one is missing)
+    crs : of a plain sequence, in any form that pyproj takes; a frame brings its own
+    lengths_at_m : rulers in metres at which the walked length is returned, in km
+    ruler_min_m, ruler_max_m, rungs, starts : the ladder and its walks, chosen from the data where left out
+    boundaries : every ring of a polygon, or only its outer one
+    repair : measure an invalid polygon's repaired boundary rather than refuse it
+    edges : straight in the source's CRS, as maps draw them, or geodesic
+    budget_percent : worst distance error allowed of the plane that a feature is measured on
+    three_dimensions : whether features over budget may be measured on the ellipsoid itself
+
+    Returns
+    -------
+    pandas.DataFrame
+        one row per input, in order and with its index; columns as ``geofractal measures`` lists them.
+        A geometry that is missing, empty, too small or of another kind has nulls and a
+        ``divider_note`` that says why.
+
+    Raises
+    ------
+    ConfigError
+        an option is wrong, or there is no CRS
+    LayerError
+        the CRS cannot carry lines
+
+    Examples
+    --------
+    >>> import shapely
+    >>> straight = shapely.LineString([(x, 0) for x in range(1001)])
+    >>> found = divider_dimension([straight, None], crs="EPSG:32631")
+    >>> found["divider_note"][1]
+    'missing geometry'
+    """
+    options = {
+        "lengths_at_m": tuple(map(float, lengths_at_m)),
+        "ruler_min_m": ruler_min_m,
+        "ruler_max_m": ruler_max_m,
+        "rungs": rungs,
+        "starts": starts,
+    }
+    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
+    prepare = Prepare(boundaries=boundaries, repair=repair)
+    return _measured("divider-dimension", options, geometries, crs, prepare, plane)
+
+
+def sinuosity(
+    geometries: Geometries,
+    *,
+    ruler_m: float,
+    crs: Any = None,
+    edges: Edges = "straight",
+    budget_percent: float = 0.5,
+    three_dimensions: bool = True,
+) -> pd.DataFrame:
+    """Measure the sinuosity of lines at a stated ruler: walked length over end-to-end distance.
+
+    Parameters
+    ----------
+    ruler_m : the ruler in metres
+    geometries, crs, edges, budget_percent, three_dimensions : as in `divider_dimension`
+
+    Returns
+    -------
+    pandas.DataFrame
+        one row per input, in order and with its index; rings have nulls and a note
+
+    Raises
+    ------
+    ConfigError, LayerError
+        as `divider_dimension`
+    """
+    options = {"ruler_m": float(ruler_m)}
+    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
+    return _measured("sinuosity", options, geometries, crs, Prepare(), plane)
+
+
+def _measured(
+    word: str,
+    options: dict[str, Any],
+    geometries: Geometries,
+    crs: Any,
+    prepare: Prepare,
+    plane: Callable[[str], Projector],
+) -> pd.DataFrame:
+    """Measure geometries as the batch measures a layer's rows."""
+    import pandas as pd
+
+    try:
+        chosen = load_measure(word).options(**options)
+    except ValidationError as error:
+        raise ConfigError(f"{word}: {error}") from None
+    request = MeasureRequest(measure=word, of="geometries", options=chosen)
+    values, index, wkt = _taken(geometries, crs)
+    work = LayerWork((request,), plane(wkt), prepare)
+    results = [measure_part(work, part) for part in _parts(values)]
+    found = pa.Table.from_batches(results).drop_columns([ROW]).to_pandas()
+    return pd.DataFrame(found).set_axis(index)
+
+
+def _taken(geometries: Geometries, crs: Any) -> tuple[NDArray[np.object_], Any, str]:
+    """Return geometries as an array, their index, and their CRS as WKT."""
+    import geopandas as gpd
+    import pandas as pd
+    import pyproj
+
+    if isinstance(geometries, (gpd.GeoDataFrame, gpd.GeoSeries)):
+        values, index, own = geometries.geometry.to_numpy(), geometries.index, geometries.crs
+    else:
+        values, index, own = np.array([*geometries, None])[:-1], pd.RangeIndex(len(geometries)), None
+    given = None if crs is None else pyproj.CRS.from_user_input(crs)
+    if own and given and own != given:
+        raise ConfigError(f"crs says {given.name!r}, the frame {own.name!r}; leave crs out or use to_crs")
+    stated = own or given
+    if stated is None:
+        raise ConfigError("the geometries have no CRS; state it, such as crs='EPSG:2193'")
+    return values, index, stated.to_wkt()
+
+
+def _parts(values: NDArray[np.object_]) -> Iterator[RowsPart]:
+    """Yield parts of the geometries: at least one, so that an empty input has its columns, too."""
+    import shapely
+
+    for start in range(0, max(len(values), 1), _ROWS_PER_PART):
+        taken = values[start : start + _ROWS_PER_PART]
+        wkb = pa.array(shapely.to_wkb(taken), pa.large_binary())
+        yield RowsPart(np.arange(start, start + len(taken)), wkb)

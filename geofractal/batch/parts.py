@@ -1,0 +1,284 @@
+"""Parts: pure work with a content key: the same rows, options and code give the same key and bytes."""
+
+from __future__ import annotations
+
+import hashlib
+import os
+from collections.abc import Iterator
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any, Protocol
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
+from numpy.typing import NDArray
+
+from geofractal.config.columns import prefixed
+from geofractal.config.models import MeasureRequest, Prepare
+from geofractal.errors import OutputError
+from geofractal.measure import Column, Ints, Lines, Values
+from geofractal.reader.geometry import PROBLEMS, read_lines
+from geofractal.reader.joining import join_parts
+from geofractal.reader.planes import Projector
+from geofractal.registry import columns_of, load_measure
+from geofractal.versions import code_digest
+from geofractal.writer.rows import ARROW_TYPES
+
+NOT_WANTED = "left out by the layer's where"
+ROW = "row"
+LEFT_OUT = Column(
+    "path_left_out_km",
+    "leftout_km",
+    "number",
+    "km",
+    "length of the group's lines that its main path leaves out",
+)
+_NULLS = {"number": np.nan, "count": -1, "text": None, "flag": -1}
+_DTYPES = {"number": np.float64, "count": np.int64, "text": object, "flag": np.int8}
+
+
+@dataclass(frozen=True)
+class Features:
+    """The features of a part, in the layer's own coordinates, and which row each answers for.
+
+    `feature` gives each row's feature, -1 where it has none and `notes` says why.
+    """
+
+    xy: NDArray[np.float64]
+    part_offsets: Ints
+    feature_offsets: Ints
+    closed: NDArray[np.bool_]
+    feature: Ints
+    notes: NDArray[np.object_]
+
+    def __len__(self) -> int:
+        """Return the number of features."""
+        return len(self.feature_offsets) - 1
+
+
+class PartInput(Protocol):
+    """Rows of a layer to be measured together."""
+
+    @property
+    def rows(self) -> Ints:
+        """Source rows that the part answers for, increasing."""
+
+    def content(self) -> Iterator[bytes | memoryview | pa.Buffer]:
+        """Yield all that the part's results depend on, but options and code."""
+
+    def features(self, prepare: Prepare) -> Features:
+        """Return the part's features."""
+
+
+@dataclass(frozen=True)
+class RowsPart:
+    """Consecutive rows, each a feature of its own; `wanted` is the layer's ``where``, None for all."""
+
+    rows: Ints
+    wkb: pa.Array
+    wanted: NDArray[np.bool_] | None = None
+
+    def content(self) -> Iterator[bytes | memoryview | pa.Buffer]:
+        """Yield rows, geometry and choice."""
+        yield self.rows.data
+        yield from _array_content(self.wkb)
+        if self.wanted is not None:
+            yield self.wanted.tobytes()
+
+    def features(self, prepare: Prepare) -> Features:
+        """Return one feature for each row that has a line to measure."""
+        wkb = self.wkb
+        if self.wanted is not None:
+            wkb = pc.if_else(pa.array(self.wanted), wkb, pa.scalar(None, wkb.type))
+        lines = read_lines(
+            wkb,
+            boundaries=prepare.boundaries,
+            drop_repeated=prepare.drop_repeated,
+            repair=prepare.repair,
+        )
+        notes = _TEXTS[lines.problems]
+        if self.wanted is not None:
+            notes[~self.wanted] = NOT_WANTED
+        feature = np.full(len(self.rows), -1, np.int64)
+        feature[lines.rows] = np.arange(len(lines))
+        return Features(lines.xy, lines.part_offsets, lines.feature_offsets, lines.closed, feature, notes)
+
+
+_TEXTS = np.array([text or None for text in PROBLEMS], dtype=object)
+
+
+def _array_content(array: pa.Array) -> Iterator[bytes | pa.Buffer]:
+    """Yield an array's own content, whatever larger array it is a slice of."""
+    sink = pa.BufferOutputStream()
+    batch = pa.RecordBatch.from_arrays([array], names=[""])
+    with pa.ipc.new_stream(sink, batch.schema) as stream:
+        stream.write_batch(batch)
+    yield sink.getvalue()
+
+
+@dataclass(frozen=True)
+class LayerWork:
+    """What every part of a layer is measured with; picklable, so that processes can share it."""
+
+    requests: tuple[MeasureRequest, ...]
+    projector: Projector
+    prepare: Prepare
+    grouped: bool = False
+
+    @cached_property
+    def columns(self) -> tuple[Column, ...]:
+        """All result columns of the layer, in output order."""
+        measured = tuple(column for request in self.requests for column in request.columns())
+        return (*measured, LEFT_OUT) if self.leaves_out else measured
+
+    @cached_property
+    def note_names(self) -> frozenset[str]:
+        """Names of the measures' note columns."""
+        notes = (
+            prefixed([load_measure(request.measure).note_column()], request.prefix)
+            for request in self.requests
+        )
+        return frozenset(column.name for (column,) in notes)
+
+    @property
+    def leaves_out(self) -> bool:
+        """Whether a group may be reduced to its main path."""
+        return self.grouped and self.prepare.branches == "main-path"
+
+    def joined(self, lines: Lines) -> tuple[Lines, dict[int, str], NDArray[np.float64]]:
+        """Return the lines with parts that meet made one, the features left out, and the length left out."""
+        if self.prepare.join_within_m is None and not self.grouped:
+            return lines, {}, np.zeros(len(lines))
+        return join_parts(
+            lines,
+            tolerance_m=self.prepare.join_within_m or 0.0,
+            one_path=self.grouped,
+            branches=self.prepare.branches,
+        )
+
+    @cached_property
+    def digest(self) -> bytes:
+        """Hash of options, measures' versions and code."""
+        said = [code_digest(), repr(self.projector), repr(self.prepare), repr(self.grouped)]
+        for request in self.requests:
+            measure = load_measure(request.measure)
+            said += [
+                request.measure,
+                str(measure.version),
+                request.prefix or "",
+                request.options.model_dump_json(),
+            ]
+        return hashlib.blake2b("\x00".join(said).encode(), digest_size=16).digest()
+
+    @property
+    def needs_processes(self) -> bool:
+        """Whether a measure holds the interpreter lock, so that threads would not share the work."""
+        return any(load_measure(request.measure).holds_gil for request in self.requests)
+
+
+def note_name(request: MeasureRequest) -> str:
+    """Return the name of a request's note column, prefix included."""
+    (note,) = prefixed([load_measure(request.measure).note_column()], request.prefix)
+    return note.name
+
+
+def part_key(work: LayerWork, part: PartInput) -> str:
+    """Return the content key of a part: equal for equal rows, options, code and library versions."""
+    digest = hashlib.blake2b(work.digest, digest_size=16)
+    for piece in part.content():
+        digest.update(piece)
+    return digest.hexdigest()
+
+
+def measured_part(work: LayerWork, part: PartInput, folder: Path | None) -> pa.RecordBatch:
+    """Return the results of a part, one row for each of its rows, columns as in `LayerWork.columns`.
+
+    Where `folder` is given, results that an earlier run left there are taken, and new ones are kept.
+    """
+    if folder is None:
+        return measure_part(work, part)
+    kept = folder / f"{part_key(work, part)}.arrow"
+    if kept.exists():
+        with pa.OSFile(str(kept)) as source, pa.ipc.open_stream(source) as stream:
+            return stream.read_next_batch()
+    results = measure_part(work, part)
+    _keep(results, kept)
+    return results
+
+
+def _keep(results: pa.RecordBatch, kept: Path) -> None:
+    """Write a part's results beside their place and rename them into it when whole."""
+    unfinished = kept.with_suffix(f".{os.getpid()}.part")
+    try:
+        with pa.OSFile(str(unfinished), "wb") as sink, pa.ipc.new_stream(sink, results.schema) as stream:
+            stream.write_batch(results)
+        unfinished.replace(kept)
+    except OSError as error:
+        unfinished.unlink(missing_ok=True)
+        raise OutputError(
+            f"{kept.parent}: a part's results cannot be kept: {error}; make room there"
+        ) from error
+
+
+def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:
+    """Measure a part: pure, and with no regard to what other parts hold."""
+    features = part.features(work.prepare)
+    values, problems = _measure_features(work, features)
+    has = features.feature >= 0
+    notes = features.notes.copy()
+    notes[has] = problems[features.feature[has]]
+    arrays = [pa.array(part.rows)]
+    for column in work.columns:
+        rows = _nulls(column, len(part.rows))
+        rows[has] = values[column.name][features.feature[has]]
+        if column.name in work.note_names:
+            rows = np.where(notes == None, rows, notes)  # noqa: E711 - elementwise
+        arrays.append(_arrow(column, rows))
+    return pa.RecordBatch.from_arrays(arrays, names=[ROW, *(column.name for column in work.columns)])
+
+
+def _measure_features(work: LayerWork, features: Features) -> tuple[Values, NDArray[np.object_]]:
+    """Return every column's value for each feature, and what kept a feature from being measured at all."""
+    n = len(features)
+    values: Values = {column.name: _nulls(column, n) for column in work.columns}
+    problems = np.full(n, None, dtype=object)
+    if not n:
+        return values, problems
+    chunks, refused = work.projector.lines(
+        np.arange(n), features.xy, features.part_offsets, features.feature_offsets, features.closed
+    )
+    problems[list(refused)] = list(refused.values())
+    for chunk in chunks:
+        lines, unjoined, left_out_m = work.joined(chunk)
+        for feature, text in unjoined.items():
+            problems[feature] = text
+        if work.leaves_out:
+            values[LEFT_OUT.name][lines.rows] = left_out_m / 1000.0
+        _measure_lines(work, lines, values)
+    return values, problems
+
+
+def _measure_lines(work: LayerWork, lines: Lines, values: Values) -> None:
+    """Fill the columns of the features in `lines`."""
+    if not len(lines):
+        return
+    for request in work.requests:
+        measure = load_measure(request.measure)
+        found = measure.measure(lines, request.options)
+        for own, column in zip(columns_of(measure, request.options), request.columns(), strict=True):
+            values[column.name][lines.rows] = found[own.name]
+
+
+def _nulls(column: Column, n: int) -> NDArray[Any]:
+    return np.full(n, _NULLS[column.kind], dtype=_DTYPES[column.kind])
+
+
+def _arrow(column: Column, values: NDArray[Any]) -> pa.Array:
+    """Return a column's values as Arrow, its nulls as nulls."""
+    kind = ARROW_TYPES[column.kind]
+    if column.kind == "text":
+        return pa.array(values, kind)
+    missing = np.isnan(values) if column.kind == "number" else values < 0
+    return pa.array(values == 1 if column.kind == "flag" else values, kind, mask=missing)

@@ -1,0 +1,169 @@
+"""The plan of a batch: each layer's header, what its rows are measured with, and where its copies go."""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from collections.abc import Iterable, Iterator
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+
+from geofractal.batch.parts import LayerWork, PartInput, RowsPart
+from geofractal.config.load import wrong_kinds
+from geofractal.config.models import Batch, VectorLayer
+from geofractal.errors import ConfigError, LayerError, OutputError, Problem, SourceError
+from geofractal.measure import Column, Ints
+from geofractal.reader.layers import allowed
+from geofractal.reader.planes import Projector
+from geofractal.reader.vector import LayerInfo, layer_info, stream
+from geofractal.reader.where import Where
+from geofractal.writer.layer import SUFFIXES
+from geofractal.writer.losses import Loss, expected_losses
+from geofractal.writer.names import refuse_clashes
+from geofractal.writer.sources import refuse_sources
+
+
+@dataclass(frozen=True)
+class LayerPlan:
+    """One layer of the batch, ready to be measured."""
+
+    name: str
+    layer: VectorLayer
+    info: LayerInfo
+    where: Where | None
+    work: LayerWork
+
+    @cached_property
+    def columns(self) -> tuple[Column, ...]:
+        """Columns that its copies gain."""
+        return self.work.columns
+
+
+@dataclass(frozen=True)
+class Plan:
+    """All layers that can be measured, why the others cannot, and what each copy will not hold."""
+
+    batch: Batch
+    layers: tuple[LayerPlan, ...]
+    failed: dict[str, SourceError]
+    losses: dict[tuple[str, str], tuple[Loss, ...]]
+
+    @cached_property
+    def targets(self) -> dict[tuple[str, str], Path]:
+        """Return the file of each layer's copy, by layer and format.
+
+        Layers that come from one GeoPackage go into one copy of it, named like it.
+        """
+        folder = self.batch.outputs.folder
+        return {
+            (plan.name, word): folder / f"{_stem(plan, word)}{SUFFIXES[word]}"
+            for plan in self.layers
+            for word in self.batch.outputs.formats
+        }
+
+
+def _stem(plan: LayerPlan, word: str) -> str:
+    together = word == plan.info.driver == "geopackage"
+    return plan.info.path.stem if together else plan.name
+
+
+def plan_batch(batch: Batch) -> Plan:
+    """Look at every layer's header and plan the batch; no row is measured.
+
+    A layer that cannot be read is noted in `Plan.failed` and the others go on.
+
+    Raises
+    ------
+    ConfigError
+        The batch file asks what a layer does not have: all such faults at once.
+    OutputError
+        An output would overwrite a source or another output, or a column's name is taken.
+    """
+    problems: list[Problem] = []
+    plans: list[LayerPlan] = []
+    failed: dict[str, SourceError] = {}
+    for name, layer in batch.layers.items():
+        if not batch.requests_of(name):
+            continue
+        try:
+            plans.append(_plan_layer(batch, name, layer, problems))
+        except SourceError as error:
+            failed[name] = error
+    kinds = {plan.name: {plan.info.geometry} for plan in plans}
+    problems += wrong_kinds(batch, kinds)
+    if problems:
+        raise ConfigError("\n".join(map(str, problems)), tuple(problems))
+    losses = {
+        (plan.name, word): expected_losses(plan.info, plan.columns, word)
+        for plan in plans
+        for word in batch.outputs.formats
+    }
+    plan = Plan(batch, tuple(plans), failed, losses)
+    _refuse_outputs(plan)
+    return plan
+
+
+def _plan_layer(batch: Batch, name: str, layer: VectorLayer, problems: list[Problem]) -> LayerPlan:
+    info = layer_info(
+        layer.source,
+        layer=layer.layer,
+        crs=layer.crs,
+        override_crs=layer.override_crs,
+        encoding=layer.encoding,
+    )
+    problems += _column_problems(batch, name, layer, info)
+    where = None
+    if layer.where is not None:
+        try:
+            where = Where(layer.where, info.fields)
+        except LayerError as error:
+            problems.append(batch.problem(("layers", name, "where"), str(error)))
+    projection = batch.projection
+    assert info.crs is not None  # layer_info refuses a layer without one
+    projector = Projector(
+        info.crs,
+        plane=projection.plane if info.bounds else "feature",
+        budget=projection.budget_percent / 100.0,
+        three_dimensions=projection.three_dimensions,
+        edges=layer.edges,
+        bounds=info.bounds,
+    )
+    work = LayerWork(batch.requests_of(name), projector, layer.prepare, grouped=layer.group_by is not None)
+    return LayerPlan(name, layer, info, where, work)
+
+
+def _column_problems(batch: Batch, name: str, layer: VectorLayer, info: LayerInfo) -> Iterable[Problem]:
+    for key, column in (("id", layer.id), ("group-by", layer.group_by)):
+        if column is not None and column not in info.field_names:
+            said = f"{info.path}: layer {info.layer!r} has no column {column!r}"
+            yield batch.problem(("layers", name, key), f"{said}; {allowed(info.field_names, column)}")
+
+
+def _refuse_outputs(plan: Plan) -> None:
+    """Refuse targets that are sources or one another's, and columns whose names are taken."""
+    refuse_sources(plan.targets.values(), [layer.source for layer in plan.batch.layers.values()])
+    origins: dict[str, set[str]] = defaultdict(set)
+    attached: dict[tuple[Path, str], tuple[Column, ...]] = defaultdict(tuple)
+    for layer in plan.layers:
+        attached[layer.info.path, layer.info.layer] += layer.columns
+        together = attached[layer.info.path, layer.info.layer]
+        refuse_clashes(layer.info, together if "geopackage" in plan.batch.outputs.formats else layer.columns)
+        for word in plan.batch.outputs.formats:
+            target = plan.targets[layer.name, word]
+            origins[str(target).casefold()].add(
+                str(layer.info.path) if target.stem != layer.name else layer.name
+            )
+    for folded, sources in origins.items():
+        if len(sources) > 1:
+            raise OutputError(
+                f"{folded}: {' and '.join(sorted(sources))} would both be written to this file; "
+                "rename a layer in the batch file"
+            )
+
+
+def parts_of(layer: LayerPlan, folder: Path) -> Iterator[tuple[PartInput, Ints | None]]:
+    """Yield a layer's parts, cut by the source alone, each with the stored feature ids of its rows."""
+    columns = layer.where.columns if layer.where else ()
+    for batch in stream(layer.info, columns=columns):
+        wanted = layer.where.mask(batch.attributes) if layer.where else None
+        yield RowsPart(batch.rows, batch.wkb, wanted), batch.fids

@@ -1,0 +1,154 @@
+"""A batch from plan to published outputs: parts are measured, spooled by row, and joined by the writer."""
+
+from __future__ import annotations
+
+import json
+import shutil
+import time
+from collections import deque
+from collections.abc import Iterator
+from concurrent.futures import Executor
+from contextlib import ExitStack
+from dataclasses import dataclass, field
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+import pyarrow as pa
+
+from geofractal import interrupt
+from geofractal.batch.executor import available_workers, in_order, make_executor
+from geofractal.batch.parts import ROW, LayerWork, PartInput, measured_part
+from geofractal.batch.plan import LayerPlan, Plan, parts_of, plan_batch
+from geofractal.batch.record import MeasureTally, run_record
+from geofractal.batch.spool import RowSpool
+from geofractal.config.models import Batch
+from geofractal.errors import GeofractalError, SourceError
+from geofractal.measure import Ints
+from geofractal.progress import Progress
+from geofractal.writer.commit import publish
+from geofractal.writer.dictionary import write_data_dictionary
+from geofractal.writer.layer import Written, write_layer
+from geofractal.writer.sources import Fingerprint, check_unchanged, fingerprint
+
+PARTS_FOLDER = ".geofractal-parts"
+RECORD = "run_record.json"
+
+
+@dataclass
+class Measured:
+    """A layer whose results are in its spool."""
+
+    plan: LayerPlan
+    spool: RowSpool
+    tallies: list[MeasureTally]
+    before: Fingerprint
+    seconds: float
+    written: dict[str, Written] = field(default_factory=dict)
+    writing_s: float = 0.0
+
+
+def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, Any]:
+    """Run a batch and return its record, which also stands in the output folder.
+
+    A layer that cannot be read is named in the record with the reason, and the others go on; its
+    earlier outputs stay. Measured parts are kept in the output folder until the run ends well, so
+    that an interrupted run goes on where it was.
+
+    Parameters
+    ----------
+    batch : from `geofractal.config.load_config`
+    progress : what is told how far the run is
+
+    Returns
+    -------
+    dict
+        the run record; its ``exit_code`` is 0, or 1 where refusals are to fail, or 3 where a layer
+        could not be read
+
+    Raises
+    ------
+    ConfigError, MeasureError
+        before any row is measured
+    OutputError
+        where an output cannot be written; outputs already published stay
+    """
+    started = datetime.now(UTC)
+    progress = progress or Progress()
+    plan = plan_batch(batch)
+    folder = batch.outputs.folder / PARTS_FOLDER
+    failed: dict[str, GeofractalError] = dict(plan.failed)
+    measured: list[Measured] = []
+    with ExitStack() as stack:
+        folder.mkdir(parents=True, exist_ok=True)
+        interrupt.set_kept(f"Measured parts are kept in {folder}; run the batch again to go on from there.")
+        for layer in plan.layers:
+            try:
+                measured.append(_measure_layer(layer, batch, folder, stack, progress))
+            except SourceError as error:
+                failed[layer.name] = error
+        for found in measured:
+            _write_copies(plan, found, progress)
+        columns = {found.plan.name: found.plan.columns for found in measured}
+        write_data_dictionary(batch.outputs.folder, columns)
+        record = run_record(batch, measured, failed, started)
+        with publish(batch.outputs.folder / RECORD) as part:
+            part.write_text(json.dumps(record, indent=1, ensure_ascii=False), encoding="utf-8")
+    shutil.rmtree(folder, ignore_errors=True)
+    return record
+
+
+def _measure_layer(
+    layer: LayerPlan, batch: Batch, folder: Path, stack: ExitStack, progress: Progress
+) -> Measured:
+    """Measure a layer part by part into a spool, in the order of the parts whatever the workers."""
+    begun = time.monotonic()
+    before = fingerprint(layer.info.path)
+    spool = stack.enter_context(RowSpool(folder / f"{layer.name}.rows", layer.columns, layer.info.features))
+    tallies = [MeasureTally.of(request) for request in layer.work.requests]
+    workers = available_workers() if batch.run.workers == "auto" else batch.run.workers
+    words = " and ".join(request.measure for request in layer.work.requests)
+    with (
+        make_executor(workers, processes=layer.work.needs_processes) as executor,
+        progress.stage(layer.name, words, layer.info.features) as stage,
+    ):
+        for fids, results in _results(layer, executor, folder, ahead=2 * workers):
+            spool.write(results.column(ROW).to_numpy(), results, fids)
+            for tally in tallies:
+                tally.add(results)
+            stage.advance(results.num_rows)
+    return Measured(layer, spool, tallies, before, time.monotonic() - begun)
+
+
+def _results(
+    layer: LayerPlan, executor: Executor, folder: Path, ahead: int
+) -> Iterator[tuple[Ints | None, pa.RecordBatch]]:
+    """Yield feature ids and results of each part, in the order of the parts."""
+    waiting: deque[Ints | None] = deque()
+
+    def inputs() -> Iterator[tuple[LayerWork, PartInput, Path]]:
+        for part, fids in parts_of(layer, folder):
+            waiting.append(fids)
+            yield layer.work, part, folder
+
+    for results in in_order(executor, measured_part, inputs(), ahead):
+        yield waiting.popleft(), results
+
+
+def _write_copies(plan: Plan, found: Measured, progress: Progress) -> None:
+    """Write a layer's copies; each is confirmed against the source before it takes its place."""
+    begun = time.monotonic()
+    layer = found.plan
+    for word in plan.batch.outputs.formats:
+        target = plan.targets[layer.name, word]
+        with progress.stage(layer.name, f"write {target.name}", layer.info.features) as stage:
+            found.written[word] = write_layer(
+                layer.info,
+                found.spool,
+                layer.columns,
+                target,
+                word,
+                progress=stage.advance,
+                confirm=lambda: check_unchanged(layer.info.path, found.before),
+            )
+    found.writing_s = time.monotonic() - begun
