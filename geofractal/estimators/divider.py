@@ -22,8 +22,11 @@ if TYPE_CHECKING:
 RING_STARTS = 16
 """Evenly spaced starts of a ring: single starts on real shores scatter by almost 2 %."""
 
-ENOUGH_STEPS = 256
-"""Steps that the walks of one rung take together before further starts stop paying."""
+ENOUGH_STEPS = 128
+"""Steps that the walks of one ruler take together before further starts stop paying: walks from
+different starts soon fall into each other's steps. On fractional Brownian trails of dimension 1.25 the
+scatter of ln L falls from 6 % with one start each way to 3 % with 16 at 11 steps, from 2.1 % to 1.6 % at
+45, and not at all above 100."""
 
 FEWEST_RUNGS = 4
 """Rungs below which no line is fitted."""

@@ -27,7 +27,7 @@ walk miss circles that only touch the line, as they do all along a Koch curve.""
 _SNAP = 1e-6
 """A start within this share of a segment from its end is the vertex itself."""
 
-_SHIFT = 3  # a box holds 2**3 vertices, or as many boxes of the level below
+_SHIFT = 4  # a box holds 2**4 vertices, or as many boxes of the level below
 _EDGE = (1 << _SHIFT) - 1
 
 
@@ -132,7 +132,8 @@ def _lay_path(
     size = xy.shape[1]
     path = np.empty((last - first + starts - 1, size))
     marks = np.zeros(starts, np.int64)
-    path[0] = xy[origin]
+    for k in range(size):
+        path[0, k] = xy[origin, k]
     filled = 1
     mark = 1
     along = 0.0
@@ -148,7 +149,8 @@ def _lay_path(
                 filled += 1
             marks[mark] = filled - 1
             mark += 1
-        path[filled] = xy[j]
+        for k in range(size):
+            path[filled, k] = xy[j, k]
         filled += 1
         along += step
         i = j
@@ -173,7 +175,7 @@ def _box_levels(count: int) -> Ints:
 
 @kernel
 def _boxes(path: Floats, bases: Ints) -> Floats:
-    """Bounding boxes of every 8, 64, 512, ... vertices: lowest corner, then highest."""
+    """Bounding boxes of every 16, 256, 4096, ... vertices: lowest corner, then highest."""
     size = path.shape[1]
     levels = bases.size - 1
     boxes = np.empty((bases[levels], 2 * size))
@@ -338,13 +340,12 @@ def _walk_through(
     """Return steps and L(r) of a walk from vertex `mark`: around a ring, or to both ends of an open line."""
     steps = 0
     rest = 0.0
-    if mark < len(path) - 1:
-        steps, gap = _walk(path, boxes, bases, levels, total, mark, 1, closed, chord)
-        rest = _arc(gap, radius)
-    if mark > 0 and not closed:
-        back, gap = _walk(path, boxes, bases, levels, total, mark, -1, closed, chord)
-        steps += back
-        rest += _arc(gap, radius)
+    for way in range(1, -2, -2):
+        last = len(path) - 1 if way > 0 else 0
+        if mark != last and (way > 0 or not closed):
+            taken, gap = _walk(path, boxes, bases, levels, total, mark, way, closed, chord)
+            steps += taken
+            rest += _arc(gap, radius)
     return steps, ruler * steps + rest
 
 
@@ -390,9 +391,13 @@ def _walk_rung(
         s += 1
     if not possible:
         return 0, 0.0, 0.0, 0.0
-    walked = walked[:count]
-    mean = walked.sum() / count
-    variance = ((walked - mean) ** 2).sum() / (count - 1) if count > 1 else math.nan
+    mean = 0.0
+    for s in range(count):
+        mean += walked[s] / count
+    square = 0.0
+    for s in range(count):
+        square += (walked[s] - mean) ** 2
+    variance = square / (count - 1) if count > 1 else math.nan
     return count, mean, variance, steps / count
 
 
