@@ -265,12 +265,12 @@ def test_compiled_kernels_equal_their_interpreted_twins(features, tolerance):
         ends = np.ascontiguousarray(
             lines.xy[np.column_stack([lines.part_offsets[:-1], lines.part_offsets[1:] - 1]).ravel()]
         )
-        node = np.empty(2 * parts, np.int64)
-        for f, g in itertools.pairwise(lines.feature_offsets.tolist()):
-            node[2 * f : 2 * g] = of(kernels.meet)(ends[2 * f : 2 * g], tolerance) + 2 * f
-        whole = np.empty_like(node)
-        of(kernels.meet_all)(ends, lines.feature_offsets, tolerance, whole)
-        assert (whole == node).all()
+        feature = np.repeat(np.arange(len(lines)), 2 * np.diff(lines.feature_offsets))
+        order, node = np.lexsort((ends[:, 0], feature)), np.arange(2 * parts)
+        touching = of(kernels.near_pairs)(ends, order, feature, np.ones(2 * parts, bool), kernels.TOUCH_M)
+        of(kernels.unite_all)(node, touching)
+        near = of(kernels.near_pairs)(ends, order, feature, feature % 2 == 0, tolerance)
+        of(kernels.unite_loose)(node, near, feature, lines.feature_offsets)
         keep = np.arange(parts) % 4 != 3
         pieces, branchings = np.zeros((2, len(lines)), np.int64)
         of(kernels.count_pieces)(node, keep, lines.feature_offsets, pieces, branchings)
@@ -287,26 +287,32 @@ def test_compiled_kernels_equal_their_interpreted_twins(features, tolerance):
             rings,
             tolerance,
         )
-        return [lengths, flip, node, pieces, branchings, order, entered, chain_offsets, chains_of, *made]
+        return [
+            lengths,
+            flip,
+            touching,
+            near,
+            node,
+            pieces,
+            branchings,
+            order,
+            entered,
+            chain_offsets,
+            chains_of,
+            *made,
+        ]
 
     for a, b in zip(run(lambda k: k), run(lambda k: k.py_func), strict=True):
         assert np.array_equal(a, b)
 
 
 def test_small_kernels_equal_their_interpreted_twins():
-    ends = np.array([[0.0, 0], [3, 0], [3.5, 0], [9, 0]])
-    order, dangling = np.arange(4), np.array([True, True, False, True])
-    for reach in (0.1, 1.0, 9.0):
-        pairs = np.zeros((2, 3, 2), np.int64)
-        assert kernels._near_pairs(ends, order, dangling, reach, pairs[0]) == kernels._near_pairs.py_func(
-            ends, order, dangling, reach, pairs[1]
-        )
-        assert (pairs[0] == pairs[1]).all()
-    assert kernels._distance(ends[0], ends[1]) == kernels._distance.py_func(ends[0], ends[1]) == 3.0
+    ends = np.array([[0.0, 0], [3, 4]])
+    assert kernels._distance(*ends) == kernels._distance.py_func(*ends) == 5.0
     parents = np.array([[0, 0, 1, 2], [0, 0, 1, 2]])
     assert kernels._root(parents[0], 3) == kernels._root.py_func(parents[1], 3) == 0
     kernels._unite(parents[0], 3, 1)
     kernels._unite.py_func(parents[1], 3, 1)
+    kernels.settle(parents[0])
+    kernels.settle.py_func(parents[1])
     assert (parents[0] == parents[1]).all()
-    for a, b in ((0, 1), (0, 2), (1, 1)):
-        assert kernels._bridged(np.arange(4), a, b) == kernels._bridged.py_func(np.arange(4), a, b)

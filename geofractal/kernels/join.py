@@ -65,71 +65,66 @@ def _unite(parent: Ints, a: int, b: int) -> None:
 
 
 @kernel
-def _near_pairs(ends: Floats, order: Ints, dangling: Bools, reach: float, pairs: Ints) -> int:
-    """Count, and list as far as `pairs` has room, the pairs within reach of which one end dangles."""
-    found = 0
-    for a in range(len(order)):
-        i = order[a]
-        b = a + 1
-        while b < len(order) and ends[order[b], 0] - ends[i, 0] <= reach:
-            j = order[b]
-            if (dangling[i] or dangling[j]) and _distance(ends[i], ends[j]) <= reach:
-                if found < len(pairs):
-                    pairs[found, 0], pairs[found, 1] = i, j
-                found += 1
-            b += 1
-    return found
+def near_pairs(ends: Floats, order: Ints, feature: Ints, loose: Bools, reach: float) -> Ints:
+    """Return the pairs (n, 2) of ends of one feature that lie within reach, one of them loose.
 
-
-@kernel
-def _bridged(parent: Ints, a: int, b: int) -> bool:
-    """Tell whether one part lies between two nodes, so that uniting them would make it a loop."""
-    for p in range(len(parent) // 2):
-        u, v = _root(parent, 2 * p), _root(parent, 2 * p + 1)
-        if (u == a and v == b) or (u == b and v == a):
-            return True
-    return False
-
-
-@kernel
-def meet(ends: Floats, tolerance: float) -> Ints:
-    """Return the node of each end (2k, d) of a feature.
-
-    Ends that touch meet. Then, nearest first, an end that has met none yet meets what is within the
-    tolerance, unless only one part lies between.
+    `order` sorts the ends by feature and first coordinate.
     """
-    n = len(ends)
-    parent = np.arange(n)
-    order = np.argsort(ends[:, 0], kind="mergesort")
-    every = np.ones(n, np.bool_)
-    pairs = np.empty((_near_pairs(ends, order, every, TOUCH_M, np.empty((0, 2), np.int64)), 2), np.int64)
-    _near_pairs(ends, order, every, TOUCH_M, pairs)
-    for i in range(len(pairs)):
-        _unite(parent, pairs[i, 0], pairs[i, 1])
-    if tolerance > TOUCH_M:
-        degree = np.zeros(n, np.int64)
-        for i in range(n):
-            degree[_root(parent, i)] += 1
-        dangling = np.array([degree[_root(parent, i)] == 1 for i in range(n)])
-        pairs = np.empty(
-            (_near_pairs(ends, order, dangling, tolerance, np.empty((0, 2), np.int64)), 2), np.int64
-        )
-        _near_pairs(ends, order, dangling, tolerance, pairs)
-        apart = np.array([_distance(ends[pairs[i, 0]], ends[pairs[i, 1]]) for i in range(len(pairs))])
-        for i in np.argsort(apart, kind="mergesort"):
-            a, b = _root(parent, pairs[i, 0]), _root(parent, pairs[i, 1])
-            if a != b and (degree[a] == 1 or degree[b] == 1) and not _bridged(parent, a, b):
-                degree[min(a, b)] = degree[a] + degree[b]
-                _unite(parent, a, b)
-    return np.array([_root(parent, i) for i in range(n)])
+    pairs = np.empty((0, 2), np.int64)
+    for filling in (False, True):
+        found = 0
+        for a in range(len(order)):
+            i = order[a]
+            b = a + 1
+            while (
+                b < len(order) and feature[order[b]] == feature[i] and ends[order[b], 0] - ends[i, 0] <= reach
+            ):
+                j = order[b]
+                if (loose[i] or loose[j]) and _distance(ends[i], ends[j]) <= reach:
+                    if filling:
+                        pairs[found, 0], pairs[found, 1] = i, j
+                    found += 1
+                b += 1
+        if not filling:
+            pairs = np.empty((found, 2), np.int64)
+    return pairs
 
 
 @kernel
-def meet_all(ends: Floats, feature_offsets: Ints, tolerance: float, node: Ints) -> None:
-    """Fill the node of every end (2p, d); nodes are numbered over the whole chunk."""
-    for f in range(len(feature_offsets) - 1):
-        a, b = 2 * feature_offsets[f], 2 * feature_offsets[f + 1]
-        node[a:b] = meet(ends[a:b], tolerance) + a
+def unite_all(node: Ints, pairs: Ints) -> None:
+    """Unite the nodes of each pair of ends."""
+    for i in range(len(pairs)):
+        _unite(node, pairs[i, 0], pairs[i, 1])
+    settle(node)
+
+
+@kernel
+def settle(node: Ints) -> None:
+    """Give every end the lowest end of its node."""
+    for e in range(len(node)):
+        node[e] = _root(node, e)
+
+
+@kernel
+def unite_loose(node: Ints, pairs: Ints, feature: Ints, feature_offsets: Ints) -> None:
+    """Unite the nodes of each pair in turn, if one of them is still a single end.
+
+    Two nodes with only one part between them stay apart: that part would become a loop.
+    """
+    degree = np.zeros(len(node), np.int64)
+    for e in range(len(node)):
+        degree[node[e]] += 1
+    for i in range(len(pairs)):
+        a, b = _root(node, pairs[i, 0]), _root(node, pairs[i, 1])
+        f = feature[a]
+        if a != b and (degree[a] == 1 or degree[b] == 1):
+            bridged = False
+            for e in range(2 * feature_offsets[f], 2 * feature_offsets[f + 1]):
+                bridged = bridged or (_root(node, e) == a and _root(node, e ^ 1) == b)
+            if not bridged:
+                degree[min(a, b)] = degree[a] + degree[b]
+                _unite(node, a, b)
+    settle(node)
 
 
 @kernel
@@ -220,14 +215,18 @@ def assemble(
                 w = a + b - 1 - v if backwards[j] else v
                 step = _distance(xy[w], out[at - 1]) if at > start else 0.0
                 if v > a or at == start or step > TOUCH_M:
-                    out[at], flags[at] = xy[w], source_vertex[w]
+                    for c in range(xy.shape[1]):
+                        out[at, c] = xy[w, c]
+                    flags[at] = source_vertex[w]
                     length += step
                     at += 1
         gap = _distance(out[start], out[at - 1])
         closed[i] = at - start > 2 and (rings[i] or (gap <= tolerance and length > 4.0 * tolerance))
         if closed[i]:
             at -= gap <= TOUCH_M
-            out[at], flags[at] = out[start], flags[start]
+            for c in range(xy.shape[1]):
+                out[at, c] = out[start, c]
+            flags[at] = flags[start]
             at += 1
         offsets[i + 1] = at
-    return out[:at].copy(), flags[:at].copy(), offsets, closed
+    return out[:at], flags[:at], offsets, closed

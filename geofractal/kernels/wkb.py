@@ -44,7 +44,7 @@ def _header(data: Bytes, at: int, end: int) -> tuple[int, int, int, int]:
     dimensions = plain // 1000
     if dimensions > 3:
         return little, -1, 16, after
-    has_z = code & 0x80000000 != 0 or dimensions in {1, 3}
+    has_z = code & 0x80000000 != 0 or dimensions in (1, 3)
     has_m = code & 0x40000000 != 0 or dimensions >= 2
     return little, plain % 1000, 16 + 8 * int(has_z) + 8 * int(has_m), after
 
@@ -77,13 +77,13 @@ def _walk(
     With an empty `table` the parts are only counted.
     """
     little, kind, stride, at = _header(data, start, end)
-    if kind in {1, 4}:
+    if kind in (1, 4):
         return POINTS, kind, 0, 0
     if kind == 7:
         return COLLECTION, kind, 0, 0
     if 8 <= kind <= 17:
         return CURVED, kind, 0, 0
-    if kind not in {LINE, POLYGON, MULTI_LINE, MULTI_POLYGON}:
+    if kind not in (LINE, POLYGON, MULTI_LINE, MULTI_POLYGON):
         return BROKEN, kind, 0, 0
     items = 1
     if kind >= MULTI_LINE:
@@ -162,7 +162,8 @@ def _copy(data: Bytes, part: Ints, out: Bytes, to: int) -> None:
     """Copy x and y of a part, as the machine's own (little endian) doubles."""
     at, vertices, stride, little = part[0], part[1], part[2], part[3]
     if little == 1 and stride == 16:
-        out[to : to + 16 * vertices] = data[at : at + 16 * vertices]
+        for k in range(16 * vertices):
+            out[to + k] = data[at + k]
     elif little == 1:
         for i in range(vertices):
             for k in range(16):
@@ -214,7 +215,10 @@ def read_rows(
     A part whose vertices are all in one place is dropped. A row that loses all its parts is no
     feature, and its problem in `found` says why. The output arrays have room for all that was found.
     """
-    table = np.zeros((max(1, found[:, 2].max() if len(found) else 1), 4), np.int64)
+    most = 1
+    for i in range(len(found)):
+        most = max(most, found[i, 2])
+    table = np.zeros((most, 4), np.int64)
     out = xy.reshape(-1).view(np.uint8)
     feature, part, vertex = 0, 0, 0
     for i in range(len(found)):

@@ -40,8 +40,7 @@ def join_parts(
     sorted_parts, flip, lengths = _canonical_order(lines)
     ends = _ends(lines, sorted_parts, flip)
     keep = _first_copies(lines, sorted_parts, flip, lengths, ends)
-    node = np.empty(2 * len(sorted_parts), np.int64)
-    kernels.meet_all(ends, lines.feature_offsets, tolerance_m, node)
+    node = _nodes(ends, lines.feature_offsets, tolerance_m)
     left_out = np.zeros(len(lines))
     refused: dict[int, str] = {}
     if one_path:
@@ -95,6 +94,22 @@ def _first_copies(lines: Lines, parts: Ints, flip: Bools, lengths: Floats, ends:
     keep[1:] = (keys[1:] != keys[:-1]).any(axis=1)
     keep[lines.feature_offsets[:-1]] = True
     return keep
+
+
+def _nodes(ends: Floats, feature_offsets: Ints, tolerance_m: float) -> Ints:
+    """Return the node of each end: ends that touch, then loose ends and what is nearest within tolerance."""
+    feature = np.repeat(np.arange(len(feature_offsets) - 1), 2 * np.diff(feature_offsets))
+    order = np.lexsort((ends[:, 0], feature))
+    node = np.arange(len(ends))
+    loose = np.ones(len(ends), np.bool_)
+    kernels.unite_all(node, kernels.near_pairs(ends, order, feature, loose, kernels.TOUCH_M))
+    if tolerance_m > kernels.TOUCH_M:
+        loose = np.bincount(node, minlength=len(node))[node] == 1
+        pairs = kernels.near_pairs(ends, order, feature, loose, tolerance_m)
+        apart = np.square(ends[pairs[:, 0]] - ends[pairs[:, 1]]).sum(axis=1)
+        pairs = pairs[np.argsort(apart, kind="stable")]
+        kernels.unite_loose(node, pairs, feature, feature_offsets)
+    return node
 
 
 def _no_path(pieces: int, branchings: int) -> str:
