@@ -73,14 +73,14 @@ def join(parent: Ints, i: int, j: int) -> int:
 def span(sizes: Ints, line: int, start: int, stop: int) -> int:
     """Return the size of the cells start..stop-1 of a line of sizes, constant or running sums."""
     if sizes.shape[1] == 1:
-        return sizes[line, 0] * (stop - start)
-    return sizes[line, stop] - sizes[line, start]
+        return int(sizes[line, 0] * (stop - start))
+    return int(sizes[line, stop] - sizes[line, start])
 
 
 @kernel
 def upright(height: Ints, line: int, column: int) -> int:
     """Return the length of the vertical cell edge at a column."""
-    return height[line, 0] if height.shape[1] == 1 else height[line, column]
+    return int(height[line, 0] if height.shape[1] == 1 else height[line, column])
 
 
 @kernel
@@ -104,19 +104,19 @@ def find_runs(
                 and (not barred or not cuts[row, stop - 1] & CUT_RIGHT)
             ):
                 stop += 1
-        runs[n, START], runs[n, STOP], runs[n, KIND], runs[n, PLACE] = start, stop, kind, place
+        runs[START, n], runs[STOP, n], runs[KIND, n], runs[PLACE, n] = start, stop, kind, place
         n += 1
         start = stop
     return n
 
 
 @kernel
-def linked(cuts: NDArray[np.uint8], up_start: int, up_stop: int, start: int, stop: int, eight: bool) -> bool:
+def linked(cuts: NDArray[np.uint8], up_start: int, up_stop: int, start: int, stop: int, reach: int) -> bool:
     """Return whether some link from the cells of an upper run to those of a lower one is left."""
     for c in range(max(up_start, start), min(up_stop, stop)):
         if not cuts[c] & CUT_DOWN:
             return True
-    if eight:
+    if reach > 0:
         for c in range(max(up_start, start - 1), min(up_stop, stop - 1)):
             if not cuts[c] & CUT_DOWN_RIGHT:
                 return True
@@ -137,140 +137,7 @@ def barred_length(cuts: NDArray[np.uint8], width: Ints, line: int, start: int, s
 
 
 @kernel
-def new_label(labels: Ints, parent: Ints, state: Ints, run: Ints, row: int) -> int:
-    """Begin a piece at a run that continues nothing above it."""
-    label = state[N_LABELS]
-    state[N_LABELS] = label + 1
-    parent[label] = label
-    labels[label, :] = 0
-    labels[label, CLASS], labels[label, ZONE] = run[KIND], run[PLACE]
-    labels[label, FIRST_ROW], labels[label, FIRST_COLUMN] = row, run[START]
-    labels[label, LEFT], labels[label, RIGHT] = run[START], run[STOP] - 1
-    return label
-
-
-@kernel
-def meet_beside(
-    left: Ints, right: Ints, cut: bool, size: int, labels: Ints, links: Ints, state: Ints
-) -> None:
-    """Account for the vertical edge between two neighbouring runs of a row."""
-    if left[LABEL] < 0:
-        labels[right[LABEL], BORDER] += size
-    elif right[LABEL] < 0:
-        labels[left[LABEL], BORDER] += size
-    elif left[KIND] == right[KIND]:
-        column = BARRIER if cut else ZONE_EDGE
-        labels[left[LABEL], column] += size
-        labels[right[LABEL], column] += size
-        if not cut:
-            links[state[N_LINKS], 0], links[state[N_LINKS], 1] = left[LABEL], right[LABEL]
-            state[N_LINKS] += 1
-
-
-@kernel
-def join_above(
-    run: Ints,
-    upper: Ints,
-    first: int,
-    n_upper: int,
-    row: int,
-    cuts_above: NDArray[np.uint8],
-    width: Ints,
-    line: int,
-    corner: int,
-    eight: bool,
-    labels: Ints,
-    parent: Ints,
-    links: Ints,
-    pairs: Ints,
-    n_pairs: int,
-    number: int,
-    state: Ints,
-) -> int:
-    """Give a run its label from the runs that touch it from above; return the number of pairs so far."""
-    start, stop, kind, place = run[START], run[STOP], run[KIND], run[PLACE]
-    reach, barred = 1 if eight else 0, cuts_above.size > 0
-    label, shared, border, barrier, zone_edge, equal = -1, 0, 0, 0, 0, 0
-    first_link = state[N_LINKS]
-    i = first
-    while i < n_upper and upper[i, START] < stop + reach:
-        low, high = max(start, upper[i, START]), min(stop, upper[i, STOP])
-        if upper[i, KIND] == kind:
-            open_link = kind >= 0 and (
-                not barred or linked(cuts_above, upper[i, START], upper[i, STOP], start, stop, eight)
-            )
-            met = span(width, line, low, high) if high > low else 0
-            if kind >= 0 and barred and high > low:
-                closed = barred_length(cuts_above, width, line, low, high)
-                barrier += closed
-                labels[upper[i, LABEL], BARRIER] += closed
-                met -= closed
-            if kind >= 0 and upper[i, PLACE] != place:
-                zone_edge += met
-                labels[upper[i, LABEL], ZONE_EDGE] += met
-                if open_link:
-                    links[state[N_LINKS], 0], links[state[N_LINKS], 1] = upper[i, LABEL], -1
-                    state[N_LINKS] += 1
-            elif kind >= 0:
-                shared += 2 * met
-                if open_link:
-                    root = find(parent, upper[i, LABEL])
-                    label = root if label < 0 or label == root else join(parent, label, root)
-                    if high > low:
-                        equal += (upper[i, START] == start) + (upper[i, STOP] == stop)
-                    pairs[n_pairs, 0], pairs[n_pairs, 1] = i, number
-                    n_pairs += 1
-        elif high > low:
-            if upper[i, KIND] < 0:
-                border += span(width, line, low, high)
-            elif kind < 0:
-                labels[upper[i, LABEL], BORDER] += span(width, line, low, high)
-        i += 1
-    if kind < 0:
-        run[LABEL] = -1
-        return n_pairs
-    if label < 0:
-        label = new_label(labels, parent, state, run, row)
-    run[LABEL] = label
-    for k in range(first_link, state[N_LINKS]):
-        links[k, 1] = label
-    labels[label, EDGE] -= shared
-    labels[label, BORDER] += border
-    labels[label, BARRIER] += barrier
-    labels[label, ZONE_EDGE] += zone_edge
-    labels[label, CORNERS] -= 2 * equal * corner
-    return n_pairs
-
-
-@kernel
-def add_run(
-    run: Ints,
-    row: int,
-    area: Ints,
-    height: Ints,
-    width: Ints,
-    line: int,
-    above: int,
-    below: int,
-    corners: int,
-    labels: Ints,
-) -> None:
-    """Add a run's cells and its whole outline to its piece; what it shares with others is taken off there."""
-    label, start, stop = run[LABEL], run[START], run[STOP]
-    labels[label, LAST_ROW] = row
-    labels[label, LEFT] = min(labels[label, LEFT], start)
-    labels[label, RIGHT] = max(labels[label, RIGHT], stop - 1)
-    labels[label, CELLS] += stop - start
-    labels[label, AREA] += span(area, line, start, stop)
-    sides = upright(height, line, start) + upright(height, line, stop)
-    labels[label, EDGE] += sides + span(width, above, start, stop) + span(width, below, start, stop)
-    labels[label, CORNERS] += corners
-
-
-@kernel
-def ring_end(
-    rings: Ints, ring: int, sign: int, column: int, row_line: int, area: Ints, height: Ints
-) -> None:
+def ring_end(rings: Ints, ring: int, sign: int, column: int, row_line: int, area: Ints, height: Ints) -> None:
     """Add the vertical end of a run to a ring: its length, and the signed area to its left."""
     rings[ring, RING_LENGTH] += upright(height, row_line, column)
     rings[ring, RING_AREA] += sign * span(area, row_line, 0, column)
@@ -299,53 +166,53 @@ def join_rings(
     enclose a gap, which closes or opens there; the outer ends of a chain of pairs continue downwards.
     """
     for j in range(n_lower):
-        lower[j, LEFT_RING] = -1
+        lower[LEFT_RING, j] = -1
     for i in range(n_upper):
-        upper[i, PAIRS], upper[i, LAST_BELOW] = 0, -1
+        upper[PAIRS, i], upper[LAST_BELOW, i] = 0, -1
     for t in range(n_pairs):
-        upper[pairs[t, 0], PAIRS] += 1
+        upper[PAIRS, pairs[t, 0]] += 1
     for i in range(n_upper):
-        if upper[i, LABEL] >= 0 and upper[i, PAIRS] == 0:
-            ring = join(ring_parent, upper[i, LEFT_RING], upper[i, RIGHT_RING])
-            rings[ring, RING_LENGTH] += span(width, edge_line, upper[i, START], upper[i, STOP])
+        if upper[LABEL, i] >= 0 and upper[PAIRS, i] == 0:
+            ring = join(ring_parent, upper[LEFT_RING, i], upper[RIGHT_RING, i])
+            rings[ring, RING_LENGTH] += span(width, edge_line, upper[START, i], upper[STOP, i])
     for t in range(n_pairs):
         i, j = pairs[t, 0], pairs[t, 1]
         if t > 0 and pairs[t - 1, 1] == j:
             i0 = pairs[t - 1, 0]
-            ring = join(ring_parent, upper[i0, RIGHT_RING], upper[i, LEFT_RING])
-            here, there = upper[i0, STOP], upper[i, START]
-        elif upper[i, LAST_BELOW] >= 0:
-            j0 = upper[i, LAST_BELOW]
-            ring = new_ring(rings, ring_parent, state, lower[j, LABEL])
-            lower[j0, RIGHT_RING] = lower[j, LEFT_RING] = ring
-            here, there = lower[j0, STOP], lower[j, START]
+            ring = join(ring_parent, upper[RIGHT_RING, i0], upper[LEFT_RING, i])
+            here, there = upper[STOP, i0], upper[START, i]
+        elif upper[LAST_BELOW, i] >= 0:
+            j0 = upper[LAST_BELOW, i]
+            ring = new_ring(rings, ring_parent, state, lower[LABEL, j])
+            lower[RIGHT_RING, j0] = lower[LEFT_RING, j] = ring
+            here, there = lower[STOP, j0], lower[START, j]
         else:
-            ring = find(ring_parent, upper[i, LEFT_RING])
-            lower[j, LEFT_RING] = ring
-            here, there = upper[i, START], lower[j, START]
+            ring = find(ring_parent, upper[LEFT_RING, i])
+            lower[LEFT_RING, j] = ring
+            here, there = upper[START, i], lower[START, j]
         rings[ring, RING_LENGTH] += span(width, edge_line, min(here, there), max(here, there))
-        upper[i, PAIRS] -= 1
-        upper[i, LAST_BELOW] = j
-        if upper[i, PAIRS] == 0 and (t + 1 == n_pairs or pairs[t + 1, 1] != j):
-            ring = find(ring_parent, upper[i, RIGHT_RING])
-            lower[j, RIGHT_RING] = ring
-            here, there = upper[i, STOP], lower[j, STOP]
+        upper[PAIRS, i] -= 1
+        upper[LAST_BELOW, i] = j
+        if upper[PAIRS, i] == 0 and (t + 1 == n_pairs or pairs[t + 1, 1] != j):
+            ring = find(ring_parent, upper[RIGHT_RING, i])
+            lower[RIGHT_RING, j] = ring
+            here, there = upper[STOP, i], lower[STOP, j]
             rings[ring, RING_LENGTH] += span(width, edge_line, min(here, there), max(here, there))
     for j in range(n_lower):
-        if lower[j, LABEL] < 0:
+        if lower[LABEL, j] < 0:
             continue
-        if lower[j, LEFT_RING] < 0:
-            ring = new_ring(rings, ring_parent, state, lower[j, LABEL])
-            lower[j, LEFT_RING] = lower[j, RIGHT_RING] = ring
-            rings[ring, RING_LENGTH] += span(width, edge_line, lower[j, START], lower[j, STOP])
-        ring_end(rings, lower[j, LEFT_RING], -1, lower[j, START], row_line, area, height)
-        ring_end(rings, lower[j, RIGHT_RING], 1, lower[j, STOP], row_line, area, height)
+        if lower[LEFT_RING, j] < 0:
+            ring = new_ring(rings, ring_parent, state, lower[LABEL, j])
+            lower[LEFT_RING, j] = lower[RIGHT_RING, j] = ring
+            rings[ring, RING_LENGTH] += span(width, edge_line, lower[START, j], lower[STOP, j])
+        ring_end(rings, lower[LEFT_RING, j], -1, lower[START, j], row_line, area, height)
+        ring_end(rings, lower[RIGHT_RING, j], 1, lower[STOP, j], row_line, area, height)
 
 
 @kernel
 def new_ring(rings: Ints, ring_parent: Ints, state: Ints, label: int) -> int:
     """Begin a ring of a piece."""
-    ring = state[N_RINGS]
+    ring = int(state[N_RINGS])
     state[N_RINGS] = ring + 1
     ring_parent[ring] = ring
     rings[ring, RING_LENGTH] = rings[ring, RING_AREA] = 0
@@ -367,8 +234,7 @@ def label_rows(
     corner: Ints,
     area_line: Ints,
     edge_line: Ints,
-    eight: bool,
-    with_rings: bool,
+    reach: int,
     labels: Ints,
     parent: Ints,
     links: Ints,
@@ -386,48 +252,127 @@ def label_rows(
     codes, zones, cuts : the strip; the last two may be empty
     cuts_before : cuts of the row above the strip; empty without barriers
     corner : by line of edges, what one corner shortens a smoothed outline
+    reach : 1 where cells that meet at a corner are neighbours, else 0
+    rings, ring_parent : empty where outlines are not followed
     upper, lower : runs of the last row, and room for the next; exchanged row by row, the last one in `upper`
     """
-    reach = 1 if eight else 0
+    zoned, barred, with_rings, columns = zones.size > 0, cuts.size > 0, len(rings) > 0, codes.shape[1]
+    n_upper, n_labels, n_links = state[N_RUNS], state[N_LABELS], state[N_LINKS]
+    begin = row
     while row < codes.shape[0]:
-        n_lower, n_upper = find_runs(codes, zones, cuts, row, lower), state[N_RUNS]
+        n_lower = find_runs(codes, zones, cuts, row, lower)
         if (
-            state[N_LABELS] + n_lower > labels.shape[0]
-            or state[N_LINKS] + n_upper + 2 * n_lower > links.shape[0]
+            n_labels + n_lower > labels.shape[0]
+            or n_links + n_upper + 2 * n_lower > links.shape[0]
             or (with_rings and state[N_RINGS] + 2 * n_lower > rings.shape[0])
         ):
-            return row
+            break
         line, above, below = area_line[row], edge_line[row], edge_line[row + 1]
-        corners = 2 * (corner[above] + corner[below])
-        cuts_above = cuts[row - 1] if row > 0 and cuts.size > 0 else cuts_before
+        cuts_above = cuts[row - 1] if row > 0 and barred else cuts_before
         first, n_pairs = 0, 0
         for j in range(n_lower):
-            run = lower[j]
-            while upper[first, STOP] + reach <= run[START]:
+            start, stop, kind, place = lower[START, j], lower[STOP, j], lower[KIND, j], lower[PLACE, j]
+            while upper[STOP, first] + reach <= start:
                 first += 1
-            n_pairs = join_above(
-                run, upper, first, n_upper, first_row + row, cuts_above, width, above, corner[above], eight,
-                labels, parent, links, pairs, n_pairs, j, state,
-            )  # fmt: skip
-            if run[LABEL] >= 0:
-                add_run(run, first_row + row, area, height, width, line, above, below, corners, labels)
-            if j > 0 and (run[LABEL] >= 0 or lower[j - 1, LABEL] >= 0):
-                cut = cuts.size > 0 and cuts[row, run[START] - 1] & CUT_RIGHT > 0
-                size = upright(height, line, run[START])
-                meet_beside(lower[j - 1], run, cut, size, labels, links, state)
-        if lower[0, LABEL] >= 0:
-            labels[lower[0, LABEL], BORDER] += upright(height, line, 0)
-        if lower[n_lower - 1, LABEL] >= 0:
-            labels[lower[n_lower - 1, LABEL], BORDER] += upright(height, line, codes.shape[1])
+            label, edge, border, zone_edge, barrier, equal = -1, 0, 0, 0, 0, 0
+            first_link = n_links
+            i = first
+            while i < n_upper and upper[START, i] < stop + reach:
+                low, high = max(start, upper[START, i]), min(stop, upper[STOP, i])
+                if upper[KIND, i] != kind:
+                    if high > low:
+                        if upper[KIND, i] < 0:
+                            border += span(width, above, low, high)
+                        elif kind < 0:
+                            labels[upper[LABEL, i], BORDER] += span(width, above, low, high)
+                elif kind >= 0:
+                    met = span(width, above, low, high) if high > low else 0
+                    is_open = True
+                    if barred:
+                        is_open = linked(cuts_above, upper[START, i], upper[STOP, i], start, stop, reach)
+                        closed = barred_length(cuts_above, width, above, low, high)
+                        labels[upper[LABEL, i], BARRIER] += closed
+                        barrier += closed
+                        met -= closed
+                    if zoned and upper[PLACE, i] != place:
+                        labels[upper[LABEL, i], ZONE_EDGE] += met
+                        zone_edge += met
+                        if is_open:
+                            links[n_links, 0] = upper[LABEL, i]
+                            n_links += 1
+                    else:
+                        edge -= 2 * met
+                        if is_open:
+                            root = find(parent, upper[LABEL, i])
+                            if label < 0 or label == root:
+                                label = root
+                            else:
+                                low_root, high_root = min(label, root), max(label, root)
+                                parent[high_root] = low_root
+                                label = low_root
+                            if high > low:
+                                equal += int(upper[START, i] == start) + int(upper[STOP, i] == stop)
+                            if with_rings:
+                                pairs[n_pairs, 0], pairs[n_pairs, 1] = i, j
+                                n_pairs += 1
+                i += 1
+            lower[LABEL, j] = -1
+            if kind >= 0:
+                if label < 0:
+                    label = n_labels
+                    n_labels += 1
+                    parent[label] = label
+                    for k in range(labels.shape[1]):
+                        labels[label, k] = 0
+                    labels[label, CLASS], labels[label, ZONE] = kind, place
+                    labels[label, FIRST_ROW], labels[label, FIRST_COLUMN] = first_row + row, start
+                    labels[label, LEFT], labels[label, RIGHT] = start, stop - 1
+                for k in range(first_link, n_links):
+                    links[k, 1] = label
+                lower[LABEL, j] = label
+                left_side, right_side = upright(height, line, start), upright(height, line, stop)
+                edge += (
+                    left_side + right_side + span(width, above, start, stop) + span(width, below, start, stop)
+                )
+                if stop == columns:
+                    border += right_side
+                if j == 0 or lower[KIND, j - 1] < 0:
+                    border += left_side
+                elif lower[KIND, j - 1] == kind:
+                    beside = lower[LABEL, j - 1]
+                    if barred and cuts[row, start - 1] & CUT_RIGHT:
+                        labels[beside, BARRIER] += left_side
+                        barrier += left_side
+                    else:
+                        labels[beside, ZONE_EDGE] += left_side
+                        zone_edge += left_side
+                        links[n_links, 0], links[n_links, 1] = beside, label
+                        n_links += 1
+                labels[label, LAST_ROW] = first_row + row
+                labels[label, LEFT] = min(labels[label, LEFT], start)
+                labels[label, RIGHT] = max(labels[label, RIGHT], stop - 1)
+                labels[label, CELLS] += stop - start
+                labels[label, AREA] += span(area, line, start, stop)
+                labels[label, EDGE] += edge
+                labels[label, BORDER] += border
+                labels[label, CORNERS] += 2 * (corner[above] + corner[below] - equal * corner[above])
+                if zoned:
+                    labels[label, ZONE_EDGE] += zone_edge
+                if barred:
+                    labels[label, BARRIER] += barrier
+            elif j > 0 and lower[LABEL, j - 1] >= 0:
+                labels[lower[LABEL, j - 1], BORDER] += upright(height, line, start)
         if with_rings:
             join_rings(
                 upper, n_upper, lower, n_lower, pairs, n_pairs, width, above, area, height, line,
                 rings, ring_parent, state,
             )  # fmt: skip
-        for j in range(n_lower):
-            upper[j] = lower[j]
-        state[N_RUNS] = n_lower
+        upper, lower = lower, upper
+        n_upper = n_lower
         row += 1
+    if (row - begin) % 2 == 1:
+        lower[:, :n_upper] = upper[:, :n_upper]
+    state[N_RUNS], state[N_LABELS], state[N_LINKS] = n_upper, n_labels, n_links
     return row
 
 
@@ -446,17 +391,15 @@ def settle(labels: Ints, parent: Ints, n: int) -> None:
 
 
 @kernel
-def settle_rings(
-    rings: Ints, ring_parent: Ints, labels: Ints, parent: Ints, runs: Ints, state: Ints
-) -> None:
+def settle_rings(rings: Ints, ring_parent: Ints, labels: Ints, parent: Ints, runs: Ints, state: Ints) -> None:
     """Give finished rings to their pieces: the one that runs round it, and holes; keep the others."""
     n = state[N_RINGS]
     number = np.full(n, -1, np.int64)
     for j in range(state[N_RUNS]):
-        if runs[j, LABEL] >= 0:
+        if runs[LABEL, j] >= 0:
             for end in (LEFT_RING, RIGHT_RING):
-                runs[j, end] = find(ring_parent, runs[j, end])
-                number[runs[j, end]] = 0
+                runs[end, j] = find(ring_parent, runs[end, j])
+                number[runs[end, j]] = 0
     kept = 0
     for i in range(n):
         root = ring_parent[ring_parent[i]]
@@ -481,8 +424,8 @@ def settle_rings(
     for i in range(kept):
         ring_parent[i] = i
     for j in range(state[N_RUNS]):
-        if runs[j, LABEL] >= 0:
-            runs[j, LEFT_RING], runs[j, RIGHT_RING] = number[runs[j, LEFT_RING]], number[runs[j, RIGHT_RING]]
+        if runs[LABEL, j] >= 0:
+            runs[LEFT_RING, j], runs[RIGHT_RING, j] = number[runs[LEFT_RING, j]], number[runs[RIGHT_RING, j]]
     state[N_RINGS] = kept
 
 
@@ -503,9 +446,7 @@ def group_pieces(parent: Ints, n: int, group: Ints, n_live: int, links: Ints, n_
 
 
 @kernel
-def retire(
-    labels: Ints, parent: Ints, runs: Ints, rings: Ints, state: Ints
-) -> tuple[Ints, Ints, Ints]:
+def retire(labels: Ints, parent: Ints, runs: Ints, rings: Ints, state: Ints) -> tuple[Ints, Ints, Ints]:
     """Take out the settled pieces that no run of the last row belongs to; renumber the others in order.
 
     Returns
@@ -515,8 +456,8 @@ def retire(
     n = state[N_LABELS]
     number = np.full(n, -1, np.int64)
     for j in range(state[N_RUNS]):
-        if runs[j, LABEL] >= 0:
-            number[parent[runs[j, LABEL]]] = 0
+        if runs[LABEL, j] >= 0:
+            number[parent[runs[LABEL, j]]] = 0
     stay, go = 0, 0
     for i in range(n):
         if parent[i] == i:
@@ -540,8 +481,8 @@ def retire(
             done_labels[go] = i
             go += 1
     for j in range(state[N_RUNS]):
-        if runs[j, LABEL] >= 0:
-            runs[j, LABEL] = number[parent[runs[j, LABEL]]]
+        if runs[LABEL, j] >= 0:
+            runs[LABEL, j] = number[parent[runs[LABEL, j]]]
     for k in range(state[N_RINGS]):
         rings[k, RING_LABEL] = number[rings[k, RING_LABEL]]
     for i in range(stay):

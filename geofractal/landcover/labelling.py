@@ -107,17 +107,21 @@ class _Labeller:
 
     def __init__(self, strip: Strip, *, eight: bool, outlines: bool) -> None:
         columns = strip.codes.shape[1]
-        self.eight, self.outlines, self.zoned = eight, outlines, strip.zones is not None
-        self.upper = np.zeros((columns + 1, kernels.RUN), np.int64)
+        self.reach, self.outlines, self.zoned = int(eight), outlines, strip.zones is not None
+        self.upper = np.zeros((kernels.RUN, columns + 1), np.int64)
         self.lower, self.pairs = self.upper.copy(), np.zeros((2 * columns + 2, 2), np.int64)
-        self.upper[0, :5] = (0, columns, NOT_COVERED, 0, -1)  # above the map nothing is covered
+        self.upper[:5, 0] = (0, columns, NOT_COVERED, 0, -1)  # above the map nothing is covered
         self.state = np.array([0, 1, 0, 0], np.int64)
-        self.capacity = max(LABELS, 4 * columns)
+        self.capacity = max(LABELS, columns)
         self.labels, self.parent = np.empty((self.capacity, len(LINES)), np.int64), self._room()
         rings = self.capacity if outlines else 0
         self.rings, self.ring_parent = np.empty((rings, 3), np.int64), np.empty(rings, np.int64)
         self.links = np.empty((self.capacity if self.zoned else 3 * columns + 3, 2), np.int64)
-        self.group, self.pending, self.pending_of = self._room(0), np.empty((0, len(LINES)), np.int64), self._room(0)
+        self.group, self.pending, self.pending_of = (
+            self._room(0),
+            np.empty((0, len(LINES)), np.int64),
+            self._room(0),
+        )
         self.cuts_before = np.zeros(columns if strip.cuts is not None else 0, np.uint8)
         self.end: tuple[int, CellSizes] = (0, strip.sizes)
 
@@ -142,7 +146,7 @@ class _Labeller:
         below = CellSizes(
             sizes.area, sizes.height, sizes.width, sizes.area_line[-1:], np.repeat(sizes.edge_line[-1:], 2)
         )
-        columns = self.upper.shape[0] - 1
+        columns = self.upper.shape[1] - 1
         codes = np.full((1, columns), NOT_COVERED, np.int16)
         zones = np.full((1, columns), OUTSIDE, np.int32) if self.zoned else np.empty((0, 0), np.int32)
         cuts = np.zeros((1, columns) if self.cuts_before.size else (0, 0), np.uint8)
@@ -161,7 +165,7 @@ class _Labeller:
         while row < len(codes):
             row = kernels.label_rows(
                 codes, zones, cuts, self.cuts_before, row, first_row, sizes.area, sizes.height, sizes.width,
-                corner, sizes.area_line, sizes.edge_line, self.eight, self.outlines, self.labels, self.parent,
+                corner, sizes.area_line, sizes.edge_line, self.reach, self.labels, self.parent,
                 self.links, self.rings, self.ring_parent, self.upper, self.lower, self.pairs, self.state,
             )  # fmt: skip
             if row == stuck:
@@ -182,7 +186,9 @@ class _Labeller:
         n, n_links = int(self.state[kernels.N_LABELS]), int(self.state[kernels.N_LINKS])
         kernels.settle(self.labels, self.parent, n)
         if self.outlines:
-            kernels.settle_rings(self.rings, self.ring_parent, self.labels, self.parent, self.upper, self.state)
+            kernels.settle_rings(
+                self.rings, self.ring_parent, self.labels, self.parent, self.upper, self.state
+            )
         group = self._room(n)
         if self.zoned:
             group[: len(self.group)] = self.group
@@ -214,7 +220,10 @@ class _Labeller:
         part_of = place[np.searchsorted(whole_of, parts_of)]
         by_patch = np.lexsort((parts[:, _AT["zone"]], part_of))
         return Finished(
-            PatchTable(whole[order]), PatchTable(_in_order(done)), PatchTable(parts[by_patch]), part_of[by_patch]
+            PatchTable(whole[order]),
+            PatchTable(_in_order(done)),
+            PatchTable(parts[by_patch]),
+            part_of[by_patch],
         )
 
 
@@ -240,7 +249,10 @@ def merge(lines: Ints, of: Ints, zone: Ints | None = None) -> tuple[Ints, Ints, 
 
 
 def _order(lines: Ints) -> Ints:
-    return np.lexsort((lines[:, _AT["first_column"]], lines[:, _AT["first_row"]], lines[:, _AT["last_row"]]))
+    order: Ints = np.lexsort(
+        (lines[:, _AT["first_column"]], lines[:, _AT["first_row"]], lines[:, _AT["last_row"]])
+    )
+    return order
 
 
 def _in_order(lines: Ints) -> Ints:
@@ -254,4 +266,5 @@ def corner_savings(sizes: CellSizes) -> Ints:
     height = sizes.height.mean(axis=1)
     lines[sizes.edge_line[:-1]] = height[sizes.area_line]
     lines[sizes.edge_line[-1]] = height[sizes.area_line[-1]]
-    return np.rint((width + lines - np.hypot(width, lines)) / 2).astype(np.int64)
+    saved: Ints = np.rint((width + lines - np.hypot(width, lines)) / 2).astype(np.int64)
+    return saved
