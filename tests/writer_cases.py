@@ -45,7 +45,9 @@ class Answers:
     def value(self, column, row):
         if row % 4 == 3:
             return None
-        return {"number": 1 + row / 7, "count": row * 10, "text": f"Übung {row}", "flag": row % 2 == 0}[column.kind]
+        return {"number": 1 + row / 7, "count": row * 10, "text": f"Übung {row}", "flag": row % 2 == 0}[
+            column.kind
+        ]
 
     def column(self, column):
         return [self.value(column, row) for row in range(self.n_rows)]
@@ -57,7 +59,10 @@ class Answers:
 def lines(count):
     """Return wavy lines whose coordinates use all digits of a double."""
     rng = np.random.default_rng(count)
-    return [shapely.LineString(np.cumsum(rng.normal(size=(4, 2)), axis=0) + (10, 50)) for _ in range(count)]
+    return [
+        shapely.LineString(np.cumsum(rng.normal(size=(4, 2)), axis=0) + np.array([10, 50]))
+        for _ in range(count)
+    ]
 
 
 def make(path, geometries, columns, *, crs="EPSG:4326", kind="Unknown", layer="shore", marks=None, **options):
@@ -71,9 +76,12 @@ def make(path, geometries, columns, *, crs="EPSG:4326", kind="Unknown", layer="s
         "geojson": "GeoJSON",
         "geojson-lines": "GeoJSONSeq",
     }[driver_of(path)]
-    defaults = {"FlatGeobuf": {"SPATIAL_INDEX": "NO"}, "ESRI Shapefile": {"ENCODING": "UTF-8"}}
-    if driver == "GeoJSONSeq":
-        defaults[driver] = {"COORDINATE_PRECISION": "17"}
+    defaults = {
+        "ESRI Shapefile": {"ENCODING": "UTF-8"},
+        "FlatGeobuf": {"SPATIAL_INDEX": "NO"},
+        "GeoJSON": {"SIGNIFICANT_FIGURES": "17"},
+        "GeoJSONSeq": {"COORDINATE_PRECISION": "17"},
+    }
     marks = marks or {}
     fields = [pa.field(name, array.type, metadata=marks.get(name)) for name, array in columns.items()]
     fields.append(pa.field("wkb", pa.binary(), metadata={"ARROW:extension:name": "geoarrow.wkb"}))
@@ -88,7 +96,7 @@ def make(path, geometries, columns, *, crs="EPSG:4326", kind="Unknown", layer="s
         crs=crs,
         **{**defaults.get(driver, {}), **options},
     )
-    return layer_info(path, layer=layer if driver == "GPKG" else None)
+    return layer_info(path, layer=layer if driver == "GPKG" else None, need_crs=crs is not None)
 
 
 def as_wkb(geometries):
@@ -111,9 +119,10 @@ def read_rows(path, layer=None, **options):
         table = pq.read_table(path)
         wkb = table.column(table.num_columns - 1).to_pylist()
         return {name: table[name].to_pylist() for name in table.schema.names[:-1]}, wkb
-    with pyogrio.raw.open_arrow(
-        path, layer=layer, use_pyarrow=True, datetime_as_string=True, **options
-    ) as (_, reader):
+    with pyogrio.raw.open_arrow(path, layer=layer, use_pyarrow=True, datetime_as_string=True, **options) as (
+        _,
+        reader,
+    ):
         table = reader.read_all()
     wkb = table.column(table.num_columns - 1).to_pylist()
     return {name: table[name].to_pylist() for name in table.schema.names[:-1]}, wkb

@@ -16,6 +16,7 @@ import pyogrio.raw
 
 from geofractal.errors import LayerError, SourceError
 from geofractal.reader.layers import LayerInfo, driver_of, kind_of
+from geofractal.reader.unmerged import file_to_open
 
 _DRIVERS = {
     "geopackage": "GPKG",
@@ -33,7 +34,7 @@ def layer_names(path: Path) -> tuple[str, ...]:
     if driver_of(path) == "shapefile":
         _check_shapefile(path, path.stem)
     with _reading(path):
-        return tuple(name for name, kind in pyogrio.list_layers(path) if kind is not None)
+        return tuple(name for name, kind in pyogrio.list_layers(file_to_open(path)) if kind is not None)
 
 
 def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
@@ -187,7 +188,7 @@ def _zipped(path: Path) -> dict[str, str]:
 
 def _target(path: Path, layer: str) -> Path | str:
     if path.suffix.lower() != ".zip":
-        return path
+        return file_to_open(path)
     return f"/vsizip/{{{path.resolve()}}}/{_zipped(path)[layer]}"
 
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import shutil
 import sqlite3
 from collections.abc import Iterator, Sequence
 from contextlib import closing
@@ -11,6 +10,7 @@ from typing import Any
 
 from geofractal.errors import OutputError
 from geofractal.measure import Column
+from geofractal.reader.unmerged import copy_merged, file_to_open
 from geofractal.reader.vector import LayerInfo
 from geofractal.writer.commit import advice
 from geofractal.writer.rows import Progress, Results
@@ -24,7 +24,8 @@ def can_attach(info: LayerInfo) -> bool:
     if info.driver != "geopackage" or not info.fid_column:
         return False
     # immutable: a database in WAL mode is not touched, not even by files beside it
-    with closing(sqlite3.connect(f"{info.path.resolve().as_uri()}?immutable=1", uri=True)) as database:
+    address = f"{file_to_open(info.path).resolve().as_uri()}?immutable=1"
+    with closing(sqlite3.connect(address, uri=True)) as database:
         kind = database.execute("SELECT type FROM sqlite_master WHERE name = ? COLLATE NOCASE", [info.layer])
         keys = database.execute(
             "SELECT name, type FROM pragma_table_info(?) WHERE pk", [info.layer]
@@ -50,7 +51,7 @@ def attach(
         The copy cannot be written, or holds other rows than were measured.
     """
     try:
-        _copy(info.path, part)
+        copy_merged(info.path, part)
         with closing(sqlite3.connect(part, isolation_level=None)) as database:
             _attach(database, info, results, columns, progress)
     except sqlite3.Error as error:
@@ -58,15 +59,6 @@ def attach(
             f"{part.parent}: layer {info.layer!r} of {info.path} could not get its columns ({error}); "
             f"{advice(part)}"
         ) from error
-
-
-def _copy(source: Path, part: Path) -> None:
-    """Copy a database with what it keeps beside itself; the source's own files are only read."""
-    for suffix in ("-wal", "-journal"):
-        beside = source.with_name(source.name + suffix)
-        if beside.exists() and beside.stat().st_size:
-            shutil.copyfile(beside, part.with_name(part.name + suffix))
-    shutil.copyfile(source, part)
 
 
 def _attach(
@@ -77,11 +69,6 @@ def _attach(
     progress: Progress | None,
 ) -> None:
     table = _quoted(info.layer)
-    (mode,) = database.execute("PRAGMA journal_mode = DELETE").fetchone()
-    if mode != "delete":
-        raise OutputError(
-            f"{info.path}: its changes in WAL mode cannot be merged in the copy; close it elsewhere"
-        )
     database.execute("PRAGMA journal_mode = OFF")  # the copy is thrown away if anything fails
     database.execute("PRAGMA synchronous = OFF")
     database.execute("BEGIN")

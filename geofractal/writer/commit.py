@@ -12,6 +12,7 @@ from pathlib import Path
 
 from geofractal import interrupt
 from geofractal.errors import OutputError
+from geofractal.reader.unmerged import changes_beside
 
 SHAPEFILE_PARTS = (".shx", ".dbf", ".prj", ".cpg")
 """What is published beside a ``.shp``."""
@@ -81,13 +82,11 @@ def _reason(target: Path, error: OSError) -> str:
 
 def _refuse_edited(target: Path) -> None:
     """Refuse a database that holds changes of another program beside its file: a rename would mix them up."""
-    for suffix in ("-wal", "-journal"):
-        beside = target.with_name(target.name + suffix)
-        if beside.exists() and beside.stat().st_size:
-            raise OutputError(
-                f"{target}: another program is editing the earlier output ({beside.name} is not empty); "
-                "close it there, or choose another output folder"
-            )
+    for beside in changes_beside(target):
+        raise OutputError(
+            f"{target}: another program is editing the earlier output ({beside.name} is not empty); "
+            "close it there, or choose another output folder"
+        )
 
 
 def _rename(part: Path, target: Path, stem: str) -> None:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -48,6 +48,7 @@ def write_layer(
     format: str,  # noqa: A002 - the word of the batch file
     *,
     progress: Progress | None = None,
+    confirm: Callable[[], None] | None = None,
 ) -> Written:
     """Write a copy of a layer with its new columns; every row is kept, in order.
 
@@ -64,6 +65,7 @@ def write_layer(
     target : the file to write, with an ending of its format
     format : one of `SUFFIXES`
     progress : called with the number of rows done since the last call
+    confirm : called once the copy is whole; what it raises keeps the copy from being published
 
     Raises
     ------
@@ -93,6 +95,8 @@ def write_layer(
                 f"{target}: {max(rows, 0)} of {info.features} rows can be read from what was written, so it "
                 f"is not kept; {advice(target)}"
             )
+        if confirm is not None:
+            confirm()
         beside = []
         if format == "shapefile":
             beside.append(write_field_name_table(target, field_names(info, columns, format), columns))

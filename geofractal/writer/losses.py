@@ -44,12 +44,13 @@ def expected_losses(info: LayerInfo, columns: Sequence[Column], format: str) -> 
     refuse_clashes(info, columns)
     if format == info.driver == "geoparquet" or (format == "geopackage" and can_attach(info)):
         return tuple(_of_attached(info))
-    _refuse_impossible(info, format)
-    found = [*_of_layer(info, format), *_of_names(info, columns, format)]
-    fields = [*info.fields, *((column.name, str(ARROW_TYPES[column.kind])) for column in columns)]
-    for name, kind in fields:
+    found = [*_of_geometry(info, format), *_of_layer(info, format), *_of_names(info, columns, format)]
+    for name, kind in info.fields:
         whats = _of_parquet_column(kind) if format == "geoparquet" else _of_column(info, kind, format)
         found += [Loss(name, what) for what in whats]
+    if format == "shapefile":
+        for column in columns:
+            found += [Loss(column.name, what) for what in _of_shapefile(str(ARROW_TYPES[column.kind]))]
     return tuple(found)
 
 
@@ -61,10 +62,10 @@ def _of_attached(info: LayerInfo) -> Iterator[Loss]:
         )
 
 
-def _refuse_impossible(info: LayerInfo, layout: str) -> None:
+def _of_geometry(info: LayerInfo, layout: str) -> Iterator[Loss]:
     named = f"{info.path}: layer {info.layer!r}"
-    if layout in {"shapefile", "flatgeobuf"}:
-        declared_type(survey(info), layout, named)
+    if layout in {"shapefile", "flatgeobuf"} and declared_type(survey(info), layout, named)[1]:
+        yield Loss("", "single geometries become multi-part ones of one part")
     if layout == "geojson-lines" and not _is_wgs84(info):
         raise OutputError(
             f"{named}: line-delimited GeoJSON holds longitudes and latitudes of WGS 84 only, and coordinates "

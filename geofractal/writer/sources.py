@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import NamedTuple
 
 from geofractal.errors import OutputError, SourceChangedError, SourceError
+from geofractal.reader.unmerged import changes_beside
 from geofractal.writer.commit import SHAPEFILE_PARTS
 
 _CHUNK = 1 << 22
@@ -32,11 +33,7 @@ def source_files(path: Path) -> tuple[Path, ...]:
     if path.suffix.lower() == ".shp" and path.parent.is_dir():
         parts = {*SHAPEFILE_PARTS}
         beside = [p for p in path.parent.iterdir() if p.stem == path.stem and p.suffix.lower() in parts]
-    for suffix in ("-wal", "-journal"):
-        changes = path.with_name(path.name + suffix)
-        if changes.exists() and changes.stat().st_size:
-            beside.append(changes)
-    return (path, *sorted(beside))
+    return (path, *sorted(beside), *changes_beside(path))
 
 
 def fingerprint(paths: Path | Iterable[Path]) -> Fingerprint:

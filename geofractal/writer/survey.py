@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 import pyarrow as pa
@@ -67,11 +68,17 @@ class Survey:
 
 
 def survey(info: LayerInfo, *, times: Sequence[str] = ()) -> Survey:
-    """Read a layer once and return what it holds."""
+    """Return what a layer holds; it is read once as long as its file stays the same."""
+    stat = info.path.stat()
+    return _survey(info, tuple(times), (stat.st_size, stat.st_mtime_ns))
+
+
+@lru_cache(maxsize=32)
+def _survey(info: LayerInfo, times: tuple[str, ...], _state: tuple[int, int]) -> Survey:
     types: set[int] = set()
     found: dict[str, set[bool]] = {name: set() for name in times}
     rising, last = True, -1
-    for batch in stream(info, columns=tuple(times)):
+    for batch in stream(info, columns=times):
         types |= type_codes(batch.wkb)
         if batch.fids is not None:
             rising = rising and bool(last < batch.fids[0] and np.all(np.diff(batch.fids) > 0))
