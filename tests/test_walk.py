@@ -15,6 +15,9 @@ from geofractal.kernels.walk import walk_ladders
 EARTH = 6_371_000.0
 
 
+NO_LIMIT = 2**62
+
+
 @dataclass
 class Walked:
     length: np.ndarray
@@ -23,7 +26,7 @@ class Walked:
     left_out: np.ndarray
 
 
-def walk(parts, rulers, *, starts=1, enough=10**9, closed=False, radius=math.inf):
+def walk(parts, rulers, *, starts=1, enough=NO_LIMIT, closed=False, radius=math.inf):
     """Walk one feature made of `parts` with each ruler."""
     xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
     offsets = np.concatenate(([0], np.cumsum([len(p) for p in parts])))
@@ -169,13 +172,14 @@ def noisy_ring(seed, count=200):
 
 
 @pytest.mark.parametrize("ruler", [0.3, 1.0, 4.0, 9.0])
-def test_a_ring_is_the_mean_of_evenly_spaced_starts_from_its_outermost_vertex(ruler):
+def test_a_ring_is_walked_both_ways_from_evenly_spaced_starts_that_begin_at_its_outermost_vertex(ruler):
     ring = noisy_ring(1)
     steps = np.linalg.norm(np.diff(ring, axis=0), axis=1)
     middle = (steps[:, None] * (ring[1:] + ring[:-1]) / 2).sum(axis=0) / steps.sum()
     outermost = np.argmax(np.linalg.norm(ring[:-1] - middle, axis=1))
     turned = np.vstack([ring[outermost:-1], ring[: outermost + 1]])
-    expected = [plain_length(ring_from(turned, k / 16), ruler) for k in range(16)]
+    paths = [ring_from(turned, k / 16) for k in range(16)]
+    expected = [plain_length(path, ruler) for way in (1, -1) for path in (p[::way] for p in paths)]
     found = walk([ring], ruler, starts=16, closed=True)
     assert found.length[0] == pytest.approx(np.mean(expected), rel=1e-9)
     assert found.spread[0] == pytest.approx(np.std(expected, ddof=1), abs=1e-8)
@@ -188,6 +192,14 @@ def test_a_ring_may_be_stored_from_any_vertex_and_either_way_round(shift):
     expected = walk([ring], 2.0, starts=16, closed=True).length[0]
     assert walk([turned], 2.0, starts=16, closed=True).length[0] == pytest.approx(expected, rel=1e-9)
     assert walk([turned[::-1]], 2.0, starts=16, closed=True).length[0] == pytest.approx(expected, rel=1e-9)
+
+
+@pytest.mark.parametrize(("enough", "starts"), [(0, 1), (90, 4), (NO_LIMIT, 16)])
+def test_further_starts_are_taken_until_there_are_steps_enough(enough, starts):
+    ring = noisy_ring(3)
+    found = walk([ring], 3.0, starts=16, enough=enough, closed=True)
+    assert 90 / 4 < found.steps[0] < 90 / 2
+    assert found.length[0] == walk([ring], 3.0, starts=starts, closed=True).length[0]
 
 
 def test_a_ring_that_some_start_never_leaves_has_no_length():

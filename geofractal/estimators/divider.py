@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     from geofractal.measure import Bools, Floats, Lines, Values
 
 RING_STARTS = 16
-"""Evenly spaced starts of a ring: single starts on real shores scatter by almost 2 %."""
+"""Evenly spaced starts of a ring, each walked both ways: single walks of real shores scatter by 2 %."""
 
 ENOUGH_STEPS = 128
 """Steps that the walks of one ruler take together before further starts stop paying: walks from
@@ -179,7 +179,7 @@ def length_columns(ruler_m: float, index: int) -> tuple[Column, ...]:
             "km",
             f"length walked with a ruler of {number} m; null below the source's detail",
             "L(r) = r n + d: n whole steps of r, last straight distance d; open lines: mean of both"
-            f" directions; rings: mean of {RING_STARTS} evenly spaced starts",
+            f" directions; rings: from {RING_STARTS} evenly spaced starts each",
             "Mandelbrot 1967, Science 156:636-638",
         ),
     )

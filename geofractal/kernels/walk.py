@@ -32,46 +32,37 @@ _EDGE = (1 << _SHIFT) - 1
 
 
 @kernel
-def _ring_order(xy: Floats, first: int, last: int) -> tuple[int, int]:
-    """Find a starting vertex and a direction of a ring that do not depend on how its vertices were stored.
+def _gap(xy: Floats, i: int, j: int) -> float:
+    """Straight distance of two vertices."""
+    square = 0.0
+    for k in range(xy.shape[1]):
+        square += (xy[j, k] - xy[i, k]) ** 2
+    return math.sqrt(square)
 
-    The start is the vertex farthest from the centre of the outline, the direction anticlockwise (in
-    three dimensions: seen from outside the globe).
-    """
+
+@kernel
+def _outermost(xy: Floats, first: int, last: int) -> int:
+    """Find a ring's vertex farthest from its centre: a start that does not depend on how it is stored."""
     size = xy.shape[1]
     centre = np.zeros(3)
     total = 0.0
-    area = np.zeros(3)
-    a = np.zeros(3)
-    b = np.zeros(3)
     for i in range(first, last - 1):
-        square = 0.0
-        for k in range(size):
-            a[k] = xy[i, k] - xy[first, k]
-            b[k] = xy[i + 1, k] - xy[first, k]
-            square += (b[k] - a[k]) ** 2
-        step = math.sqrt(square)
+        step = _gap(xy, i, i + 1)
         total += step
-        for k in range(3):
-            centre[k] += step * (a[k] + b[k]) / 2
-        area[0] += a[1] * b[2] - a[2] * b[1]
-        area[1] += a[2] * b[0] - a[0] * b[2]
-        area[2] += a[0] * b[1] - a[1] * b[0]
+        for k in range(size):
+            centre[k] += step * ((xy[i, k] + xy[i + 1, k]) / 2 - xy[first, k])
     if total > 0:
         centre /= total
-    up = area[2]
-    if size == 3:
-        up = area[0] * xy[first, 0] + area[1] * xy[first, 1] + area[2] * xy[first, 2]
-    best = -1.0
+    farthest = -1.0
     origin = first
     for i in range(first, last - 1):
         square = 0.0
         for k in range(size):
             square += (xy[i, k] - xy[first, k] - centre[k]) ** 2
-        if square > best:
-            best = square
+        if square > farthest:
+            farthest = square
             origin = i
-    return origin, (1 if up >= 0 else -1)
+    return origin
 
 
 @kernel
@@ -87,8 +78,8 @@ def _line_order(xy: Floats, first: int, last: int) -> tuple[int, int]:
 
 @kernel
 def _order(xy: Floats, first: int, last: int, closed: bool) -> tuple[int, int]:
-    """First vertex and direction in which a part is taken, whichever way it is stored."""
-    return _ring_order(xy, first, last) if closed else _line_order(xy, first, last)
+    """First vertex and direction in which a part is taken."""
+    return (_outermost(xy, first, last), 1) if closed else _line_order(xy, first, last)
 
 
 @kernel
@@ -98,15 +89,6 @@ def _next(i: int, first: int, last: int, way: int, closed: bool) -> int:
     if closed and i == last - 1:
         return first
     return last - 2 if closed and i < first else i
-
-
-@kernel
-def _gap(xy: Floats, i: int, j: int) -> float:
-    """Straight distance of two vertices."""
-    square = 0.0
-    for k in range(xy.shape[1]):
-        square += (xy[j, k] - xy[i, k]) ** 2
-    return math.sqrt(square)
 
 
 @kernel
@@ -274,7 +256,7 @@ def _walk(
         j = _first_outside(path, boxes, bases, levels, k, stop, way, cx, cy, cz, near)
         if j < 0 and lap_left:
             lap_left = False
-            k, stop, on_segment = 1, start, False
+            k, stop, on_segment = (1 if way > 0 else len(path) - 2), start, False
         elif j < 0:
             break
         else:
@@ -325,25 +307,28 @@ def _arc(chord: float, radius: float) -> float:
 
 
 @kernel
-def _walk_through(
+def _walk_from(
     path: Floats,
     boxes: Floats,
     bases: Ints,
     levels: int,
     total: float,
     mark: int,
+    way: int,
     closed: bool,
     radius: float,
     ruler: float,
     chord: float,
 ) -> tuple[int, float]:
-    """Return steps and L(r) of a walk from vertex `mark`: around a ring, or to both ends of an open line."""
+    """Return steps and L(r) from vertex `mark`: around a ring one way, or to both ends of an open line."""
+    if closed:
+        steps, gap = _walk(path, boxes, bases, levels, total, mark, way, closed, chord)
+        return steps, ruler * steps + _arc(gap, radius)
     steps = 0
     rest = 0.0
-    for way in range(1, -2, -2):
-        last = len(path) - 1 if way > 0 else 0
-        if mark != last and (way > 0 or not closed):
-            taken, gap = _walk(path, boxes, bases, levels, total, mark, way, closed, chord)
+    for turn in range(1, -2, -2):
+        if mark != (len(path) - 1 if turn > 0 else 0):
+            taken, gap = _walk(path, boxes, bases, levels, total, mark, turn, closed, chord)
             steps += taken
             rest += _arc(gap, radius)
     return steps, ruler * steps + rest
@@ -361,33 +346,30 @@ def _walk_rung(
     ruler: float,
     enough: int,
 ) -> tuple[int, float, float, float]:
-    """Walk a part from its first start, and a line from its other end, then from as many as are needed.
+    """Walk a part both ways from its first start, then from as many further starts as are needed.
 
     Returns the number of walks, the mean and variance of their L(r), and their mean steps. No walk
-    counts where a line cannot be left behind by one step from each end, a ring from each start.
+    counts where one from an open line's end, or from any start of a ring, takes no step.
     """
     chord = _chord(ruler, radius)
     levels = bases.size - 1
-    walked = np.empty(len(marks) + 1)
-    if not chord > 0:
-        return 0, 0.0, 0.0, 0.0
-    n, walked[0] = _walk_through(path, boxes, bases, levels, total, marks[0], closed, radius, ruler, chord)
-    steps, count, possible = n, 1, n > 0
-    if not closed:
-        n, walked[1] = _walk_through(
-            path, boxes, bases, levels, total, len(path) - 1, closed, radius, ruler, chord
-        )
-        steps, count, possible = steps + n, 2, possible and n > 0
-    starts = min(len(marks), 3 - count)
-    while starts < len(marks) and starts * n < enough:
-        starts = min(2 * starts, len(marks))
-    stride = len(marks) // starts
-    s = 1
+    walked = np.empty(2 * len(marks))
+    starts, stride, s, steps, count = 1, 1, 0, 0, 0
+    possible = chord > 0
     while s < starts and possible:
-        n, walked[count] = _walk_through(
-            path, boxes, bases, levels, total, marks[s * stride], closed, radius, ruler, chord
-        )
-        steps, count, possible = steps + n, count + 1, n > 0 or not closed
+        for way in range(1, -2, -2):
+            mark = len(path) - 1 if s == 0 and way < 0 and not closed else marks[s * stride]
+            if closed or s == 0 or way > 0:
+                n, walked[count] = _walk_from(
+                    path, boxes, bases, levels, total, mark, way, closed, radius, ruler, chord
+                )
+                steps += n
+                count += 1
+                possible = possible and (n > 0 or (s > 0 and not closed))
+        if s == 0:
+            while starts < len(marks) and starts * (steps // count) < enough:
+                starts = min(2 * starts, len(marks))
+            stride = len(marks) // starts
         s += 1
     if not possible:
         return 0, 0.0, 0.0, 0.0
@@ -397,8 +379,7 @@ def _walk_rung(
     square = 0.0
     for s in range(count):
         square += (walked[s] - mean) ** 2
-    variance = square / (count - 1) if count > 1 else math.nan
-    return count, mean, variance, steps / count
+    return count, mean, square / (count - 1), steps / count
 
 
 @kernel
@@ -416,9 +397,11 @@ def walk_ladders(
 ) -> tuple[Floats, Floats, Floats, Floats]:
     """Walk every feature with every ruler of its own ladder.
 
-    An open line is walked from both ends, a ring around from one start; where one such walk takes
-    fewer than `enough_steps`, further starts are added, evenly spaced along the part, until
-    starts x steps reach that number. A further start of an open line is walked to both ends.
+    An open line is walked from both ends, a ring both ways around from its vertex farthest from its
+    centre. Where such a walk takes fewer than `enough_steps`, further starts are added, evenly spaced
+    along the part, until starts x steps reach that number: a ring is walked both ways from each, an
+    open line from each to both ends. (Walks the same way around soon fall into each other's steps,
+    whatever their start, so that one way alone may be off by more than its starts show.)
 
     A part is long enough for a ruler where a whole step can be taken from each end of an open line, or
     from every starting point of a ring. The lengths of such parts add up; of the others the length of
@@ -436,7 +419,7 @@ def walk_ladders(
     Returns
     -------
     length : (q,) mean walked length in metres; NaN where no part is long enough
-    spread : (q,) standard deviation of one walk over starts and directions; NaN where only one was made
+    spread : (q,) standard deviation of one walk over starts and directions
     steps : (q,) mean number of whole steps of a walk
     left_out : (q,) polyline length in metres of the parts that are not long enough
     """
