@@ -17,13 +17,13 @@ from numpy.typing import NDArray
 
 from geofractal.config.columns import prefixed
 from geofractal.config.models import MeasureRequest, Prepare
-from geofractal.errors import OutputError
 from geofractal.measure import Column, Ints, Lines, Values
 from geofractal.reader.geometry import PROBLEMS, read_lines
 from geofractal.reader.joining import join_parts
 from geofractal.reader.planes import Projector
 from geofractal.registry import columns_of, load_measure
 from geofractal.versions import code_digest
+from geofractal.writer.commit import in_plain_words
 from geofractal.writer.rows import ARROW_TYPES
 
 NOT_WANTED = "left out by the layer's where"
@@ -211,15 +211,10 @@ def measured_part(work: LayerWork, part: PartInput, folder: Path | None) -> pa.R
 def _keep(results: pa.RecordBatch, kept: Path) -> None:
     """Write a part's results beside their place and rename them into it when whole."""
     unfinished = kept.with_suffix(f".{os.getpid()}.part")
-    try:
+    with in_plain_words(kept):
         with pa.OSFile(str(unfinished), "wb") as sink, pa.ipc.new_stream(sink, results.schema) as stream:
             stream.write_batch(results)
         unfinished.replace(kept)
-    except OSError as error:
-        unfinished.unlink(missing_ok=True)
-        raise OutputError(
-            f"{kept.parent}: a part's results cannot be kept: {error}; make room there"
-        ) from error
 
 
 def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:

@@ -93,7 +93,7 @@ def plan_batch(batch: Batch) -> Plan:
     problems += wrong_kinds(batch, kinds)
     if problems:
         raise ConfigError("\n".join(map(str, problems)), tuple(problems))
-    losses = {
+    losses: dict[tuple[str, str], tuple[Loss, ...]] = {
         (plan.name, word): expected_losses(plan.info, plan.columns, word)
         for plan in plans
         for word in batch.outputs.formats

@@ -26,7 +26,7 @@ from geofractal.config.models import Batch
 from geofractal.errors import GeofractalError, SourceError
 from geofractal.measure import Ints
 from geofractal.progress import Progress
-from geofractal.writer.commit import publish
+from geofractal.writer.commit import in_plain_words, publish
 from geofractal.writer.dictionary import write_data_dictionary
 from geofractal.writer.layer import Written, write_layer
 from geofractal.writer.sources import Fingerprint, check_unchanged, fingerprint
@@ -80,7 +80,8 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
     failed: dict[str, GeofractalError] = dict(plan.failed)
     measured: list[Measured] = []
     with ExitStack() as stack:
-        folder.mkdir(parents=True, exist_ok=True)
+        with in_plain_words(folder):
+            folder.mkdir(parents=True, exist_ok=True)
         interrupt.set_kept(f"Measured parts are kept in {folder}; run the batch again to go on from there.")
         for layer in plan.layers:
             try:
@@ -88,7 +89,10 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
             except SourceError as error:
                 failed[layer.name] = error
         for found in measured:
-            _write_copies(plan, found, progress)
+            try:
+                _write_copies(plan, found, progress)
+            except SourceError as error:
+                failed[found.plan.name] = error
         columns = {found.plan.name: found.plan.columns for found in measured}
         write_data_dictionary(batch.outputs.folder, columns)
         record = run_record(batch, measured, failed, started)

@@ -10,6 +10,7 @@ import numpy as np
 import pyarrow as pa
 
 from geofractal.measure import Column, Ints
+from geofractal.writer.commit import in_plain_words
 
 _STORED = {"number": "<f8", "count": "<i8", "text": "<i4", "flag": "i1"}
 _FID = "\x00fid"
@@ -36,7 +37,8 @@ class RowSpool:
         self._texts: list[str] = []
         self._codes: dict[str, int] = {}
         self._path = path
-        self._file = path.open("w+b")
+        with in_plain_words(path):
+            self._file = path.open("w+b")
 
     def write(self, rows: Ints, batch: pa.RecordBatch, fids: Ints | None = None) -> None:
         """Write one record for each of `rows` (strictly increasing) from the columns of `batch`."""
@@ -47,8 +49,9 @@ class RowSpool:
         breaks = np.flatnonzero(np.diff(rows) != 1) + 1
         for run_rows, run in zip(np.split(rows, breaks), np.split(records, breaks), strict=True):
             if len(run):
-                self._file.seek(int(run_rows[0]) * self._record.itemsize)
-                self._file.write(run.tobytes())
+                with in_plain_words(self._path):
+                    self._file.seek(int(run_rows[0]) * self._record.itemsize)
+                    self._file.write(run.tobytes())
         self.rows_written += len(rows)
 
     def read(self, start: int, stop: int) -> pa.RecordBatch:
