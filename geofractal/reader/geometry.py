@@ -29,6 +29,9 @@ PROBLEMS: tuple[str, ...] = (
 )
 """What stands in the way of a row, by its code; 0 is nothing."""
 
+HARMLESS = (kernels.FINE, kernels.ONE_VERTEX, kernels.ZERO_LENGTH)
+"""Codes of rows that a group can do without: there is nothing in them to measure."""
+
 
 @dataclass(frozen=True, slots=True)
 class SourceLines:
@@ -57,6 +60,19 @@ class SourceLines:
     def __len__(self) -> int:
         """Return the number of features."""
         return len(self.rows)
+
+    def take(self, keep: Bools) -> SourceLines:
+        """Return the features to keep; the problems of all rows stay."""
+        parts = np.repeat(keep, np.diff(self.feature_offsets))
+        vertices = np.repeat(parts, np.diff(self.part_offsets))
+        return SourceLines(
+            rows=self.rows[keep],
+            xy=self.xy[vertices],
+            part_offsets=np.append(0, np.cumsum(np.diff(self.part_offsets)[parts])),
+            feature_offsets=np.append(0, np.cumsum(np.diff(self.feature_offsets)[keep])),
+            closed=self.closed[parts],
+            problems=self.problems,
+        )
 
 
 def read_lines(
