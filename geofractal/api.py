@@ -12,8 +12,9 @@ import pyarrow as pa
 from numpy.typing import NDArray
 from pydantic import ValidationError
 
-from geofractal.batch.parts import ROW, LayerWork, RowsPart, measure_part
+from geofractal.batch.parts import LayerWork, RowsPart, measure_part
 from geofractal.batch.run import run_batch
+from geofractal.batch.spool import FID, ROW
 from geofractal.config.load import load_config
 from geofractal.config.models import MeasureRequest, Prepare
 from geofractal.errors import ConfigError
@@ -163,7 +164,7 @@ def _measured(
     values, index, wkt = _taken(geometries, crs)
     work = LayerWork((request,), plane(wkt), prepare)
     results = [measure_part(work, part) for part in _parts(values)]
-    found = pa.Table.from_batches(results).drop_columns([ROW]).to_pandas()
+    found = pa.Table.from_batches(results).drop_columns([ROW, FID]).to_pandas()
     return pd.DataFrame(found).set_axis(index)
 
 

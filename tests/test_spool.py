@@ -6,7 +6,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from geofractal.batch.spool import RowSpool
+from geofractal.batch.spool import FID, ROW, RowSpool
 from geofractal.measure import Column
 
 COLUMNS = (
@@ -15,6 +15,12 @@ COLUMNS = (
     Column("verdict", "verdict", "text", "", "a word"),
     Column("closed", "closed", "flag", "", "a flag"),
 )
+
+
+def _part(rows, fids, *figures, names):
+    return pa.RecordBatch.from_arrays(
+        [pa.array(rows, pa.int64()), pa.array(fids, pa.int64()), *figures], names=[ROW, FID, *names]
+    )
 
 
 def _batch(draw_rows):
@@ -35,7 +41,8 @@ def test_parts_in_any_order_come_back_in_row_order(tmp_path_factory, order, size
     with RowSpool(path, COLUMNS, 30) as spool:
         for start in range(0, 30, size):
             rows = np.sort(np.array(order[start : start + size], dtype=np.int64))
-            spool.write(rows, _batch(rows.tolist()), fids=rows + 100)
+            figures = _batch(rows.tolist())
+            spool.write(_part(rows, rows + 100, *figures.columns, names=figures.schema.names))
         assert spool.rows_written == 30
         assert spool.read(0, 30).equals(_batch(list(range(30))))
         assert spool.read(7, 11).equals(_batch(list(range(7, 11))))
@@ -45,7 +52,8 @@ def test_parts_in_any_order_come_back_in_row_order(tmp_path_factory, order, size
 
 def test_rows_without_feature_ids_say_so(tmp_path):
     with RowSpool(tmp_path / "rows", COLUMNS, 2) as spool:
-        spool.write(np.arange(2), _batch([0, 1]))
+        figures = _batch([0, 1])
+        spool.write(_part([0, 1], [None, None], *figures.columns, names=figures.schema.names))
         assert spool.fids(0, 2) is None
 
 
@@ -55,5 +63,5 @@ def test_a_column_of_nulls_stays_a_column_of_nulls(tmp_path, kind):
     column = Column("empty", "empty", kind, "", "nothing")
     nulls = pa.RecordBatch.from_arrays([pa.nulls(3, types[kind])], names=["empty"])
     with RowSpool(tmp_path / "rows", (column,), 3) as spool:
-        spool.write(np.arange(3), nulls)
+        spool.write(_part([0, 1, 2], [3, 4, 5], *nulls.columns, names=["empty"]))
         assert spool.read(0, 3).equals(nulls)

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import hashlib
 import os
-from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -15,10 +14,12 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from geofractal.batch.spool import FID, ROW
 from geofractal.config.columns import prefixed
 from geofractal.config.models import MeasureRequest, Prepare
 from geofractal.measure import Column, Ints, Lines, Values
-from geofractal.reader.geometry import PROBLEMS, read_lines
+from geofractal.reader.geometry import PROBLEMS, SourceLines, read_lines
+from geofractal.reader.groups import Bucket, group_lines
 from geofractal.reader.joining import join_parts
 from geofractal.reader.planes import Projector
 from geofractal.registry import columns_of, load_measure
@@ -27,7 +28,6 @@ from geofractal.writer.commit import in_plain_words
 from geofractal.writer.rows import ARROW_TYPES
 
 NOT_WANTED = "left out by the layer's where"
-ROW = "row"
 LEFT_OUT = Column(
     "path_left_out_km",
     "leftout_km",
@@ -41,35 +41,26 @@ _DTYPES = {"number": np.float64, "count": np.int64, "text": object, "flag": np.i
 
 @dataclass(frozen=True)
 class Features:
-    """The features of a part, in the layer's own coordinates, and which row each answers for.
+    """Rows of a layer and their features, in the layer's own coordinates.
 
     `feature` gives each row's feature, -1 where it has none and `notes` says why.
     """
 
-    xy: NDArray[np.float64]
-    part_offsets: Ints
-    feature_offsets: Ints
-    closed: NDArray[np.bool_]
+    rows: Ints
+    fids: Ints | None
     feature: Ints
     notes: NDArray[np.object_]
-
-    def __len__(self) -> int:
-        """Return the number of features."""
-        return len(self.feature_offsets) - 1
+    lines: SourceLines
 
 
 class PartInput(Protocol):
     """Rows of a layer to be measured together."""
 
-    @property
-    def rows(self) -> Ints:
-        """Source rows that the part answers for, increasing."""
-
-    def content(self) -> Iterator[bytes | memoryview | pa.Buffer]:
-        """Yield all that the part's results depend on, but options and code."""
+    def content(self) -> pa.RecordBatch:
+        """Return all that the part's results depend on, but options and code."""
 
     def features(self, prepare: Prepare) -> Features:
-        """Return the part's features."""
+        """Return the part's rows and features."""
 
 
 @dataclass(frozen=True)
@@ -78,44 +69,53 @@ class RowsPart:
 
     rows: Ints
     wkb: pa.Array
+    fids: Ints | None = None
     wanted: NDArray[np.bool_] | None = None
 
-    def content(self) -> Iterator[bytes | memoryview | pa.Buffer]:
-        """Yield rows, geometry and choice."""
-        yield self.rows.data
-        yield from _array_content(self.wkb)
-        if self.wanted is not None:
-            yield self.wanted.tobytes()
+    def content(self) -> pa.RecordBatch:
+        """Return the rows with their ids, geometry and choice."""
+        held = {"row": self.rows, "fid": self.fids, "wanted": self.wanted, "wkb": self.wkb}
+        return pa.RecordBatch.from_pydict(
+            {name: pa.array(values) for name, values in held.items() if values is not None}
+        )
 
     def features(self, prepare: Prepare) -> Features:
         """Return one feature for each row that has a line to measure."""
         wkb = self.wkb
         if self.wanted is not None:
             wkb = pc.if_else(pa.array(self.wanted), wkb, pa.scalar(None, wkb.type))
-        lines = read_lines(
-            wkb,
-            boundaries=prepare.boundaries,
-            drop_repeated=prepare.drop_repeated,
-            repair=prepare.repair,
-        )
+        lines = read_lines(wkb, **_reading(prepare))
         notes = _TEXTS[lines.problems]
         if self.wanted is not None:
             notes[~self.wanted] = NOT_WANTED
         feature = np.full(len(self.rows), -1, np.int64)
         feature[lines.rows] = np.arange(len(lines))
-        return Features(lines.xy, lines.part_offsets, lines.feature_offsets, lines.closed, feature, notes)
+        return Features(self.rows, self.fids, feature, notes, lines)
+
+
+@dataclass(frozen=True)
+class GroupsPart:
+    """Whole groups of rows, each group a feature."""
+
+    bucket: Bucket
+
+    def content(self) -> pa.RecordBatch:
+        """Return the rows with their ids, groups, geometry and choice."""
+        return self.bucket.read()
+
+    def features(self, prepare: Prepare) -> Features:
+        """Return one feature for each group whose rows can all be read."""
+        groups = group_lines(self.bucket.read(), **_reading(prepare))
+        notes = np.where(groups.wanted, groups.notes, NOT_WANTED)
+        return Features(groups.rows, groups.fids, groups.feature, notes, groups.lines)
 
 
 _TEXTS = np.array([text or None for text in PROBLEMS], dtype=object)
 
 
-def _array_content(array: pa.Array) -> Iterator[bytes | pa.Buffer]:
-    """Yield an array's own content, whatever larger array it is a slice of."""
-    sink = pa.BufferOutputStream()
-    batch = pa.RecordBatch.from_arrays([array], names=[""])
-    with pa.ipc.new_stream(sink, batch.schema) as stream:
-        stream.write_batch(batch)
-    yield sink.getvalue()
+def _reading(prepare: Prepare) -> dict[str, Any]:
+    """Return the preparing steps that belong to reading geometry."""
+    return prepare.model_dump(include={"boundaries", "drop_repeated", "repair"})
 
 
 @dataclass(frozen=True)
@@ -186,19 +186,18 @@ def note_name(request: MeasureRequest) -> str:
 
 def part_key(work: LayerWork, part: PartInput) -> str:
     """Return the content key of a part: equal for equal rows, options, code and library versions."""
-    digest = hashlib.blake2b(work.digest, digest_size=16)
-    for piece in part.content():
-        digest.update(piece)
-    return digest.hexdigest()
+    content = part.content()
+    sink = pa.BufferOutputStream()
+    with pa.ipc.new_stream(sink, content.schema) as stream:
+        stream.write_batch(content)
+    return hashlib.blake2b(sink.getvalue(), key=work.digest, digest_size=16).hexdigest()
 
 
-def measured_part(work: LayerWork, part: PartInput, folder: Path | None) -> pa.RecordBatch:
+def measured_part(work: LayerWork, part: PartInput, folder: Path) -> pa.RecordBatch:
     """Return the results of a part, one row for each of its rows, columns as in `LayerWork.columns`.
 
-    Where `folder` is given, results that an earlier run left there are taken, and new ones are kept.
+    Results that an earlier run left in `folder` are taken, and new ones are kept there.
     """
-    if folder is None:
-        return measure_part(work, part)
     kept = folder / f"{part_key(work, part)}.arrow"
     if kept.exists():
         with pa.OSFile(str(kept)) as source, pa.ipc.open_stream(source) as stream:
@@ -220,38 +219,38 @@ def _keep(results: pa.RecordBatch, kept: Path) -> None:
 def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:
     """Measure a part: pure, and with no regard to what other parts hold."""
     features = part.features(work.prepare)
-    values, problems = _measure_features(work, features)
+    values, problems = _measure_features(work, features.lines)
     has = features.feature >= 0
     notes = features.notes.copy()
     notes[has] = problems[features.feature[has]]
-    arrays = [pa.array(part.rows)]
+    ids = pa.nulls(len(has), pa.int64()) if features.fids is None else pa.array(features.fids)
+    arrays = [pa.array(features.rows), ids]
     for column in work.columns:
-        rows = _nulls(column, len(part.rows))
+        rows = _nulls(column, len(has))
         rows[has] = values[column.name][features.feature[has]]
         if column.name in work.note_names:
             rows = np.where(notes == None, rows, notes)  # noqa: E711 - elementwise
         arrays.append(_arrow(column, rows))
-    return pa.RecordBatch.from_arrays(arrays, names=[ROW, *(column.name for column in work.columns)])
+    return pa.RecordBatch.from_arrays(arrays, names=[ROW, FID, *(column.name for column in work.columns)])
 
 
-def _measure_features(work: LayerWork, features: Features) -> tuple[Values, NDArray[np.object_]]:
+def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDArray[np.object_]]:
     """Return every column's value for each feature, and what kept a feature from being measured at all."""
-    n = len(features)
+    n = len(lines)
     values: Values = {column.name: _nulls(column, n) for column in work.columns}
     problems = np.full(n, None, dtype=object)
     if not n:
         return values, problems
     chunks, refused = work.projector.lines(
-        np.arange(n), features.xy, features.part_offsets, features.feature_offsets, features.closed
+        np.arange(n), lines.xy, lines.part_offsets, lines.feature_offsets, lines.closed
     )
-    problems[list(refused)] = list(refused.values())
     for chunk in chunks:
-        lines, unjoined, left_out_m = work.joined(chunk)
-        for feature, text in unjoined.items():
-            problems[feature] = text
+        joined, unjoined, left_out_m = work.joined(chunk)
+        refused |= unjoined
         if work.leaves_out:
-            values[LEFT_OUT.name][lines.rows] = left_out_m / 1000.0
-        _measure_lines(work, lines, values)
+            values[LEFT_OUT.name][joined.rows] = left_out_m / 1000.0
+        _measure_lines(work, joined, values)
+    problems[list(refused)] = list(refused.values())
     return values, problems
 
 

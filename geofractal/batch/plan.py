@@ -8,11 +8,12 @@ from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 
-from geofractal.batch.parts import LayerWork, PartInput, RowsPart
+from geofractal.batch.parts import GroupsPart, LayerWork, PartInput, RowsPart
 from geofractal.config.load import wrong_kinds
 from geofractal.config.models import Batch, VectorLayer
 from geofractal.errors import ConfigError, LayerError, OutputError, Problem, SourceError
-from geofractal.measure import Column, Ints
+from geofractal.measure import Column
+from geofractal.reader.groups import bucket_rows
 from geofractal.reader.layers import allowed
 from geofractal.reader.planes import Projector
 from geofractal.reader.vector import LayerInfo, layer_info, stream
@@ -161,9 +162,17 @@ def _refuse_outputs(plan: Plan) -> None:
             )
 
 
-def parts_of(layer: LayerPlan, folder: Path) -> Iterator[tuple[PartInput, Ints | None]]:
-    """Yield a layer's parts, cut by the source alone, each with the stored feature ids of its rows."""
-    columns = layer.where.columns if layer.where else ()
-    for batch in stream(layer.info, columns=columns):
-        wanted = layer.where.mask(batch.attributes) if layer.where else None
-        yield RowsPart(batch.rows, batch.wkb, wanted), batch.fids
+def parts_of(layer: LayerPlan, folder: Path) -> Iterator[PartInput]:
+    """Yield a layer's parts, cut by the source alone; groups are first spooled in `folder`."""
+    key = layer.layer.group_by
+    columns = {*(layer.where.columns if layer.where else ()), *([key] if key else ())}
+    batches = (
+        (batch, layer.where.mask(batch.attributes) if layer.where else None)
+        for batch in stream(layer.info, columns=sorted(columns))
+    )
+    if key:
+        for bucket in bucket_rows(batches, key, layer.info, folder / f"{layer.name}.groups"):
+            yield GroupsPart(bucket)
+    else:
+        for batch, wanted in batches:
+            yield RowsPart(batch.rows, batch.wkb, batch.fids, wanted)

@@ -5,26 +5,20 @@ from __future__ import annotations
 import json
 import shutil
 import time
-from collections import deque
-from collections.abc import Iterator
-from concurrent.futures import Executor
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
-import pyarrow as pa
-
 from geofractal import interrupt
 from geofractal.batch.executor import available_workers, in_order, make_executor
-from geofractal.batch.parts import ROW, LayerWork, PartInput, measured_part
+from geofractal.batch.parts import measured_part
 from geofractal.batch.plan import LayerPlan, Plan, parts_of, plan_batch
 from geofractal.batch.record import MeasureTally, run_record
 from geofractal.batch.spool import RowSpool
 from geofractal.config.models import Batch
 from geofractal.errors import GeofractalError, SourceError
-from geofractal.measure import Ints
 from geofractal.progress import Progress
 from geofractal.writer.commit import in_plain_words, publish
 from geofractal.writer.dictionary import write_data_dictionary
@@ -116,27 +110,13 @@ def _measure_layer(
         make_executor(workers, processes=layer.work.needs_processes) as executor,
         progress.stage(layer.name, words, layer.info.features) as stage,
     ):
-        for fids, results in _results(layer, executor, folder, ahead=2 * workers):
-            spool.write(results.column(ROW).to_numpy(), results, fids)
+        inputs = ((layer.work, part, folder) for part in parts_of(layer, folder))
+        for results in in_order(executor, measured_part, inputs, ahead=2 * workers):
+            spool.write(results)
             for tally in tallies:
                 tally.add(results)
             stage.advance(results.num_rows)
     return Measured(layer, spool, tallies, before, time.monotonic() - begun)
-
-
-def _results(
-    layer: LayerPlan, executor: Executor, folder: Path, ahead: int
-) -> Iterator[tuple[Ints | None, pa.RecordBatch]]:
-    """Yield feature ids and results of each part, in the order of the parts."""
-    waiting: deque[Ints | None] = deque()
-
-    def inputs() -> Iterator[tuple[LayerWork, PartInput, Path]]:
-        for part, fids in parts_of(layer, folder):
-            waiting.append(fids)
-            yield layer.work, part, folder
-
-    for results in in_order(executor, measured_part, inputs(), ahead):
-        yield waiting.popleft(), results
 
 
 def _write_copies(plan: Plan, found: Measured, progress: Progress) -> None:

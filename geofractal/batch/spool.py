@@ -13,7 +13,10 @@ from geofractal.measure import Column, Ints
 from geofractal.writer.commit import in_plain_words
 
 _STORED = {"number": "<f8", "count": "<i8", "text": "<i4", "flag": "i1"}
-_FID = "\x00fid"
+ROW, FID = "source_row", "source_fid"
+"""Names of the columns that a part's results have beside their figures."""
+
+_NO_ID = np.iinfo(np.int64).min
 
 
 class RowSpool:
@@ -33,17 +36,18 @@ class RowSpool:
         self.columns = tuple(columns)
         self.n_rows = n_rows
         self.rows_written = 0
-        self._record = np.dtype([(_FID, "<i8"), *((c.name, _STORED[c.kind]) for c in self.columns)])
+        self._record = np.dtype([(FID, "<i8"), *((c.name, _STORED[c.kind]) for c in self.columns)])
         self._texts: list[str] = []
         self._codes: dict[str, int] = {}
         self._path = path
         with in_plain_words(path):
             self._file = path.open("w+b")
 
-    def write(self, rows: Ints, batch: pa.RecordBatch, fids: Ints | None = None) -> None:
-        """Write one record for each of `rows` (strictly increasing) from the columns of `batch`."""
+    def write(self, batch: pa.RecordBatch) -> None:
+        """Write one record for each row of a part's results; their source rows increase."""
+        rows = batch.column(ROW).to_numpy()
         records = np.empty(len(rows), self._record)
-        records[_FID] = -1 if fids is None else fids
+        records[FID] = batch.column(FID).fill_null(_NO_ID).to_numpy()
         for column in self.columns:
             records[column.name] = self._stored(column, batch.column(column.name))
         breaks = np.flatnonzero(np.diff(rows) != 1) + 1
@@ -62,8 +66,8 @@ class RowSpool:
 
     def fids(self, start: int, stop: int) -> Ints | None:
         """Return the source's feature ids of these rows, or None where the format has none."""
-        fids = self._records(start, stop)[_FID].astype(np.int64)
-        return None if len(fids) and fids[0] < 0 else fids
+        fids = self._records(start, stop)[FID].astype(np.int64)
+        return None if len(fids) and fids[0] == _NO_ID else fids
 
     def __enter__(self) -> Self:
         """Return the spool itself."""
