@@ -24,6 +24,7 @@ class Walked:
     spread: np.ndarray
     steps: np.ndarray
     left_out: np.ndarray
+    tallies: np.ndarray
 
 
 def walk(parts, rulers, *, starts=1, enough=NO_LIMIT, closed=False, radius=math.inf):
@@ -43,6 +44,7 @@ def walk(parts, rulers, *, starts=1, enough=NO_LIMIT, closed=False, radius=math.
             starts,
             enough,
             True,
+            4,
         )
     )
 
@@ -283,6 +285,7 @@ def test_each_feature_has_its_own_ladder():
         1,
         0,
         False,
+        0,
     )
     last = (plain_length(lines[2], 1.0) + plain_length(lines[2][::-1], 1.0)) / 2
     assert length == pytest.approx([4 / 3, 16 / 9, 8 / 3, last])
@@ -316,7 +319,20 @@ def test_compiled_and_interpreted_kernels_agree(interpreted):
             4,
             30,
             True,
+            4,
         )
         for one, other in pairwise((walk_ladders(*arguments), interpreted(*arguments))):
             for a, b in zip(one, other, strict=True):
                 assert a == pytest.approx(b, rel=1e-12, nan_ok=True)
+
+
+def test_steps_are_told_apart_by_stretch_whichever_way_they_are_walked():
+    """Koch curve: each of its four quarters holds a quarter of the 4^k steps of rulers 3^-k."""
+    for line in (koch(6), koch(6)[::-1]):
+        walked = walk([line], [3.0**-k for k in (2, 3, 4)])
+        assert walked.tallies == pytest.approx(np.outer(walked.steps / 4, np.ones(4)), abs=1)
+
+
+def test_stretches_go_through_all_parts_of_a_feature():
+    parts = [np.column_stack([np.linspace(0, 6, 61), np.full(61, y)]) for y in (0.0, 10.0)]
+    assert walk(parts, 1.0).tallies[0] == pytest.approx([3, 3, 3, 3], abs=0.5)

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Annotated, ClassVar, NamedTuple, Self
 import numpy as np
 from pydantic import Field, field_validator, model_validator
 
+from geofractal.kernels.ladder_judge import STRETCHES
 from geofractal.kernels.line_scales import line_scales
 from geofractal.kernels.walk import walk_ladders
 from geofractal.measure import PLANES, Column, Measure, Options
@@ -43,6 +44,7 @@ class Walks(NamedTuple):
     spread: Floats
     steps: Floats
     left_out: Floats
+    tallies: Floats
 
 
 def walk(lines: Lines, ladders: Ladders, *, starts: int | None = None) -> Walks:
@@ -60,7 +62,8 @@ def walk(lines: Lines, ladders: Ladders, *, starts: int | None = None) -> Walks:
     Walks
         One value per rung, metres; NaN where no part of the feature is long enough for the ruler.
     """
-    return _walk(lines, ladders, starts or RING_STARTS, ENOUGH_STEPS if starts is None else _NO_LIMIT)
+    enough = ENOUGH_STEPS if starts is None else _NO_LIMIT
+    return _walk(lines, ladders, starts or RING_STARTS, enough, stretches=STRETCHES)
 
 
 def walk_rulers(lines: Lines, rulers_m: tuple[float, ...] | Floats) -> Walks:
@@ -75,10 +78,12 @@ def walk_rulers(lines: Lines, rulers_m: tuple[float, ...] | Floats) -> Walks:
     n, count = len(lines), len(rulers_m)
     ladders = Ladders(np.arange(n + 1) * count, np.tile(np.asarray(rulers_m, dtype=np.float64), n))
     found = _walk(lines, ladders, RING_STARTS, _NO_LIMIT, inner_starts=False)
-    return Walks(*(values.reshape(n, count) for values in found))
+    return Walks(*(values.reshape(n, count) for values in found[:-1]), found.tallies)
 
 
-def _walk(lines: Lines, ladders: Ladders, starts: int, enough: int, *, inner_starts: bool = True) -> Walks:
+def _walk(
+    lines: Lines, ladders: Ladders, starts: int, enough: int, *, inner_starts: bool = True, stretches: int = 0
+) -> Walks:
     return Walks(
         *walk_ladders(
             lines.xy,
@@ -91,6 +96,7 @@ def _walk(lines: Lines, ladders: Ladders, starts: int, enough: int, *, inner_sta
             starts,
             enough,
             inner_starts,
+            stretches,
         )
     )
 

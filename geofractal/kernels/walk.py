@@ -241,8 +241,13 @@ def _walk(
     way: int,
     closed: bool,
     chord: float,
+    cuts: Ints,
+    tally: Floats,
 ) -> tuple[int, float]:
-    """Walk from vertex `start` to the end of the line, or once around; count steps, measure the rest."""
+    """Walk from vertex `start` to the end of the line, or once around; count steps, measure the rest.
+
+    Each step is also counted in `tally`, for the stretch between two `cuts` in which it ends.
+    """
     flat = path.shape[1] == 2
     near = (chord * (1 - TIE)) ** 2
     cx, cy, cz = path[start, 0], path[start, 1], 0.0 if flat else path[start, 2]
@@ -252,6 +257,7 @@ def _walk(
     lap_left = closed
     on_segment = True  # the present point lies on the segment that ends at vertex k
     steps = 0
+    stretch = 0
     for _ in range(int(total / chord * (1 + 1e-6)) + 4):
         j = _first_outside(path, boxes, bases, levels, k, stop, way, cx, cy, cz, near)
         if j < 0 and lap_left:
@@ -279,6 +285,12 @@ def _walk(
                 C = wx * wx + wy * wy + wz * wz - chord * chord
                 t = (math.sqrt(max(B * B - A * C, 0.0)) - B) / A if not snap else 1.0
             steps += count
+            if tally.size > 0:
+                while stretch < cuts.size and j > cuts[stretch]:
+                    stretch += 1
+                while stretch > 0 and j <= cuts[stretch - 1]:
+                    stretch -= 1
+                tally[stretch] += count
             if snap:
                 cx, cy, cz = bx, by, bz
                 k = j + way
@@ -288,6 +300,25 @@ def _walk(
             on_segment = True
     dx, dy, dz = path[end, 0] - cx, path[end, 1] - cy, 0.0 if flat else path[end, 2] - cz
     return steps, math.sqrt(dx * dx + dy * dy + dz * dz)
+
+
+@kernel
+def _cut(path: Floats, before: float, whole: float, stretches: int) -> Ints:
+    """Return the last vertices of all but the last of the stretches of equal length of a feature.
+
+    The path is the part that begins after a length of `before` out of `whole`; a stretch that ends before
+    it or after it is cut at vertex -1 or behind its last.
+    """
+    cuts = np.full(max(stretches - 1, 0), len(path), np.int64)
+    along = before
+    reached = 0
+    for i in range(len(path) if stretches > 1 else 0):
+        if i > 0:
+            along += _gap(path, i - 1, i)
+        while reached < stretches - 1 and along > whole * (reached + 1) / stretches:
+            cuts[reached] = i - 1
+            reached += 1
+    return cuts
 
 
 @kernel
@@ -319,16 +350,18 @@ def _walk_from(
     radius: float,
     ruler: float,
     chord: float,
+    cuts: Ints,
+    tally: Floats,
 ) -> tuple[int, float]:
     """Return steps and L(r) from vertex `mark`: around a ring one way, or to both ends of an open line."""
     if closed:
-        steps, gap = _walk(path, boxes, bases, levels, total, mark, way, closed, chord)
+        steps, gap = _walk(path, boxes, bases, levels, total, mark, way, closed, chord, cuts, tally)
         return steps, ruler * steps + _arc(gap, radius)
     steps = 0
     rest = 0.0
     for turn in range(1, -2, -2):
         if mark != (len(path) - 1 if turn > 0 else 0):
-            taken, gap = _walk(path, boxes, bases, levels, total, mark, turn, closed, chord)
+            taken, gap = _walk(path, boxes, bases, levels, total, mark, turn, closed, chord, cuts, tally)
             steps += taken
             rest += _arc(gap, radius)
     return steps, ruler * steps + rest
@@ -345,6 +378,8 @@ def _walk_rung(
     radius: float,
     ruler: float,
     enough: int,
+    cuts: Ints,
+    tally: Floats,
 ) -> tuple[int, float, float, float]:
     """Walk a part both ways from its first start, then from as many further starts as are needed.
 
@@ -361,7 +396,7 @@ def _walk_rung(
             mark = len(path) - 1 if s == 0 and way < 0 and not closed else marks[s * stride]
             if closed or s == 0 or way > 0:
                 n, walked[count] = _walk_from(
-                    path, boxes, bases, levels, total, mark, way, closed, radius, ruler, chord
+                    path, boxes, bases, levels, total, mark, way, closed, radius, ruler, chord, cuts, tally
                 )
                 steps += n
                 count += 1
@@ -394,7 +429,8 @@ def walk_ladders(
     most_starts: int,
     enough_steps: int,
     inner_starts: bool,
-) -> tuple[Floats, Floats, Floats, Floats]:
+    stretches: int,
+) -> tuple[Floats, Floats, Floats, Floats, Floats]:
     """Walk every feature with every ruler of its own ladder.
 
     An open line is walked from both ends, a ring both ways around from its vertex farthest from its
@@ -415,6 +451,7 @@ def walk_ladders(
     most_starts : starts of a part at most, a power of two
     enough_steps : steps that one ruler's walks of a part should take together
     inner_starts : whether open lines have further starts, or rings alone
+    stretches : number of stretches of equal length whose steps are counted apart
 
     Returns
     -------
@@ -422,7 +459,10 @@ def walk_ladders(
     spread : (q,) standard deviation of one walk over starts and directions
     steps : (q,) mean number of whole steps of a walk
     left_out : (q,) polyline length in metres of the parts that are not long enough
+    tallies : (q, stretches) mean number of whole steps that end in each stretch of the feature
     """
+    tallies = np.zeros((rulers.size, stretches))
+    tally = np.zeros(stretches)
     length = np.zeros(rulers.size)
     spread = np.zeros(rulers.size)
     steps = np.zeros(rulers.size)
@@ -432,26 +472,40 @@ def walk_ladders(
         hi = rung_offsets[f + 1]
         if lo == hi:
             continue
+        totals = np.empty(feature_offsets[f + 1] - feature_offsets[f])
+        for p in range(feature_offsets[f], feature_offsets[f + 1]):
+            origin, way = _order(xy, part_offsets[p], part_offsets[p + 1], closed[p])
+            totals[p - feature_offsets[f]] = _total(
+                xy, part_offsets[p], part_offsets[p + 1], origin, way, closed[p]
+            )
+        whole = totals.sum()
+        before = 0.0
         for p in range(feature_offsets[f], feature_offsets[f + 1]):
             first = part_offsets[p]
             last = part_offsets[p + 1]
-            origin, way = _order(xy, first, last, closed[p])
-            total = _total(xy, first, last, origin, way, closed[p])
+            total = totals[p - feature_offsets[f]]
             if total > 0:
                 if closed[p] or (inner_starts and most_starts > 1):
+                    origin, way = _order(xy, first, last, closed[p])
                     path, marks = _lay_path(xy, first, last, origin, way, closed[p], most_starts, total)
                 else:
                     path, marks = xy[first:last], np.zeros(1, np.int64)
                 bases = _box_levels(len(path))
                 boxes = _boxes(path, bases)
+                cuts = _cut(path, before, whole, stretches)
+                before += total
                 for q in range(lo, hi):
+                    tally[:] = 0.0
                     walks, mean, variance, taken = _walk_rung(
-                        path, boxes, bases, marks, total, closed[p], radius[f], rulers[q], enough_steps
-                    )
+                        path, boxes, bases, marks, total, closed[p], radius[f], rulers[q], enough_steps,
+                        cuts, tally,
+                    )  # fmt: skip
                     if walks > 0:
                         length[q] += mean
                         spread[q] += variance
                         steps[q] += taken
+                        for k in range(stretches):
+                            tallies[q, k] += tally[k] / walks
                     else:
                         left_out[q] += total
         for q in range(lo, hi):
@@ -460,4 +514,4 @@ def walk_ladders(
             else:
                 length[q] = math.nan
                 spread[q] = math.nan
-    return length, spread, steps, left_out
+    return length, spread, steps, left_out, tallies
