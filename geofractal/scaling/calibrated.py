@@ -1,0 +1,32 @@
+"""Constants set by simulation on curves of exactly known dimension, one set an estimator.
+
+`tests/benchmarks/calibration_tables.py` prints what they achieve; the developers' guide tells which curves
+set them and which were kept apart to judge them.
+"""
+
+from __future__ import annotations
+
+from geofractal.kernels.ladder_judge import Constants
+
+DIVIDER = Constants(
+    fewest_steps=4.0,
+    fewest_ring_steps=8.0,
+    sure_steps=50.0,
+    ramp=1.2,
+    fine_bias=0.4,
+    coarse_bias=1.2,
+    own_least=0.6,
+    own_low=0.40,
+    own_long=0.5,
+    own_without=0.6,
+    ring=1.5,
+    bend=0.6,
+    bias_doubt=0.5,
+    quantile=2.4,
+    skew=1.0,
+    ripple_share=0.56,
+    threshold=1.1,
+    break_shift=0.34,
+    smooth_below=1.01,
+    fewest_decades=0.5,
+)
