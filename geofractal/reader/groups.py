@@ -25,7 +25,7 @@ from geofractal.reader.layers import Batch, LayerInfo
 NO_KEY = "no value in the group-by column"
 
 _BATCHES_A_BUCKET = 4
-_HELD_BYTES = 32_000_000
+_HELD_BYTES = 8_000_000
 _SCHEMA = pa.schema(
     [
         ("row", pa.int64()),
