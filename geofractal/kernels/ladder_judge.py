@@ -81,7 +81,8 @@ def _weights(x: Floats, steps: Floats, c: Constants) -> Floats:
     """Return weights of sum 1: low where steps are few, rising over the ladder's foot."""
     foot = min(c.ramp, (x[-1] - x[0]) / 3.0)
     w = np.minimum(1.0, steps / c.sure_steps) * np.minimum(1.0, 0.2 + (x - x[0]) / foot)
-    return w / w.sum()
+    shares: Floats = w / w.sum()
+    return shares
 
 
 @kernel
@@ -102,7 +103,8 @@ def _without_bias(x: Floats, y: Floats, steps: Floats, gap: float, open_parts: f
     """Return y without what the ends of the ladder add, for a line whose dimension is 1 + `gap`."""
     fine = c.fine_bias * gap**1.5
     coarse = c.coarse_bias * gap / (1.0 + gap) * open_parts
-    return y + fine * np.exp(-x) - coarse / steps
+    corrected: Floats = y + fine * np.exp(-x) - coarse / steps
+    return corrected
 
 
 @kernel
@@ -147,9 +149,9 @@ def _bends(w: Floats, x: Floats, y: Floats, mean_x: float, xx: float) -> float:
     third = f**3 - m3 - m4 * f - (w * f**3 * second).sum() * second
     norm = (w * third * third).sum()
     if norm <= 1e-12 or len(x) < 5:
-        return two * two / xx
+        return float(two * two / xx)
     three = (w * third * y).sum() / np.sqrt(norm)
-    return (two * two + three * three) / (2.0 * xx)
+    return float((two * two + three * three) / (2.0 * xx))
 
 
 @kernel
@@ -319,7 +321,7 @@ def _interval(row: Floats, c: Constants) -> None:
 @kernel
 def _judge(
     row: Floats, x: Floats, y: Floats, steps: Floats, noise: Floats, tallies: Floats,
-    detail: float, open_parts: float, ring: bool, c: Constants,
+    detail: float, open_parts: float, c: Constants,
 ) -> None:  # fmt: skip
     """Judge the usable rungs of one feature; see `judge_ladders`."""
     row[9], row[10], row[11], row[12] = len(x), x[0], x[-1], TOO_FEW
@@ -348,7 +350,7 @@ def _judge(
         own = _own_error(x, steps, tallies) * max(scale, c.own_least)
     else:
         own = c.own_without * np.sqrt(gap) * (1.0 + 0.5 * gap) / span
-    if ring:
+    if open_parts == 0.0:
         own *= c.ring
     bends = _bends(w, x, z, mean_x, xx)
     doubt = c.bias_doubt * (row[0] - row[4])
@@ -373,7 +375,6 @@ def judge_ladders(
     usable: NDArray[np.bool_],
     detail: Floats,
     open_parts: Floats,
-    ring: NDArray[np.bool_],
     c: Constants,
 ) -> Floats:
     """Judge every feature's ladder.
@@ -387,8 +388,7 @@ def judge_ladders(
     tallies : (q, STRETCHES) steps by stretch of the line, or (q, 0) where they were not counted
     usable : (q,) rungs that may be used
     detail : (n,) ln of the finest detail of the source, in the unit of the rulers
-    open_parts : (n,) number of open lines walked
-    ring : (n,) whether the feature is made of rings alone
+    open_parts : (n,) number of open lines; 0 where a feature is made of rings alone
 
     Returns
     -------
@@ -397,15 +397,15 @@ def judge_ladders(
     n = len(offsets) - 1
     out = np.full((n, len(FIELDS)), np.nan)
     for i in range(n):
-        fewest = c.fewest_ring_steps if ring[i] else c.fewest_steps
+        fewest = c.fewest_ring_steps if open_parts[i] == 0.0 else c.fewest_steps
         kept = np.empty(offsets[i + 1] - offsets[i], np.int64)
         used = 0
-        for k in range(offsets[i], offsets[i + 1]):
-            if usable[k] and steps[k] >= fewest and np.isfinite(y[k]):
-                kept[used] = k
+        for q in range(offsets[i], offsets[i + 1]):
+            if usable[q] and steps[q] >= fewest and np.isfinite(y[q]):
+                kept[used] = q
                 used += 1
         out[i, 9], out[i, 12] = used, TOO_FEW
         if used > 0:
             k = kept[:used]
-            _judge(out[i], x[k], y[k], steps[k], noise[k], tallies[k], detail[i], open_parts[i], ring[i], c)
+            _judge(out[i], x[k], y[k], steps[k], noise[k], tallies[k], detail[i], open_parts[i], c)
     return out

@@ -21,7 +21,7 @@ DIVIDER = Constants(
     own_without=0.6,
     ring=1.5,
     bend=0.6,
-    bias_doubt=0.5,
+    bias_doubt=1.0,
     quantile=2.4,
     skew=1.0,
     ripple_share=0.56,
@@ -30,3 +30,5 @@ DIVIDER = Constants(
     smooth_below=1.01,
     fewest_decades=0.5,
 )
+
+BOX = DIVIDER._replace(own_without=0.6)

@@ -13,10 +13,22 @@ if TYPE_CHECKING:
     from geofractal.measure import Floats, Ints, Lines
 
 FIRST_RUNG_SEGMENTS = 3.0
-"""First rung, in median source segments: below it the vertices themselves are what is measured."""
+"""First rung, in median source segments. Lines generalised to a tolerance t have segments of 2 to 5 t and
+give lengths within 2 % of the full line's from rulers of 2 t on, so that three segments are above what
+generalisation took. The same share of length that an unthinned fractional Brownian trail lacks there is
+taken out by the fit."""
 
-LAST_RUNG_EXTENT = 1.0 / 6.0
-"""Last rung as a share of the extent: above it too few steps are left to count."""
+FIRST_RUNG_LONG_SEGMENTS = 2.0
+"""First rung, in segments in which half of the length is reached, shortest first: decides where much of a
+line is drawn in long segments."""
+
+FIRST_RUNG_CELLS = 6.0
+"""First rung of a staircase, in cells. Tracing through cells, or snapping to a grid as coarse as the
+vertices are dense, adds 4 to 25 % to the length at two cells (the more the higher the dimension), 1 to 9 %
+at four and 0 to 4 % at eight."""
+
+LAST_RUNG_EXTENT = 1.0 / 3.0
+"""Last rung as a share of the extent; rungs on which too few steps were taken are then left out."""
 
 RUNGS_PER_DECADE = 12
 
@@ -61,10 +73,21 @@ def divider_ladders(
     """
     scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
     n = len(lines)
-    lowest = np.full(n, ruler_min_m) if ruler_min_m is not None else FIRST_RUNG_SEGMENTS * scales[:, 0]
+    lowest = np.full(n, ruler_min_m) if ruler_min_m is not None else finest_rulers(scales)
     highest = np.full(n, ruler_max_m) if ruler_max_m is not None else LAST_RUNG_EXTENT * scales[:, 1]
     highest[np.isnan(scales[:, 0])] = np.nan
     return geometric_ladders(lowest, highest, rungs)
+
+
+def finest_rulers(scales: Floats) -> Floats:
+    """Return each feature's finest ruler above what its mapping resolved, metres, (n,).
+
+    Parameters
+    ----------
+    scales : (n, 4) as `geofractal.kernels.line_scales.line_scales` gives them; NaN stays NaN
+    """
+    segments = np.maximum(FIRST_RUNG_SEGMENTS * scales[:, 0], FIRST_RUNG_LONG_SEGMENTS * scales[:, 2])
+    return np.maximum(segments, FIRST_RUNG_CELLS * scales[:, 3])
 
 
 def geometric_ladders(lowest: Floats, highest: Floats, rungs: int | None = None) -> Ladders:
