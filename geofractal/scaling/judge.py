@@ -1,0 +1,224 @@
+"""What a ladder is evidence of: dimension, two uncertainties, verdict, content.
+
+Fit
+    ln L on ln r by weighted least squares. A rung counts in full from 50 steps on and in proportion
+    below, because the scatter of ln L between curves of one kind falls with the number of steps; over the
+    first 1.2 e-folds of the ladder weights rise from a fifth to one, so that the ripple which curves made
+    of equal pieces carry does not leak into the slope. Two effects of a ladder's ends are taken out
+    beforehand: what the source's own detail hides of a fine ruler's length, and the last partial step of
+    an open line.
+Two uncertainties
+    `spread` is that of this line alone: starts, directions and where the rulers happen to lie.
+    `low` and `high` are the 95 % interval for the process that made the line, the one to use when two
+    different lines are compared. It is made of the line's own evidence: how much the slope differs
+    between stretches of the line, and how large the bends of the ladder are that a power law does not have.
+    Both were scaled once, by simulation; near dimension 1 the interval reaches farther upwards.
+Verdict
+    A hinge, a step and a parabola are fitted beside the straight line. The straight line stands unless
+    one of them takes up more than a threshold, in units of the line's own noise, and leaves less than 56 %
+    of the mean square residual (so a ripple is no break). R2 decides nothing.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+
+from geofractal.kernels.ladder_judge import FIELDS, judge_ladders
+from geofractal.scaling.calibrated import BOX, DIVIDER
+
+if TYPE_CHECKING:
+    from geofractal.measure import Bools, Floats, Ints
+    from geofractal.scaling.ladder import Ladders
+
+VERDICTS = ("power-law", "two-regime", "curved", "smooth", "too-few-scales")
+"""Verdict words, indexed by `Judgement.verdict`."""
+
+LEFT_OUT = 0.1
+"""Largest share of a feature's length that may be left out of a rung, above what every rung leaves out."""
+
+_FIELD = {name: i for i, name in enumerate(FIELDS)}
+_CONSTANTS = {"divider": DIVIDER, "box": BOX}
+
+
+@dataclass(frozen=True, slots=True)
+class Rungs:
+    """What a measure found at the rungs of a set of ladders of n features, q rungs in all.
+
+    Attributes
+    ----------
+    lengths : (q,) L(r) in metres; box counting gives boxes times size. NaN where nothing was measured
+    steps : (q,) whole steps, or boxes
+    noise : (q,) standard error of L(r) from starts and directions, metres; NaN where unknown
+    tallies : (q, STRETCHES) steps by stretch of the line, or (q, 0) where they were not counted
+    left_out : (q,) length of the parts that were too short for the rung, metres
+    detail : (n,) vertex spacing in metres that hides detail from fine rulers; 0 where nothing is hidden
+    open_parts : (n,) number of open lines in each feature; 0 where it is made of rings alone
+    """
+
+    lengths: Floats
+    steps: Floats
+    noise: Floats
+    tallies: Floats
+    left_out: Floats
+    detail: Floats
+    open_parts: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class Judgement:
+    """What the ladders of n features are evidence of; NaN where there is no figure.
+
+    Attributes
+    ----------
+    dimension : (n,) over the rungs used, whatever the verdict; NaN under ``too-few-scales``
+    low, high : (n,) 95 % interval for the process that made the line. Under ``two-regime`` and ``curved``
+        it also holds the dimensions at either end of the ladder
+    spread : (n,) standard error for this line alone
+    error : (n,) standard error for the process, on the scale that `difference_of_two_lines` needs
+    raw_dimension : (n,) before the effects of the ladder's ends are taken out
+    r2 : (n,) share of variance explained, no evidence for a power law
+    rungs : (n,) rungs used
+    ruler_min, ruler_max : (n,) metres, first and last rung used
+    verdict : (n,) index into `VERDICTS`
+    break_at, break_low, break_high : (n,) metres, under ``two-regime``
+    fine_dimension, coarse_dimension : (n,) below and above the break, or at both ends where curved
+    evidence : (n,) how much better the best alternative is than a power law, in thresholds: 1 decides
+    content : (n,) prefactor of L(r) = content r^(1 - D), in m^D
+    log10_content : (n,)
+    """
+
+    dimension: Floats
+    low: Floats
+    high: Floats
+    spread: Floats
+    error: Floats
+    raw_dimension: Floats
+    r2: Floats
+    rungs: Ints
+    ruler_min: Floats
+    ruler_max: Floats
+    verdict: Ints
+    break_at: Floats
+    break_low: Floats
+    break_high: Floats
+    fine_dimension: Floats
+    coarse_dimension: Floats
+    evidence: Floats
+    content: Floats
+    log10_content: Floats
+    _mean_x: Floats
+    _mean_y: Floats
+    _residual: Floats
+
+    def __len__(self) -> int:
+        """Return the number of features."""
+        return len(self.dimension)
+
+    def verdict_words(self) -> list[str]:
+        """Return the verdicts as words."""
+        return [VERDICTS[code] for code in self.verdict]
+
+    def length_at(
+        self, ruler_m: float | Floats, *, extrapolate: bool = False
+    ) -> tuple[Floats, Floats, Floats]:
+        """Return the length that the fit predicts at a ruler, metres, and its 95 % interval for this line.
+
+        The interval holds what one more walk of the same line at that ruler should find: scatter of the
+        rungs about the fit and the error of its slope for this line.
+
+        Parameters
+        ----------
+        ruler_m : metres, one for all or (n,)
+        extrapolate : whether to predict outside the rungs used too, where the interval also carries the
+            process's error of the slope over the distance; else NaN there
+        """
+        x = np.log(np.asarray(ruler_m, dtype=np.float64)) * np.ones(len(self))
+        middle = self._mean_y + (1 - self.dimension) * (x - self._mean_x)
+        first, last = np.log(self.ruler_min), np.log(self.ruler_max)
+        beyond = np.maximum(np.maximum(first - x, x - last), 0.0)
+        error = np.sqrt(
+            self._residual**2 + (self.spread * (x - self._mean_x)) ** 2 + (self.error * beyond) ** 2
+        )
+        if not extrapolate:
+            middle = np.where(beyond > 1e-9, np.nan, middle)
+        return np.exp(middle), np.exp(middle - 2 * error), np.exp(middle + 2 * error)
+
+
+def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"] = "divider") -> Judgement:
+    """Judge every feature's ladder: dimension, uncertainties, verdict and content.
+
+    Parameters
+    ----------
+    ladders : rulers or box sizes of n features
+    rungs : what was found at them
+    estimator : whose calibration holds
+
+    Examples
+    --------
+    >>> straight = np.geomspace(1, 100, 25)
+    >>> ladders = Ladders(np.array([0, 25]), straight)
+    >>> unknown = np.full(25, np.nan)
+    >>> found = Rungs(np.full(25, 1e4), 1e4 / straight, unknown, np.empty((25, 0)), np.zeros(25),
+    ...               np.ones(1), np.ones(1))
+    >>> judge(ladders, found).verdict_words()
+    ['smooth']
+    """
+    logs = np.full(len(rungs.lengths), np.nan)
+    np.log(rungs.lengths, out=logs, where=rungs.lengths > 0)
+    table = judge_ladders(
+        ladders.offsets,
+        np.log(ladders.rulers),
+        logs,
+        rungs.steps,
+        rungs.noise / rungs.lengths,
+        rungs.tallies,
+        _whole_enough(ladders, rungs),
+        np.log(rungs.detail, where=rungs.detail > 0, out=np.full(len(rungs.detail), -np.inf)),
+        rungs.open_parts,
+        _CONSTANTS[estimator],
+    )
+    return _judgement(table)
+
+
+def _whole_enough(ladders: Ladders, rungs: Rungs) -> Bools:
+    """Whether a rung leaves out little more of its feature than the feature's first rung does."""
+    counts = np.diff(ladders.offsets)
+    first = np.repeat(rungs.left_out[np.minimum(ladders.offsets[:-1], len(rungs.left_out) - 1)], counts)
+    walked = np.repeat(rungs.lengths[np.minimum(ladders.offsets[:-1], len(rungs.lengths) - 1)], counts)
+    return ~(rungs.left_out - first > LEFT_OUT * walked)
+
+
+def _judgement(table: Floats) -> Judgement:
+    def column(name: str) -> Floats:
+        return table[:, _FIELD[name]].copy()
+
+    dimension, mean_x, mean_y = column("dimension"), column("mean_x"), column("mean_y")
+    ln_content = mean_y - (1 - dimension) * mean_x
+    some = ~np.isnan(dimension)
+    return Judgement(
+        dimension=dimension,
+        low=column("low"),
+        high=column("high"),
+        spread=column("spread"),
+        error=column("process_error"),
+        raw_dimension=column("raw_dimension"),
+        r2=column("r2"),
+        rungs=column("rungs").astype(np.int64),
+        ruler_min=np.exp(np.where(some, column("first_x"), np.nan)),
+        ruler_max=np.exp(np.where(some, column("last_x"), np.nan)),
+        verdict=column("verdict").astype(np.int64),
+        break_at=np.exp(column("break_x")),
+        break_low=np.exp(column("break_low_x")),
+        break_high=np.exp(column("break_high_x")),
+        fine_dimension=column("fine_dimension"),
+        coarse_dimension=column("coarse_dimension"),
+        evidence=column("evidence"),
+        content=np.exp(ln_content),
+        log10_content=ln_content / np.log(10.0),
+        _mean_x=mean_x,
+        _mean_y=mean_y,
+        _residual=column("residual"),
+    )
