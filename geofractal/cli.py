@@ -87,7 +87,9 @@ def check(batch_file: Path, *, quiet: bool, verbose: bool) -> None:
         from geofractal.batch.check import check_batch
         from geofractal.config import load_config
 
-        _print(check_batch(load_config(batch_file)).lines())
+        report = check_batch(load_config(batch_file))
+        _print(report.lines())
+        sys.exit(3 if report.failed else 0)
 
 
 @cli.command(epilog=EXIT_CODES)

@@ -19,6 +19,8 @@ import geofractal.batch
 from geofractal.cli import cli
 from geofractal.config import json_schema, load_config
 from geofractal.errors import LayerError, OutputError
+from geofractal.scaling.ladder import divider_ladders
+from geofractal.testing import lines_of
 
 BATCH = """\
 batch: first look
@@ -208,13 +210,14 @@ def test_progress_goes_to_standard_error_in_the_style_asked_for(call, monkeypatc
     assert "measure: 10 features" not in result.stdout
 
 
-def test_check_prints_the_lines_of_its_report(call, monkeypatch):
+@pytest.mark.parametrize(("failed", "code"), [(False, 0), (True, 3)])
+def test_check_prints_its_report_and_fails_where_a_layer_cannot_be_read(call, monkeypatch, failed, code):
     def check_batch(batch):
-        return types.SimpleNamespace(lines=lambda: [batch.name, "one column to come"])
+        return types.SimpleNamespace(lines=lambda: [batch.name, "one column to come"], failed=failed)
 
     stand_in(monkeypatch, "check", check_batch=check_batch)
     result = call("check", "batch.yaml")
-    assert (result.exit_code, result.stdout) == (0, "first look\none column to come\n")
+    assert (result.exit_code, result.stdout) == (code, "first look\none column to come\n")
 
 
 # Measures and schema
@@ -294,12 +297,14 @@ def test_inspect_tells_what_a_folder_holds(call, layers):
     assert [path.rpartition(os.sep)[2] for path in found["unread"]] == ["torn.gpkg"]
 
 
-def test_inspect_tells_the_usable_ladder(call, layers):
-    """From three median segments (75 m) to a sixth of a straight line's extent, its length: 10 km / 6."""
+def test_inspect_tells_the_ladder_that_a_measure_would_use(call, layers):
+    """A straight line of 10 km with a vertex every 25 m, drawn here on a plane."""
+    along = np.linspace(0.0, 10_000.0, 401)
+    rulers = divider_ladders(lines_of([[np.column_stack([along, np.zeros(401)])]])).rulers
     [rivers] = json.loads(call("inspect", layers / "rivers.gpkg", "--json").stdout)["layers"]
-    assert rivers["ruler_min_m"] == pytest.approx(3 * 25, rel=0.01)
-    assert rivers["ruler_max_m"] == pytest.approx(10_000 / 6, rel=0.01)
-    assert rivers["decades"]["50%"] == pytest.approx(np.log10(10_000 / 6 / 75), abs=0.01)
+    assert rivers["ruler_min_m"] == pytest.approx(rulers[0], rel=0.01)
+    assert rivers["ruler_max_m"] == pytest.approx(rulers[-1], rel=0.01)
+    assert rivers["decades"]["50%"] == pytest.approx(np.log10(rulers[-1] / rulers[0]), abs=0.01)
 
 
 def test_inspect_in_text_says_the_same(call, layers):

@@ -12,19 +12,16 @@ from geofractal.config.models import (
     VectorLayer,
 )
 from geofractal.config.schema import json_schema
-from geofractal.config.yaml_tree import KeyPath, config_error
 
 __all__ = [
     "Batch",
     "Format",
-    "KeyPath",
     "MeasureRequest",
     "Outputs",
     "Prepare",
     "Projection",
     "Run",
     "VectorLayer",
-    "config_error",
     "json_schema",
     "load_config",
     "wrong_kinds",
