@@ -18,6 +18,7 @@ from geofractal.reader.layers import allowed
 from geofractal.reader.planes import Projector
 from geofractal.reader.vector import LayerInfo, layer_info, stream
 from geofractal.reader.where import Where
+from geofractal.writer.attach import can_attach
 from geofractal.writer.layer import SUFFIXES
 from geofractal.writer.losses import Loss, expected_losses
 from geofractal.writer.names import refuse_clashes
@@ -64,7 +65,7 @@ class Plan:
 
 
 def _stem(plan: LayerPlan, word: str) -> str:
-    together = word == plan.info.driver == "geopackage"
+    together = word == "geopackage" and can_attach(plan.info)
     return plan.info.path.stem if together else plan.name
 
 

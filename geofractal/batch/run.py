@@ -5,9 +5,11 @@ from __future__ import annotations
 import json
 import shutil
 import time
+from collections.abc import Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +22,7 @@ from geofractal.batch.spool import RowSpool
 from geofractal.config.models import Batch
 from geofractal.errors import GeofractalError, SourceError
 from geofractal.progress import Progress
+from geofractal.writer.attach import Addition
 from geofractal.writer.commit import in_plain_words, publish
 from geofractal.writer.dictionary import write_data_dictionary
 from geofractal.writer.layer import Written, write_layer
@@ -82,11 +85,11 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
                 measured.append(_measure_layer(layer, batch, folder, stack, progress))
             except SourceError as error:
                 failed[layer.name] = error
-        for found in measured:
+        for (target, word), layers in _by_target(plan, measured).items():
             try:
-                _write_copies(plan, found, progress)
+                _write_copy(target, word, layers, progress)
             except SourceError as error:
-                failed[found.plan.name] = error
+                failed |= dict.fromkeys((found.plan.name for found in layers), error)
         columns = {found.plan.name: found.plan.columns for found in measured}
         write_data_dictionary(batch.outputs.folder, columns)
         record = run_record(batch, measured, failed, started)
@@ -119,20 +122,23 @@ def _measure_layer(
     return Measured(layer, spool, tallies, before, time.monotonic() - begun)
 
 
-def _write_copies(plan: Plan, found: Measured, progress: Progress) -> None:
-    """Write a layer's copies; each is confirmed against the source before it takes its place."""
+def _by_target(plan: Plan, measured: Sequence[Measured]) -> dict[tuple[Path, str], list[Measured]]:
+    """Return the layers that go into each file; layers of one GeoPackage go into one copy of it."""
+    together: dict[tuple[Path, str], list[Measured]] = {}
+    for found in measured:
+        for word in plan.batch.outputs.formats:
+            together.setdefault((plan.targets[found.plan.name, word], word), []).append(found)
+    return together
+
+
+def _write_copy(target: Path, word: str, layers: Sequence[Measured], progress: Progress) -> None:
+    """Write one file; it is confirmed against its source before it takes its place."""
     begun = time.monotonic()
-    layer = found.plan
-    for word in plan.batch.outputs.formats:
-        target = plan.targets[layer.name, word]
-        with progress.stage(layer.name, f"write {target.name}", layer.info.features) as stage:
-            found.written[word] = write_layer(
-                layer.info,
-                found.spool,
-                layer.columns,
-                target,
-                word,
-                progress=stage.advance,
-                confirm=lambda: check_unchanged(layer.info.path, found.before),
-            )
-    found.writing_s = time.monotonic() - begun
+    first, *also = (Addition(found.plan.info, found.spool, found.plan.columns) for found in layers)
+    confirm = partial(check_unchanged, first.info.path, layers[0].before)
+    names = " and ".join(found.plan.name for found in layers)
+    with progress.stage(names, f"write {target.name}", sum(found.spool.n_rows for found in layers)) as stage:
+        written = write_layer(*first, target, word, also=also, progress=stage.advance, confirm=confirm)
+    for found in layers:
+        found.written[word] = written
+        found.writing_s += time.monotonic() - begun

@@ -1,5 +1,6 @@
 """Copies of the layers with their new columns, tables and the data dictionary; every commit is atomic."""
 
+from geofractal.writer.attach import Addition
 from geofractal.writer.commit import publish
 from geofractal.writer.dictionary import write_csv, write_data_dictionary, write_field_name_table
 from geofractal.writer.layer import SUFFIXES, Written, write_layer
@@ -10,6 +11,7 @@ from geofractal.writer.sources import Fingerprint, check_unchanged, fingerprint,
 
 __all__ = [
     "SUFFIXES",
+    "Addition",
     "Fingerprint",
     "Loss",
     "Progress",

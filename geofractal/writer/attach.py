@@ -6,7 +6,7 @@ import sqlite3
 from collections.abc import Iterator, Sequence
 from contextlib import closing
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
 from geofractal.errors import OutputError
 from geofractal.measure import Column
@@ -35,13 +35,19 @@ def can_attach(info: LayerInfo) -> bool:
         ]
 
 
-def attach(
-    info: LayerInfo, results: Results, columns: Sequence[Column], part: Path, progress: Progress | None
-) -> None:
-    """Copy the whole GeoPackage to `part` and fill new columns of the layer by feature id.
+class Addition(NamedTuple):
+    """A layer, its results by source row, and what their columns are."""
+
+    info: LayerInfo
+    results: Results
+    columns: Sequence[Column]
+
+
+def attach(additions: Sequence[Addition], part: Path, progress: Progress | None) -> None:
+    """Copy the whole GeoPackage to `part` and fill new columns of its layers by feature id.
 
     Other layers, styles, metadata, triggers, indexes, stored types and ids stay as they are, and so
-    does the date of the layer's last change: the table's new columns are the whole difference. A
+    does the date of a layer's last change: the tables' new columns are the whole difference. A
     database in WAL mode is copied with the changes that are still beside it, and the copy is left in
     the mode without side files.
 
@@ -50,13 +56,16 @@ def attach(
     OutputError
         The copy cannot be written, or holds other rows than were measured.
     """
+    info = additions[0].info
+    path = info.path
     try:
-        copy_merged(info.path, part)
+        copy_merged(path, part)
         with closing(sqlite3.connect(part, isolation_level=None)) as database:
-            _attach(database, info, results, columns, progress)
+            for info, results, columns in additions:
+                _attach(database, info, results, columns, progress)
     except sqlite3.Error as error:
         raise OutputError(
-            f"{part.parent}: layer {info.layer!r} of {info.path} could not get its columns ({error}); "
+            f"{part.parent}: layer {info.layer!r} of {path} could not get its columns ({error}); "
             f"{advice(part)}"
         ) from error
 

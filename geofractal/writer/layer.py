@@ -10,7 +10,7 @@ from geofractal.errors import OutputError
 from geofractal.measure import Column
 from geofractal.reader.layers import driver_of
 from geofractal.reader.vector import LayerInfo
-from geofractal.writer.attach import attach, can_attach
+from geofractal.writer.attach import Addition, attach, can_attach
 from geofractal.writer.commit import advice, publish
 from geofractal.writer.counts import count_rows
 from geofractal.writer.dictionary import write_field_name_table
@@ -47,6 +47,7 @@ def write_layer(
     target: Path,
     format: str,  # noqa: A002 - the word of the batch file
     *,
+    also: Sequence[Addition] = (),
     progress: Progress | None = None,
     confirm: Callable[[], None] | None = None,
 ) -> Written:
@@ -64,6 +65,7 @@ def write_layer(
     columns : what the new columns are
     target : the file to write, with an ending of its format
     format : one of `SUFFIXES`
+    also : further layers of the same GeoPackage, whose columns go into the same copy
     progress : called with the number of rows done since the last call
     confirm : called once the copy is whole; what it raises keeps the copy from being published
 
@@ -78,26 +80,34 @@ def write_layer(
             f"{target}: a {format} file must end in {SUFFIXES.get(format, 'one of its endings')}"
         )
     refuse_sources([target], [info.path])
-    refuse_other_rows(info, results)
+    additions = [Addition(info, results, columns), *also]
+    for addition in additions:
+        refuse_other_rows(addition.info, addition.results)
     losses = expected_losses(info, columns, format)
     with publish(target) as part:
         if format == "geopackage" and can_attach(info):
-            attach(info, results, columns, part, progress)
+            attach(additions, part, progress)
         elif format == info.driver == "geoparquet":
             attach_to_geoparquet(info, results, columns, part, progress)
         elif format == "geoparquet":
             write_geoparquet(info, results, columns, part, progress)
         else:
             rewrite(info, results, columns, part, format, progress)
-        rows = count_rows(part, info.layer, format)
-        if rows != info.features:
-            raise OutputError(
-                f"{target}: {max(rows, 0)} of {info.features} rows can be read from what was written, so it "
-                f"is not kept; {advice(target)}"
-            )
+        for addition in additions:
+            _refuse_lost_rows(addition.info, part, target, format)
         if confirm is not None:
             confirm()
         beside = []
         if format == "shapefile":
             beside.append(write_field_name_table(target, field_names(info, columns, format), columns))
     return Written((target, *beside), info.features, losses)
+
+
+def _refuse_lost_rows(info: LayerInfo, part: Path, target: Path, word: str) -> None:
+    """Raise unless as many rows can be read from what was written as the source has."""
+    rows = count_rows(part, info.layer, word)
+    if rows != info.features:
+        raise OutputError(
+            f"{target}: {max(rows, 0)} of {info.features} rows can be read from what was written, so it "
+            f"is not kept; {advice(target)}"
+        )
