@@ -41,7 +41,7 @@ class Walks(NamedTuple):
     """What the walks found at each rung of a set of ladders; see `walk_ladders`."""
 
     length: Floats
-    spread: Floats
+    noise: Floats
     steps: Floats
     left_out: Floats
     tallies: Floats
@@ -78,27 +78,27 @@ def walk_rulers(lines: Lines, rulers_m: tuple[float, ...] | Floats) -> Walks:
     n, count = len(lines), len(rulers_m)
     ladders = Ladders(np.arange(n + 1) * count, np.tile(np.asarray(rulers_m, dtype=np.float64), n))
     found = _walk(lines, ladders, RING_STARTS, _NO_LIMIT, inner_starts=False)
-    return Walks(*(values.reshape(n, count) for values in found[:-1]), found.tallies)
+    return Walks(*(values.reshape(n, count, *values.shape[1:]) for values in found))
 
 
 def _walk(
     lines: Lines, ladders: Ladders, starts: int, enough: int, *, inner_starts: bool = True, stretches: int = 0
 ) -> Walks:
-    return Walks(
-        *walk_ladders(
-            lines.xy,
-            lines.part_offsets,
-            lines.feature_offsets,
-            lines.closed,
-            lines.radius,
-            ladders.offsets,
-            ladders.rulers,
-            starts,
-            enough,
-            inner_starts,
-            stretches,
-        )
+    table = walk_ladders(
+        lines.xy,
+        lines.part_offsets,
+        lines.feature_offsets,
+        lines.closed,
+        lines.radius,
+        ladders.offsets,
+        ladders.rulers,
+        starts,
+        enough,
+        inner_starts,
+        stretches,
     )
+    length, noise, steps, left_out = np.ascontiguousarray(table[:, :4].T)
+    return Walks(length, noise, steps, left_out, table[:, 4:])
 
 
 def finest_rulers(lines: Lines) -> Floats:
