@@ -30,7 +30,7 @@ INFO = LayerInfo(
     fid_column="fid",
     fields=(("river", "string"),),
     bounds=None,
-    encoding="UTF-8",
+    encoding=None,
     rows_per_batch=2,
 )
 

@@ -53,10 +53,13 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
     driver = driver_of(path)
     if driver is None or found["driver"] != _DRIVERS[driver]:
         raise SourceError(f"{path}: holds {found['driver']} data; give the file the ending of its format")
+    if driver == "geojson-lines":
+        _check_lines(path, int(found["features"]))
     if found["geometry_type"] is None:
         raise LayerError(f"{path}: layer {layer!r} has no geometry")
     declared = str(found["geometry_type"])
-    text = encoding or found["encoding"]
+    if encoding is None and found["encoding"] != "UTF-8":
+        encoding = found["encoding"]  # of a Shapefile that states none; GDAL would hand over the raw bytes
     return LayerInfo(
         path=path,
         layer=layer,
@@ -67,9 +70,9 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
         crs=found["crs"],
         features=int(found["features"]),
         fid_column=found["fid_column"],
-        fields=_fields(path, layer, text),
+        fields=_fields(path, layer, encoding),
         bounds=found["total_bounds"],
-        encoding=text,
+        encoding=encoding,
         rows_per_batch=1,
     )
 
@@ -101,7 +104,7 @@ def _open(
     stack: ExitStack,
     path: Path,
     layer: str,
-    encoding: str,
+    encoding: str | None,
     columns: list[str] | None,
     rows: int,
     *,
@@ -123,7 +126,7 @@ def _open(
     return reader
 
 
-def _fields(path: Path, layer: str, encoding: str) -> tuple[tuple[str, str], ...]:
+def _fields(path: Path, layer: str, encoding: str | None) -> tuple[tuple[str, str], ...]:
     with ExitStack() as stack:
         schema = _open(stack, path, layer, encoding, None, 1, fids=False).schema
     fields = [schema.field(i) for i in range(len(schema) - 1)]
@@ -172,6 +175,20 @@ def _reading(path: Path, layer: str | None = None) -> Iterator[None]:
         zipfile.BadZipFile,
     ) as error:
         raise SourceError(f"{named} cannot be read; it may be damaged or cut off ({error})") from error
+
+
+def _check_lines(path: Path, features: int) -> None:
+    """Refuse a line-delimited file of which GDAL skips a line that it cannot read, and says nothing."""
+    with path.open("rb") as file:
+        texts = sum(1 for line in file if line.strip(b"\x1e \t\r\n"))
+    with path.open("rb") as file:
+        if file.read(1) == b"\x1e":  # RFC 8142: a text may run over several lines
+            texts = 1 + sum(block.count(b"\x1e") for block in iter(lambda: file.read(1 << 20), b""))
+    if texts != features:
+        raise SourceError(
+            f"{path}: {texts} features stand in it and {features} can be read; "
+            "a line is damaged or cut off: save the layer anew"
+        )
 
 
 def _zipped(path: Path) -> dict[str, str]:

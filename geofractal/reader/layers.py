@@ -31,7 +31,7 @@ SUFFIXES: dict[str, Driver] = {
 }
 """How a vector file is read, by the end of its name; ``.zip`` is a zipped Shapefile."""
 
-Kind = Literal["points", "lines", "polygons", "collections", "curves", "unknown"]
+Kind = Literal["points", "lines", "polygons", "collections", "unknown"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,7 +50,7 @@ class LayerInfo:
     fid_column : name of the stored feature id, empty where ids are only positions
     fields : name and Arrow type of each attribute, in order; times held as text are ``datetime``
     bounds : least x, least y, greatest x, greatest y in the layer's CRS; None where unknown
-    encoding : of the text in the file
+    encoding : of the text, where it is given or a custom; None where the file states it
     rows_per_batch : rows a batch of `stream`, from the bytes a row takes
     """
 
@@ -65,7 +65,7 @@ class LayerInfo:
     fid_column: str
     fields: tuple[tuple[str, str], ...]
     bounds: tuple[float, float, float, float] | None
-    encoding: str
+    encoding: str | None
     rows_per_batch: int
 
     @property
@@ -118,10 +118,8 @@ def kind_of(declared: str) -> Kind:
         "Polygon": "polygons",
         "MultiPolygon": "polygons",
         "GeometryCollection": "collections",
-        "Unknown": "unknown",
-        "Geometry": "unknown",
     }
-    return kinds.get(word, "curves")
+    return kinds.get(word, "unknown")
 
 
 def allowed(words: Iterable[str], given: str) -> str:

@@ -41,7 +41,7 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
             fid_column="",
             fields=tuple((field.name, str(field.type)) for field in fields),
             bounds=(box[0], box[1], box[len(box) // 2], box[len(box) // 2 + 1]) if box else None,
-            encoding="UTF-8",
+            encoding=None,
             rows_per_batch=1,
         )
 

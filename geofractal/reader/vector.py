@@ -215,6 +215,6 @@ def _check_text(info: LayerInfo, attributes: pa.RecordBatch) -> None:
             column.validate(full=True)
         except pa.ArrowInvalid:
             raise LayerError(
-                f"{info.path}: layer {info.layer!r}: text of column {name!r} is not {info.encoding}; "
-                "state the right one under 'encoding', such as encoding: ISO-8859-1"
+                f"{info.path}: layer {info.layer!r}: text of column {name!r} is not {info.encoding or 'UTF-8'}; state "
+                "the right one under 'encoding', such as encoding: ISO-8859-1"
             ) from None
