@@ -11,7 +11,8 @@ from pathlib import Path
 from geofractal.batch.parts import GroupsPart, LayerWork, PartInput, RowsPart
 from geofractal.config.load import wrong_kinds
 from geofractal.config.models import Batch, VectorLayer
-from geofractal.errors import ConfigError, LayerError, OutputError, Problem, SourceError
+from geofractal.config.yaml_tree import config_error
+from geofractal.errors import LayerError, OutputError, Problem, SourceError
 from geofractal.measure import Column
 from geofractal.reader.groups import bucket_rows
 from geofractal.reader.layers import allowed
@@ -94,7 +95,7 @@ def plan_batch(batch: Batch) -> Plan:
     kinds = {plan.name: {plan.info.geometry} for plan in plans}
     problems += wrong_kinds(batch, kinds)
     if problems:
-        raise ConfigError("\n".join(map(str, problems)), tuple(problems))
+        raise config_error(batch.file or Path("batch"), problems)
     losses: dict[tuple[str, str], tuple[Loss, ...]] = {
         (plan.name, word): expected_losses(plan.info, plan.columns, word)
         for plan in plans
