@@ -7,6 +7,7 @@ import warnings
 import zipfile
 from collections.abc import Iterator
 from contextlib import ExitStack, contextmanager
+from functools import lru_cache
 from pathlib import Path, PurePosixPath
 from typing import IO, Any
 
@@ -15,6 +16,7 @@ import pyogrio
 import pyogrio.raw
 
 from geofractal.errors import LayerError, SourceError
+from geofractal.reader.flatgeobuf import gathered, starts_over
 from geofractal.reader.layers import LayerInfo, driver_of, kind_of
 from geofractal.reader.unmerged import file_to_open
 
@@ -33,7 +35,7 @@ def layer_names(path: Path) -> tuple[str, ...]:
         return tuple(_zipped(path))
     if driver_of(path) == "shapefile":
         _check_shapefile(path, path.stem)
-    with _reading(path):
+    with _reading(path), _quiet():
         return tuple(name for name, kind in pyogrio.list_layers(file_to_open(path)) if kind is not None)
 
 
@@ -42,7 +44,7 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
     _check_encoding(path, layer, encoding)
     if path.suffix.lower() == ".zip":
         _check_shapefile(path, layer)
-    with _reading(path, layer):
+    with _reading(path, layer), _quiet():
         found = pyogrio.read_info(
             _target(path, layer),
             layer=layer,
@@ -91,13 +93,28 @@ def pieces(info: LayerInfo, columns: tuple[str, ...], rows: int) -> Iterator[pa.
     # GDAL leaves columns out by name whatever their case, so of `Name` and `name` it drops the wrong one
     ask = list(columns) if len(folded) == len(info.fields) else None
     with _reading(info.path, info.layer), ExitStack() as stack:
-        reader = _open(stack, info.path, info.layer, info.encoding, ask, rows, fids=bool(info.fid_column))
+        size = 1 if _lacks_geometry(info) else rows
+        reader = _open(stack, info.path, info.layer, info.encoding, ask, size, fids=bool(info.fid_column))
         first = 1 if info.fid_column else 0
         names = reader.schema.names
         last = len(names) - 1
         chosen = [*range(first), *(names.index(name, first, last) for name in columns), last]
-        for batch in reader:
+        for batch in gathered(reader, rows) if size < rows else reader:
             yield batch.select(chosen)
+
+
+def _lacks_geometry(info: LayerInfo) -> bool:
+    """Tell whether a FlatGeobuf layer has rows without geometry; it is read once to know."""
+    if info.driver != "flatgeobuf":
+        return False
+    stat = info.path.stat()
+    return _starts_over(info.path, info.layer, (stat.st_size, stat.st_mtime_ns))
+
+
+@lru_cache(maxsize=32)
+def _starts_over(path: Path, layer: str, _state: tuple[int, int]) -> bool:
+    with ExitStack() as stack:
+        return starts_over(_open(stack, path, layer, None, [], 100, fids=False))
 
 
 def _open(
@@ -161,10 +178,7 @@ def _reading(path: Path, layer: str | None = None) -> Iterator[None]:
     """Turn what the libraries raise into our errors, which name the file and the layer."""
     named = f"{path}" if layer is None else f"{path}: layer {layer!r}"
     try:
-        with ExitStack() as stack:
-            if layer is None:
-                stack.enter_context(_quiet())
-            yield
+        yield
     except (
         pyogrio.errors.DataSourceError,
         pyogrio.errors.DataLayerError,
