@@ -150,6 +150,7 @@ def test_layers_are_named_or_listed(tmp_path):
         layer_info(path, layer="chanels")
 
 
+@pytest.mark.filterwarnings("ignore:'crs' was not provided")
 @pytest.mark.parametrize("word", [w for w in DRIVERS if not w.startswith("geojson")])
 def test_a_layer_without_crs_is_refused_until_the_config_gives_one(word, tmp_path):
     path = write(tmp_path / f"bare.{DRIVERS[word][0]}", table(), crs=None)
@@ -281,7 +282,7 @@ def test_latin_1_attributes(tmp_path):
     assert next(stream(layer_info(path), columns=["name"])).attributes["name"][3].as_py() == "Größe 3"
     path.with_suffix(".cpg").write_text("UTF-8")
     with pytest.raises(
-        LayerError, match="text of column 'name' is not UTF-8; state the right one under 'encoding'"
+        LayerError, match="text of column 'name' is not UTF-8; state the right one, such as encoding"
     ):
         list(stream(layer_info(path), columns=["name"]))
     path.with_suffix(".cpg").write_text("KOI8-R")
@@ -375,6 +376,12 @@ def test_rows_a_batch_follow_from_the_bytes_a_row_takes(tmp_path):
     large = layer_info(write(tmp_path / "large.fgb", rows))
     assert small.rows_per_batch == 5000
     assert large.rows_per_batch == 24_000_000 // (large.path.stat().st_size / 8)
+
+
+def test_bounds_spoilt_by_a_coordinate_are_unknown(tmp_path):
+    wkb = shapely.to_wkb([LineString([(0, 0), (np.inf, 1)]), LineString([(0, 0), (1, 1)])])
+    rows = pa.table({"a": [1, 2], "geometry": pa.array(wkb, pa.binary())})
+    assert layer_info(write(tmp_path / "rivers.gpkg", rows)).bounds is None
 
 
 def test_polygons_and_mixed_layers_say_so(tmp_path):

@@ -99,6 +99,7 @@ def test_reads_what_shapely_reads(rows, flavor, order, dimension, type_, cut):
     assert lines.closed.tolist() == ends
 
 
+@pytest.mark.filterwarnings("ignore:invalid value encountered in from_wkt")
 @pytest.mark.parametrize(
     ("text", "reason"),
     [

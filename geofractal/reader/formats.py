@@ -17,7 +17,7 @@ import pyogrio.raw
 
 from geofractal.errors import LayerError, SourceError
 from geofractal.reader.flatgeobuf import gathered, starts_over
-from geofractal.reader.layers import LayerInfo, driver_of, kind_of
+from geofractal.reader.layers import SAMPLE_ROWS, LayerInfo, driver_of, finite_bounds, kind_of, sampled
 from geofractal.reader.unmerged import file_to_open
 
 _DRIVERS = {
@@ -29,11 +29,18 @@ _DRIVERS = {
 }
 
 
+_ONE_LAYER = ("geojson", "geojson-lines")
+"""Text formats, read whole whenever they are opened: not for a layer's name, which the file's does for."""
+
+
 def layer_names(path: Path) -> tuple[str, ...]:
     """Return the names of the layers that have geometry."""
     if path.suffix.lower() == ".zip":
         return tuple(_zipped(path))
-    if driver_of(path) == "shapefile":
+    driver = driver_of(path)
+    if driver in _ONE_LAYER:
+        return (path.stem,)
+    if driver == "shapefile":
         _check_shapefile(path, path.stem)
     with _reading(path), _quiet():
         return tuple(name for name, kind in pyogrio.list_layers(file_to_open(path)) if kind is not None)
@@ -45,9 +52,10 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
     if path.suffix.lower() == ".zip":
         _check_shapefile(path, layer)
     with _reading(path, layer), _quiet():
+        target, inside = _target(path, layer)
         found = pyogrio.read_info(
-            _target(path, layer),
-            layer=layer,
+            target,
+            layer=inside,
             encoding=encoding,
             force_feature_count=True,
             force_total_bounds=True,
@@ -62,7 +70,7 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
     declared = str(found["geometry_type"])
     if encoding is None and found["encoding"] != "UTF-8":
         encoding = found["encoding"]  # of a Shapefile that states none; GDAL would hand over the raw bytes
-    return LayerInfo(
+    info = LayerInfo(
         path=path,
         layer=layer,
         driver=driver,
@@ -73,13 +81,15 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
         features=int(found["features"]),
         fid_column=found["fid_column"],
         fields=_fields(path, layer, encoding),
-        bounds=found["total_bounds"],
+        bounds=finite_bounds(found["total_bounds"]),
         encoding=encoding,
         rows_per_batch=1,
     )
+    first = (piece.column(piece.num_columns - 1) for piece in pieces(info, (), SAMPLE_ROWS))
+    return sampled(info, first, _bytes_of(path))
 
 
-def bytes_of(path: Path) -> int:
+def _bytes_of(path: Path) -> int:
     """Return the size of a file's contents; zipped ones count unpacked."""
     if path.suffix.lower() == ".zip":
         with zipfile.ZipFile(path) as archive:
@@ -93,13 +103,14 @@ def pieces(info: LayerInfo, columns: tuple[str, ...], rows: int) -> Iterator[pa.
     # GDAL leaves columns out by name whatever their case, so of `Name` and `name` it drops the wrong one
     ask = list(columns) if len(folded) == len(info.fields) else None
     with _reading(info.path, info.layer), ExitStack() as stack:
-        size = 1 if _lacks_geometry(info) else rows
+        gaps = _lacks_geometry(info)
+        size = 1 if gaps else rows
         reader = _open(stack, info.path, info.layer, info.encoding, ask, size, fids=bool(info.fid_column))
         first = 1 if info.fid_column else 0
         names = reader.schema.names
         last = len(names) - 1
         chosen = [*range(first), *(names.index(name, first, last) for name in columns), last]
-        for batch in gathered(reader, rows) if size < rows else reader:
+        for batch in gathered(reader, rows) if gaps else reader:
             yield batch.select(chosen)
 
 
@@ -127,11 +138,12 @@ def _open(
     *,
     fids: bool,
 ) -> Any:
+    target, inside = _target(path, layer)
     with _quiet():
         _, reader = stack.enter_context(
             pyogrio.raw.open_arrow(
-                _target(path, layer),
-                layer=layer,
+                target,
+                layer=inside,
                 encoding=encoding,
                 columns=columns,
                 return_fids=fids,
@@ -217,10 +229,11 @@ def _zipped(path: Path) -> dict[str, str]:
     return dict(zip(names, map(str, shapes), strict=True))
 
 
-def _target(path: Path, layer: str) -> Path | str:
-    if path.suffix.lower() != ".zip":
-        return file_to_open(path)
-    return f"/vsizip/{{{path.resolve()}}}/{_zipped(path)[layer]}"
+def _target(path: Path, layer: str) -> tuple[Path | str, str | int]:
+    """Return what GDAL opens, and the layer in it."""
+    if path.suffix.lower() == ".zip":
+        return f"/vsizip/{{{path.resolve()}}}/{_zipped(path)[layer]}", 0
+    return file_to_open(path), 0 if driver_of(path) in _ONE_LAYER else layer
 
 
 def _check_shapefile(path: Path, layer: str) -> None:

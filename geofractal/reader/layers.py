@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Iterable
-from dataclasses import dataclass
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, replace
+from itertools import islice
+from math import isfinite
 from pathlib import Path
 from typing import Literal
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 
 from geofractal.measure import Ints
 
@@ -30,6 +33,10 @@ SUFFIXES: dict[str, Driver] = {
     ".geoparquet": "geoparquet",
 }
 """How a vector file is read, by the end of its name; ``.zip`` is a zipped Shapefile."""
+
+SAMPLE_ROWS = 100
+_BATCH_BYTES = 24_000_000
+_BATCH_ROWS = (8, 5_000)
 
 Kind = Literal["points", "lines", "polygons", "collections", "unknown"]
 
@@ -99,6 +106,47 @@ class Batch:
     def rows(self) -> Ints:
         """Return the position of each row in the stream."""
         return np.arange(self.first_row, self.first_row + len(self), dtype=np.int64)
+
+
+def sampled(info: LayerInfo, geometries: Iterable[pa.Array], file_bytes: int) -> LayerInfo:
+    """Return `info` with the rows of a batch, and Z and M, from the first features and the file's size.
+
+    The larger of both sizes counts: features are often stored by size, and a file may hold more
+    than this layer.
+
+    Parameters
+    ----------
+    info : the layer
+    geometries : WKB of its rows in order, `SAMPLE_ROWS` at a time
+    file_bytes : size of the file's contents, unpacked
+    """
+    rows, taken, types = 0, 0, set[int]()
+    for wkb in islice(geometries, 10):
+        rows += len(wkb)
+        taken += pc.sum(pc.binary_length(wkb)).as_py() or 0
+        types |= {_type_code(head) for head in pc.binary_slice(wkb, 0, 5).to_pylist() if head}
+        if taken > _BATCH_BYTES:
+            break
+    a_row = max(taken / rows, file_bytes / max(info.features, 1)) if rows else 1.0
+    least, most = _BATCH_ROWS
+    return replace(
+        info,
+        has_z=info.has_z or any(code & 0x80000000 or (code & 0xFFFF) // 1000 in {1, 3} for code in types),
+        has_m=any(code & 0x40000000 or (code & 0xFFFF) // 1000 in {2, 3} for code in types),
+        rows_per_batch=max(least, min(most, int(_BATCH_BYTES / a_row))),
+    )
+
+
+def _type_code(head: bytes) -> int:
+    return int.from_bytes(head[1:5], "little" if head[0] else "big")
+
+
+def finite_bounds(bounds: Sequence[float] | None) -> tuple[float, float, float, float] | None:
+    """Return bounds in two dimensions, None where a coordinate has spoilt them."""
+    if bounds is None or not all(map(isfinite, bounds)):
+        return None
+    half = len(bounds) // 2
+    return (bounds[0], bounds[1], bounds[half], bounds[half + 1])
 
 
 def driver_of(path: Path) -> Driver | None:

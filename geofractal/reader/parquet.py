@@ -12,7 +12,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from geofractal.errors import LayerError, SourceError
-from geofractal.reader.layers import Kind, LayerInfo, kind_of
+from geofractal.reader.layers import SAMPLE_ROWS, Kind, LayerInfo, finite_bounds, kind_of, sampled
 
 
 def layer_names(path: Path) -> tuple[str, ...]:
@@ -27,9 +27,8 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
     with _opened(path) as file:
         name, geo = _geometry(path, file)
         types = geo.get("geometry_types") or []
-        box = geo.get("bbox")
         fields = [field for field in file.schema_arrow if field.name != name]
-        return LayerInfo(
+        info = LayerInfo(
             path=path,
             layer=layer,
             driver="geoparquet",
@@ -40,17 +39,13 @@ def describe(path: Path, layer: str, encoding: str | None) -> LayerInfo:
             features=file.metadata.num_rows,
             fid_column="",
             fields=tuple((field.name, str(field.type)) for field in fields),
-            bounds=(box[0], box[1], box[len(box) // 2], box[len(box) // 2 + 1]) if box else None,
+            bounds=finite_bounds(geo.get("bbox")),
             encoding=None,
             rows_per_batch=1,
         )
-
-
-def bytes_of(path: Path) -> int:
-    """Return the size of a file's contents, unpacked."""
-    with _opened(path) as file:
-        groups = file.metadata
-        return sum(groups.row_group(i).total_byte_size for i in range(groups.num_row_groups))
+        groups = [file.metadata.row_group(i) for i in range(file.num_row_groups)]
+    first = (batch.column(0) for batch in pieces(info, (), SAMPLE_ROWS))
+    return sampled(info, first, sum(group.total_byte_size for group in groups))
 
 
 def pieces(info: LayerInfo, columns: tuple[str, ...], rows: int) -> Iterator[pa.RecordBatch]:

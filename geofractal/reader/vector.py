@@ -4,22 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import replace
-from itertools import islice
 from pathlib import Path
 from types import ModuleType
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 
 from geofractal.errors import LayerError, SourceError
 from geofractal.reader.layers import SUFFIXES, Batch, LayerInfo, allowed, driver_of
 
 __all__ = ["Batch", "LayerInfo", "layer_info", "list_layers", "stream"]
-
-_BATCH_BYTES = 24_000_000
-_BATCH_ROWS = (8, 5_000)
-_SAMPLE_ROWS = 1_000
 
 
 def list_layers(path: Path) -> tuple[str, ...]:
@@ -63,8 +57,7 @@ def layer_info(
     source = _format(path)
     name = _choose(path, source.layer_names(path), layer)
     info: LayerInfo = source.describe(path, name, encoding)
-    info = replace(info, crs=_crs(info, crs, override=override_crs, needed=need_crs))
-    return _sampled(info, source)
+    return replace(info, crs=_crs(info, crs, override=override_crs, needed=need_crs))
 
 
 def stream(
@@ -181,40 +174,12 @@ def _crs(info: LayerInfo, given: str | None, *, override: bool, needed: bool) ->
     return own.to_wkt()
 
 
-def _sampled(info: LayerInfo, source: ModuleType) -> LayerInfo:
-    """Return `info` with the rows of a batch, and Z and M, from the first features and the file's size.
-
-    The larger of both sizes counts: features are often stored by size, and a file may hold more
-    than this layer.
-    """
-    rows, taken, types = 0, 0, set[int]()
-    for piece in islice(source.pieces(info, (), 100), _SAMPLE_ROWS // 100):
-        wkb = piece.column(piece.num_columns - 1)
-        rows += piece.num_rows
-        taken += pc.sum(pc.binary_length(wkb)).as_py() or 0
-        types |= {_type_code(head) for head in pc.binary_slice(wkb, 0, 5).to_pylist() if head}
-        if taken > _BATCH_BYTES:
-            break
-    a_row = max(taken / rows, source.bytes_of(info.path) / max(info.features, 1)) if rows else 1.0
-    least, most = _BATCH_ROWS
-    return replace(
-        info,
-        has_z=info.has_z or any(code & 0x80000000 or (code & 0xFFFF) // 1000 in {1, 3} for code in types),
-        has_m=any(code & 0x40000000 or (code & 0xFFFF) // 1000 in {2, 3} for code in types),
-        rows_per_batch=max(least, min(most, int(_BATCH_BYTES / a_row))),
-    )
-
-
-def _type_code(head: bytes) -> int:
-    return int.from_bytes(head[1:5], "little" if head[0] else "big")
-
-
 def _check_text(info: LayerInfo, attributes: pa.RecordBatch) -> None:
     for name, column in zip(attributes.schema.names, attributes.columns, strict=True):
         try:
             column.validate(full=True)
         except pa.ArrowInvalid:
             raise LayerError(
-                f"{info.path}: layer {info.layer!r}: text of column {name!r} is not {info.encoding or 'UTF-8'}; state "
-                "the right one under 'encoding', such as encoding: ISO-8859-1"
+                f"{info.path}: layer {info.layer!r}: text of column {name!r} is not "
+                f"{info.encoding or 'UTF-8'}; state the right one, such as encoding: ISO-8859-1"
             ) from None
