@@ -1,6 +1,7 @@
 import json
 import struct
 import time
+import zipfile
 from dataclasses import replace
 
 import numpy as np
@@ -157,6 +158,15 @@ def test_missing_geometries_keep_their_rows(tmp_path, layout):
     assert found.geometry.isna().tolist() == [False, True, False]
 
 
+def test_a_zipped_shapefile_is_a_source_like_others(tmp_path):
+    make(tmp_path / "a.shp", lines(2), {"n": pa.array([1, 2])})
+    with zipfile.ZipFile(tmp_path / "a.zip", "w") as archive:
+        for path in tmp_path.glob("a.[sdpc]*"):
+            archive.write(path, path.name)
+    found = columns_of(copied(layer_info(tmp_path / "a.zip"), tmp_path / "b.gpkg", "geopackage").paths[0])
+    assert found["n"].tolist() == [1, 2]
+
+
 @pytest.mark.parametrize("layout", ["shapefile", "flatgeobuf", "geoparquet"])
 def test_stored_feature_ids_become_an_ordinary_column(tmp_path, layout):
     info = make(
@@ -249,6 +259,13 @@ def test_numbers_that_are_not_finite_become_missing_in_geojson_and_that_is_told(
     assert "column 'x': values that are not finite numbers become missing" in losses
 
 
+def test_dates_become_times_at_midnight_in_flatgeobuf_and_that_is_told(tmp_path):
+    days = pa.array([18263, None], pa.date32())  # days from 1970-01-01 to 2020-01-02
+    found, _, losses = copy_of(tmp_path, "geopackage", lines(2), {"d": days}, "flatgeobuf")
+    assert found["d"] == ["2020-01-02T00:00:00", None]
+    assert "column 'd': dates become times at midnight" in losses
+
+
 def test_bytes_become_hexadecimal_text_where_a_format_has_none_and_that_is_told(tmp_path):
     found, _, losses = copy_of(tmp_path, "geopackage", lines(1), {"b": pa.array([b"\x00\xff"])}, "geojson")
     assert found["b"] == ["00FF"]
@@ -270,6 +287,7 @@ def test_heights_are_carried_through(tmp_path, layout):
     assert [shapely.from_wkb(bytes(w)).coords[1] for w in wkb] == [(1, 1, 6)] * 2
 
 
+@pytest.mark.filterwarnings("ignore:Measured")
 @pytest.mark.parametrize("layout", ["geopackage", "shapefile", "geoparquet"])
 @pytest.mark.parametrize("text", [M, ZM])
 def test_measures_of_vertices_are_carried_through_where_a_format_can(tmp_path, layout, text):

@@ -71,6 +71,12 @@ def test_short_names_in_use_are_told(tmp_path):
     assert "column 'divider_dim': is named 'div_dim_1'" in losses
 
 
+def test_more_than_a_hundred_names_that_begin_alike_are_told_apart(tmp_path):
+    copied(tmp_path, lines(1), {f"length_at_{i}m_ruler": pa.array([i]) for i in range(150)})
+    found, _ = read_rows(tmp_path / "b.shp")
+    assert list(found.values())[:150] == [[i] for i in range(150)]
+
+
 def test_text_is_cut_between_characters_at_254_bytes_and_that_is_told(tmp_path):
     _, losses = copied(tmp_path, lines(3), {"s": pa.array(["x" * 300, "x" + "é" * 200, "é" * 127])})
     found, _ = read_rows(tmp_path / "b.shp")
@@ -114,6 +120,21 @@ def test_the_limit_of_two_gigabytes_is_asked_of_gdal(tmp_path, monkeypatch):
     monkeypatch.setattr(pyogrio.raw, "write_arrow", spy)
     copied(tmp_path, lines(1), {"n": pa.array([1])})
     assert asked["2GB_LIMIT"] == "YES"
+
+
+def test_a_layer_beyond_the_limit_is_refused_with_a_way_out(tmp_path, monkeypatch):
+    info = make(tmp_path / "a.fgb", lines(3), {"n": pa.array([1, 2, 3])})
+
+    def full(_, path, **__):
+        with path.open("wb") as file:
+            file.truncate(2_147_000_000)  # a hole, which takes no room
+        raise pyogrio.errors.DataLayerError("No such file or directory")
+
+    monkeypatch.setattr(pyogrio.raw, "write_arrow", full)
+    with pytest.raises(
+        OutputError, match=r"whose \.shp holds 2 GB at most: choose another format, such as geopackage"
+    ):
+        write_layer(info, Answers(3), COLUMNS, tmp_path / "b.shp", "shapefile")
 
 
 def test_a_table_that_was_cut_off_is_found_out(tmp_path, monkeypatch):

@@ -55,8 +55,9 @@ def write_layer(
 
     From GeoPackage to GeoPackage the whole file is copied and the columns are attached, from
     GeoParquet to GeoParquet geometry and other columns are passed through; every other pair is
-    written anew as far as the format can hold it. The copy appears at `target` once it is whole and
-    holds as many rows as the source.
+    written anew as far as the format can hold it, and dated by its source, so that the same input
+    gives the same bytes. The copy appears at `target` once it is whole and holds as many rows as the
+    source.
 
     Parameters
     ----------

@@ -31,6 +31,8 @@ DRIVERS = {
     "geojson-lines": "GeoJSONSeq",
 }
 _INDEX_BYTES = "64000000"  # beyond it GDAL builds the R-tree on disk, so memory stays flat
+SHAPEFILE_BYTES = 1 << 31
+_NEAR_LIMIT = 1 << 28  # the feature that did not fit was smaller
 _GEOMETRY_MARK = {"ARROW:extension:name": "geoarrow.wkb"}
 
 
@@ -99,11 +101,23 @@ def rewrite(
             )
         except (RuntimeError, ValueError) as error:
             if feed.failure is None:
+                _refuse_too_large(part, named)
                 raise OutputError(
                     f"{part.parent}: GDAL could not write {named} as {layout} ({error}); {advice(part)}"
                 ) from error
     if feed.failure is not None:
         raise feed.failure
+
+
+def _refuse_too_large(part: Path, named: str) -> None:
+    """Raise if a Shapefile ended at its limit, which GDAL reports as a missing file."""
+    for suffix in (".shp", ".dbf"):
+        file = part.with_suffix(suffix)
+        if part.suffix == ".shp" and file.exists() and file.stat().st_size > SHAPEFILE_BYTES - _NEAR_LIMIT:
+            raise OutputError(
+                f"{named} does not fit into a Shapefile, whose {suffix} holds 2 GB at most: "
+                "choose another format, such as geopackage, or split the layer"
+            )
 
 
 class _Feed:
