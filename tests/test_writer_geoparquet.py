@@ -132,6 +132,17 @@ def test_each_type_reaches_a_geopackage_or_its_loss_is_told(parquet, tmp_path, n
     assert [x.what for x in written.losses if x.column == name] == ([] if loss is None else [loss])
 
 
+@pytest.mark.parametrize("layout", ["shapefile", "flatgeobuf", "geojson"])
+def test_every_type_reaches_each_other_format(parquet, tmp_path, layout):
+    written = copied(parquet, tmp_path, layout)
+    found, _ = read_rows(written.paths[0])
+    assert (found["half"], found["class"], found["span"]) == (
+        [0.5, 1.5, 2.0],
+        ["a", None, "a"],
+        [90, None, -1],
+    )
+
+
 def test_whole_numbers_beyond_64_bits_with_sign_are_refused_with_a_way_out(tmp_path):
     frame = gpd.GeoDataFrame({"cell": np.array([2**63], np.uint64)}, geometry=lines(1), crs=4326)
     frame.to_parquet(tmp_path / "a.parquet")

@@ -26,7 +26,10 @@ def can_attach(info: LayerInfo) -> bool:
     # immutable: a database in WAL mode is not touched, not even by files beside it
     address = f"{file_to_open(info.path).resolve().as_uri()}?immutable=1"
     with closing(sqlite3.connect(address, uri=True)) as database:
-        kind = database.execute("SELECT type FROM sqlite_master WHERE name = ? COLLATE NOCASE", [info.layer])
+        kind = database.execute(
+            "SELECT type FROM sqlite_master WHERE type IN ('table', 'view') AND name = ? COLLATE NOCASE",
+            [info.layer],
+        )
         keys = database.execute(
             "SELECT name, type FROM pragma_table_info(?) WHERE pk", [info.layer]
         ).fetchall()

@@ -43,6 +43,8 @@ def _portable(column: pa.Array, field: pa.Field) -> tuple[pa.Array, dict[str, st
         return _json(column), JSON_TEXT
     if pa.types.is_uint64(kind):
         return _signed(column, field.name), None
+    if pa.types.is_float16(kind):
+        return column.cast(pa.float32()), None
     if pa.types.is_decimal(kind):
         return column.cast(pa.float64()), None
     if pa.types.is_duration(kind):
