@@ -162,12 +162,8 @@ def test_inner_starts_walk_to_both_ends(size):
     whole = [plain_length(line, ruler), plain_length(line[::-1], ruler)]
     lengths = np.concatenate(([0], np.cumsum(np.linalg.norm(np.diff(line, axis=0), axis=1))))
     for share in (0.25, 0.5, 0.75):
-        s = share * lengths[-1]
-        i = np.searchsorted(lengths, s) - 1
-        point = line[i] + (s - lengths[i]) / (lengths[i + 1] - lengths[i]) * (line[i + 1] - line[i])
-        onward = np.vstack([point, line[i + 1 :]])
-        back = np.vstack([point, line[i::-1]])
-        whole.append(plain_length(onward, ruler) + plain_length(back, ruler))
+        i = np.argmin(np.abs(lengths - share * lengths[-1]))
+        whole.append(plain_length(line[i:], ruler) + plain_length(line[i::-1], ruler))
     found = walk([line], ruler, starts=4)
     assert found.length[0] == pytest.approx(np.mean(whole), rel=1e-9)
     assert found.noise[0] == pytest.approx(standard_error(whole), rel=1e-9)

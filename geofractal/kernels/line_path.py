@@ -1,6 +1,4 @@
-"""A line's part laid out for walking: in an order of its own, with vertices where walks start."""
-
-# ruff: noqa: FBT001 - kernels take flat values one by one, by position
+"""Where the walks of a part start, and where the stretches of its line end."""
 
 from __future__ import annotations
 
@@ -18,120 +16,138 @@ if TYPE_CHECKING:
     Ints = NDArray[np.int64]
 
 _SNAP = 1e-6
-"""A start within this share of a segment from one of its ends is that vertex itself."""
+"""A place within this share of a segment from one of its ends is that vertex itself."""
 
 
 @kernel
-def _gap(xy: Floats, i: int, j: int) -> float:
+def _gap(points: Floats, i: int, j: int) -> float:
     """Straight distance of two vertices."""
-    square = 0.0
-    for k in range(xy.shape[1]):
-        square += (xy[j, k] - xy[i, k]) ** 2
-    return math.sqrt(square)
+    dx = points[j, 0] - points[i, 0]
+    dy = points[j, 1] - points[i, 1]
+    dz = points[j, 2] - points[i, 2] if points.shape[1] == 3 else 0.0
+    return math.sqrt(dx * dx + dy * dy + dz * dz)
 
 
 @kernel
-def _outermost(xy: Floats, first: int, last: int) -> int:
-    """Find a ring's vertex farthest from its centre: a start that does not depend on how it is stored."""
-    size = xy.shape[1]
-    centre = np.zeros(3)
+def _line_way(points: Floats) -> int:
+    """Direction of a line, 1 or -1, that is the same whichever way it is stored: from lower x (y, z)."""
+    for k in range(points.shape[1]):
+        if points[0, k] != points[-1, k]:
+            return 1 if points[0, k] < points[-1, k] else -1
+    return 1
+
+
+@kernel
+def part_length(points: Floats) -> float:
+    """Length of a polyline, the same to the bit whichever way it is stored."""
+    way = _line_way(points)
+    i = 0 if way > 0 else len(points) - 1
     total = 0.0
-    for i in range(first, last - 1):
-        step = _gap(xy, i, i + 1)
-        total += step
-        for k in range(size):
-            centre[k] += step * ((xy[i, k] + xy[i + 1, k]) / 2 - xy[first, k])
-    if total > 0:
-        centre /= total
-    farthest = -1.0
-    origin = first
-    for i in range(first, last - 1):
-        square = 0.0
-        for k in range(size):
-            square += (xy[i, k] - xy[first, k] - centre[k]) ** 2
-        if square > farthest:
-            farthest = square
-            origin = i
-    return origin
-
-
-@kernel
-def _line_order(xy: Floats, first: int, last: int) -> tuple[int, int]:
-    """End and direction of an open line that do not depend on which way it was drawn."""
-    for k in range(xy.shape[1]):
-        if xy[first, k] < xy[last - 1, k]:
-            return first, 1
-        if xy[first, k] > xy[last - 1, k]:
-            return last - 1, -1
-    return first, 1
-
-
-@kernel
-def part_length(xy: Floats, first: int, last: int, closed: bool) -> float:
-    """Length of the vertices ``first`` to ``last``, exclusive: to the bit whichever way a line is stored."""
-    i, way = (first, 1) if closed else _line_order(xy, first, last)
-    total = 0.0
-    for _ in range(last - first - 1):
-        total += _gap(xy, i, i + way)
+    for _ in range(len(points) - 1):
+        total += _gap(points, i, i + way)
         i += way
     return total
 
 
 @kernel
-def lay_path(
-    xy: Floats, first: int, last: int, closed: bool, starts: int, length: float
-) -> tuple[Floats, Ints]:
-    """Copy a part in an order of its own, with a vertex at every ``length / starts`` of it.
+def _places(points: Floats, way: int, before: float, whole: float, count: int) -> Ints:
+    """Vertices nearest along the line to each of the `count` - 1 inner divisions of `whole`.
 
-    Open lines begin at the end with the lower x (then y, z), rings at their outermost vertex, which is
-    repeated at the end: the path of an open line is the same to the bit whichever way it is stored.
-
-    Returns the path, (m, 2) or (m, 3), and the vertices of the starts.
+    The points, taken in direction `way`, begin after a length of `before`. A division that lies before
+    them is placed before the first, one that lies behind them at ``len(points)``.
     """
-    i, way = (_outermost(xy, first, last), 1) if closed else _line_order(xy, first, last)
-    size = xy.shape[1]
-    path = np.empty((last - first + starts - 1, size))
-    places = np.zeros(starts, np.int64)
+    places = np.empty(max(count - 1, 0), np.int64)
+    for k in range(len(places)):
+        places[k] = len(points)
+    i = 0 if way > 0 else len(points) - 1
+    along = before
+    passed = 0
+    for n in range(len(points) if count > 1 else 0):
+        step = _gap(points, i - way, i) if n > 0 else 0.0
+        along += step
+        while passed < count - 1 and whole * (passed + 1) / count <= along - step / 2:
+            places[passed] = i - way
+            passed += 1
+        i += way
+    return places
+
+
+@kernel
+def stretch_ends(points: Floats, before: float, whole: float, stretches: int) -> Ints:
+    """Last vertices of all but the last of the stretches of equal length that a feature is cut into.
+
+    The part begins after a length of `before` out of `whole`; a stretch that ends before it or behind it
+    ends at vertex -1 or ``len(points)``.
+    """
+    return _places(points, 1, before, whole, stretches)
+
+
+@kernel
+def line_starts(points: Floats, starts: int, length: float) -> Ints:
+    """Vertices where walks of an open line start: the first, then those nearest to ``length / starts`` each.
+
+    Further starts are the same points whichever way the line is stored.
+    """
+    way = _line_way(points)
+    found = np.zeros(starts, np.int64)
+    inner = _places(points, way, 0.0, length, starts)
+    for k in range(starts - 1):
+        found[k + 1] = min(max(inner[k], 0), len(points) - 1)
+    return found
+
+
+@kernel
+def _outermost(ring: Floats) -> int:
+    """Find a ring's vertex farthest from its centre: a start that does not depend on how it is stored."""
+    size = ring.shape[1]
+    centre = np.zeros(3)
+    total = 0.0
+    for i in range(len(ring) - 1):
+        step = _gap(ring, i, i + 1)
+        total += step
+        for k in range(size):
+            centre[k] += step * ((ring[i, k] + ring[i + 1, k]) / 2 - ring[0, k])
+    farthest = -1.0
+    found = 0
+    for i in range(len(ring) - 1):
+        square = 0.0
+        for k in range(size):
+            square += (ring[i, k] - ring[0, k] - centre[k] / total) ** 2
+        if square > farthest:
+            farthest = square
+            found = i
+    return found
+
+
+@kernel
+def lay_ring(ring: Floats, starts: int, length: float) -> tuple[Floats, Ints]:
+    """Copy a ring from its outermost vertex on, with a vertex at every ``length / starts`` of it.
+
+    Returns the points, the first repeated at the end, and the vertices of the starts.
+    """
+    size = ring.shape[1]
+    points = np.empty((len(ring) + starts - 1, size))
+    found = np.zeros(starts, np.int64)
+    i = _outermost(ring)
     for k in range(size):
-        path[0, k] = xy[i, k]
+        points[0, k] = ring[i, k]
     filled = 1
     start = 1
     along = 0.0
-    for _ in range(last - first - 1):
-        j = i + way
-        if closed and j == last - 1:
-            j = first
-        step = _gap(xy, i, j)
+    for _ in range(len(ring) - 1):
+        j = i + 1 if i + 1 < len(ring) - 1 else 0
+        step = _gap(ring, i, j)
         while start < starts and length * start / starts < along + step * (1 - _SNAP):
             t = (length * start / starts - along) / step
             if t > _SNAP:
                 for k in range(size):
-                    path[filled, k] = xy[i, k] + t * (xy[j, k] - xy[i, k])
+                    points[filled, k] = ring[i, k] + t * (ring[j, k] - ring[i, k])
                 filled += 1
-            places[start] = filled - 1
+            found[start] = filled - 1
             start += 1
         for k in range(size):
-            path[filled, k] = xy[j, k]
+            points[filled, k] = ring[j, k]
         filled += 1
         along += step
         i = j
-    return path[:filled], places
-
-
-@kernel
-def stretch_ends(path: Floats, before: float, whole: float, stretches: int) -> Ints:
-    """Return the last vertices of all but the last of the stretches of equal length of a feature.
-
-    The path is the part that begins after a length of `before` out of `whole`; a stretch that ends before
-    it or after it is cut at vertex -1 or behind its last.
-    """
-    cuts = np.full(max(stretches - 1, 0), len(path), np.int64)
-    along = before
-    reached = 0
-    for i in range(len(path) if stretches > 1 else 0):
-        if i > 0:
-            along += _gap(path, i - 1, i)
-        while reached < stretches - 1 and along > whole * (reached + 1) / stretches:
-            cuts[reached] = i - 1
-            reached += 1
-    return cuts
+    return points[:filled], found

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.kernels.jit import kernel
-from geofractal.kernels.line_path import lay_path, part_length, stretch_ends
+from geofractal.kernels.line_path import lay_ring, line_starts, part_length, stretch_ends
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -32,8 +32,8 @@ class Part(NamedTuple):
 
     Attributes
     ----------
-    points : (m, 2) or (m, 3) vertices in the order of the walk; a ring ends with its first again
-    starts : vertices from which walks start, evenly spaced
+    points : (m, 2) or (m, 3) vertices; a ring ends with its first again
+    starts : vertices from which walks start
     cuts : last vertex of each of the feature's stretches but the last
     boxes, bases : hierarchy of bounding boxes of the vertices
     length : of the polyline
@@ -283,7 +283,8 @@ def _walk_part(part: Part, radius: float, rulers: Floats, enough: int, found: Fl
     """Add what the walks of one part find to a feature's rows, columns as `walk_ladders` returns them."""
     tally = np.zeros(found.shape[1] - 4)
     for q in range(len(rulers)):
-        tally[:] = 0.0
+        for k in range(len(tally)):
+            tally[k] = 0.0
         walks, mean, variance, steps = _walk_rung(part, radius, rulers[q], enough, tally)
         if walks == 0:
             found[q, 3] += part.length
@@ -314,8 +315,9 @@ def walk_ladders(
     An open line is walked from both ends, a ring both ways around from its vertex farthest from its
     centre. Where such a walk takes fewer than `enough_steps`, further starts are added, evenly spaced
     along the part, until starts x steps reach that number: a ring is walked both ways from each, an
-    open line from each to both ends. (Walks the same way around soon fall into each other's steps,
-    whatever their start, so that one way alone may be off by more than its starts show.)
+    open line from the vertex nearest to each to both ends. (Walks the same way around soon fall into
+    each other's steps, whatever their start, so that one way alone may be off by more than its starts
+    show.)
 
     A part is long enough for a ruler where a whole step can be taken from each end of an open line, or
     from every starting point of a ring. The lengths of such parts add up; of the others the length of
@@ -344,22 +346,26 @@ def walk_ladders(
         lo, hi = rung_offsets[f], rung_offsets[f + 1]
         if lo == hi:
             continue
-        lengths = np.empty(last - first)
+        whole = 0.0
         for p in range(first, last):
-            lengths[p - first] = part_length(xy, part_offsets[p], part_offsets[p + 1], closed[p])
+            whole += part_length(xy[part_offsets[p] : part_offsets[p + 1]])
         before = 0.0
         for p in range(first, last):
-            length = lengths[p - first]
+            points = xy[part_offsets[p] : part_offsets[p + 1]]
+            length = part_length(points) if last > first + 1 else whole
             if length > 0:
-                starts = most_starts if inner_starts or closed[p] else 1
-                points, at = lay_path(xy, part_offsets[p], part_offsets[p + 1], closed[p], starts, length)
-                cuts = stretch_ends(points, before, lengths.sum(), stretches)
+                if closed[p]:
+                    points, starts = lay_ring(points, most_starts, length)
+                else:
+                    starts = line_starts(points, most_starts if inner_starts else 1, length)
+                cuts = stretch_ends(points, before, whole, stretches)
                 bases = _box_levels(len(points))
-                part = Part(points, at, cuts, _boxes(points, bases), bases, length, closed[p])
+                part = Part(points, starts, cuts, _boxes(points, bases), bases, length, closed[p])
                 _walk_part(part, radius[f], rulers[lo:hi], enough_steps, found[lo:hi])
                 before += length
         for q in range(lo, hi):
             found[q, 1] = math.sqrt(found[q, 1])
             if found[q, 2] == 0:
-                found[q, :2] = math.nan
+                found[q, 0] = math.nan
+                found[q, 1] = math.nan
     return found
