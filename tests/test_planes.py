@@ -8,6 +8,8 @@ import numpy as np
 import pyproj
 import pytest
 from geographiclib.geodesic import Geodesic
+from hypothesis import given
+from hypothesis import strategies as st
 
 from geofractal.errors import ConfigError, LayerError
 from geofractal.kernels import planes as kernels
@@ -153,16 +155,29 @@ def test_straight_distances_keep_the_stated_distortion(points, budget, plane):
     """Independent: Karney's geodesics in geographiclib, between pairs of a scattered feature's vertices."""
     chunk = only(Projector("EPSG:4326", budget=budget), points)
     assert PLANES[chunk.plane[0]] == plane
-    given = np.flatnonzero(chunk.source_vertex)
+    own = np.flatnonzero(chunk.source_vertex)
     i, j = np.triu_indices(len(points), 1)
     i, j = i[::9], j[::9]
     true = [
         Geodesic.WGS84.Inverse(points[a, 1], points[a, 0], points[b, 1], points[b, 0])["s12"]
         for a, b in zip(i, j, strict=True)
     ]
-    error = apart(chunk, given[i], given[j]) / np.array(true) - 1
+    error = apart(chunk, own[i], own[j]) / np.array(true) - 1
     assert np.abs(error).max() <= chunk.distortion[0]
     assert np.abs(error).max() >= chunk.distortion[0] / 25
+
+
+def test_half_a_hemisphere_is_measured_in_three_dimensions_up_to_a_quarter_of_the_globe():
+    """Pairs up to 10,000 km, the longest rulers that the stated distortion speaks for."""
+    points = scattered(-20, -35, 120, 75)
+    chunk = only(Projector("EPSG:4326"), points)
+    assert PLANES[chunk.plane[0]] == "three-dimensions"
+    own = np.flatnonzero(chunk.source_vertex)
+    i, j = np.triu_indices(len(points), 1)
+    true = GROUND.inv(*points[i].T, *points[j].T)[2]
+    near = true < 1e7
+    error = apart(chunk, own[i[near]], own[j[near]]) / true[near] - 1
+    assert np.abs(error).max() <= chunk.distortion[0] < 0.002
 
 
 @pytest.mark.parametrize(
@@ -268,6 +283,18 @@ def test_a_shape_on_the_antimeridian_is_the_same_as_elsewhere(longitudes, budget
     assert lengths(here) == pytest.approx(lengths(there), rel=1e-9)
     ends = [0, len(here.xy) - 1]
     assert apart(here, ends, ends[::-1]) == pytest.approx(apart(there, ends, ends[::-1]), rel=1e-9)
+
+
+@given(st.floats(-360, 360), st.integers(0, 2**32 - 1))
+def test_turning_the_globe_changes_no_length(turn, seed):
+    line = np.random.default_rng(seed).uniform([-3, -80], [3, 80], 2) + np.random.default_rng(seed).normal(
+        0, 0.5, (6, 2)
+    )
+    line[:, 1] = np.clip(line[:, 1], -89, 89)
+    turned = (line[:, 0] + turn + 180) % 360 - 180
+    here, there = (only(Projector("EPSG:4326"), xy) for xy in (line, np.column_stack([turned, line[:, 1]])))
+    assert lengths(there) == pytest.approx(lengths(here), rel=1e-8)
+    assert there.distortion == pytest.approx(here.distortion, rel=1e-6, abs=1e-12)
 
 
 def test_a_conic_lies_across_the_antimeridian():
@@ -416,7 +443,7 @@ def test_neither_start_nor_direction_of_a_ring_moves_its_plane():
     ring = scattered(0, 50, 3, 52, 12)
     around = [*ring, ring[0]]
     shifted = [*ring[5:], *ring[:6]]
-    found = [only(Projector("EPSG:4326"), given, closed=True) for given in (around, shifted, around[::-1])]
+    found = [only(Projector("EPSG:4326"), walked, closed=True) for walked in (around, shifted, around[::-1])]
     assert lengths(found[1]) == pytest.approx(lengths(found[0]), rel=1e-13)
     assert lengths(found[2]) == pytest.approx(lengths(found[0]), rel=1e-13)
     assert found[1].distortion == pytest.approx(found[0].distortion, rel=1e-9)

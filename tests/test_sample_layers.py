@@ -61,7 +61,7 @@ def test_the_folder_holds_what_the_script_makes_and_stays_small(made_anew):
 
 
 def test_it_lies_in_the_open_ocean():
-    """33 W 48 N: more than 1,000 km of water to the nearest land on every side."""
+    """33 W 48 N: some 900 km of water to the nearest land."""
     west, south, east, north = read("shoreline").to_crs("EPSG:4326").total_bounds
     assert -33.6 < west < east < -32.4
     assert 47.7 < south < north < 48.3
