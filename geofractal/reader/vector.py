@@ -71,7 +71,7 @@ def stream(
     Parameters
     ----------
     info : from `layer_info`
-    columns : attributes to read; None reads them all
+    columns : attributes to read, each once; None reads them all
     rows_per_batch : the layer's own unless stated
 
     Raises
@@ -81,7 +81,7 @@ def stream(
     SourceError
         The file is damaged, or holds another number of rows than it says.
     """
-    names = info.field_names if columns is None else tuple(columns)
+    names = info.field_names if columns is None else tuple(dict.fromkeys(columns))
     for name in names:
         if name not in info.field_names:
             raise LayerError(
