@@ -85,7 +85,7 @@ def plan_batch(batch: Batch) -> Plan:
     problems: list[Problem] = []
     plans: list[LayerPlan] = []
     failed: dict[str, SourceError] = {}
-    for name, layer in batch.layers.items():
+    for name, layer in batch.vector_layers.items():
         if not batch.requests_of(name):
             continue
         try:

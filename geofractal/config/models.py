@@ -6,15 +6,17 @@ import codecs
 import re
 from difflib import get_close_matches
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
 from pydantic import (
     AfterValidator,
     BaseModel,
     ConfigDict,
+    Discriminator,
     Field,
     PrivateAttr,
     SerializeAsAny,
+    Tag,
     ValidationInfo,
     WithJsonSchema,
     field_validator,
@@ -26,6 +28,9 @@ from geofractal.config.yaml_tree import KeyPath, YamlTree
 from geofractal.errors import LayerError, Problem
 from geofractal.measure import Column, Options
 from geofractal.registry import columns_of, load_measure
+
+RASTER_ENDINGS = (".tif", ".tiff", ".vrt")
+"""Endings of sources that are read as class maps."""
 
 Format = Literal["geopackage", "shapefile", "flatgeobuf", "geojson", "geojson-lines", "geoparquet"]
 
@@ -87,6 +92,7 @@ def _named_by(pattern: str, rule: str) -> tuple[AfterValidator, WithJsonSchema]:
     return AfterValidator(check), WithJsonSchema({"type": "string", "pattern": f"^{pattern}$"})
 
 
+SourcePath = Annotated[Path, AfterValidator(_beside_file), AfterValidator(_there)]
 Text = Annotated[str, Field(min_length=1)]
 LayerName = Annotated[  # becomes a file's name, on any system
     str,
@@ -137,9 +143,7 @@ class Prepare(Section):
 class VectorLayer(Section):
     """A layer of lines or polygons."""
 
-    source: Annotated[Path, AfterValidator(_beside_file), AfterValidator(_there)] = Field(
-        description="file that holds the layer, seen from the batch file's folder"
-    )
+    source: SourcePath = Field(description="file that holds the layer, seen from the batch file's folder")
     layer: Text | None = Field(None, description="the layer's name in a file that holds several")
     crs: Annotated[Text, AfterValidator(_known_crs)] | None = Field(
         None, description="CRS of a layer that states none: an authority code such as EPSG:3035, or WKT"
@@ -166,6 +170,49 @@ class VectorLayer(Section):
         if value and info.data.get("crs", "") is None:
             raise _refusal("true only beside crs, which says what replaces the layer's own")
         return value
+
+
+class RasterLayer(Section):
+    """A class map: land cover as cells."""
+
+    source: SourcePath = Field(description="raster file, seen from the batch file's folder")
+    band: int = Field(1, ge=1, description="band that holds the classes, counted from 1")
+    crs: Annotated[Text, AfterValidator(_known_crs)] | None = Field(
+        None, description="CRS of a raster that states none: an authority code such as EPSG:3035, or WKT"
+    )
+    classes: dict[Text, int | Text | tuple[int | Text, ...]] | None = Field(
+        None,
+        description="name of each class and its codes, or the names that the raster itself gives to codes; "
+        "left out, the raster's own names and codes are the classes",
+    )
+    rest: Text | None = Field(
+        None, description="class for all codes not named; left out, such a code is an error"
+    )
+    groups: dict[Text, tuple[Text, ...]] = Field(
+        {}, description="names for several classes taken together, such as habitat"
+    )
+    nodata: tuple[int, ...] = Field((), description="further codes of cells without data")
+    whole_numbers: bool = Field(False, description="take a raster of floats as whole numbers")
+    grid: Literal["auto", "source", "warp"] = Field(
+        "auto",
+        description="grid to measure on: the source's, or one warped to an equal-distance plane; auto warps "
+        "only where the source's grid breaks the budget",
+    )
+    cell_size_m: float | None = Field(
+        None, gt=0, description="cell size of a warped grid in metres; left out, the source's"
+    )
+
+
+def _kind_of_layer(layer: Any) -> str:
+    """Return which model a layer's mapping is meant for, by the ending of its source."""
+    source = layer.get("source") if isinstance(layer, dict) else getattr(layer, "source", None)
+    return "raster" if str(source).lower().endswith(RASTER_ENDINGS) else "vector"
+
+
+Layer = Annotated[
+    Annotated[VectorLayer, Tag("vector")] | Annotated[RasterLayer, Tag("raster")],
+    Discriminator(_kind_of_layer),
+]
 
 
 class RequestHead(Section):
@@ -236,7 +283,7 @@ class BatchSections(Section):
     """All of a batch but its measures."""
 
     name: Text = Field(alias="batch", description="title of the batch")
-    layers: dict[LayerName, VectorLayer] = Field(min_length=1, description="the layers, by names of your own")
+    layers: dict[LayerName, Layer] = Field(min_length=1, description="the layers, by names of your own")
     projection: Projection = Field(Projection(), description="on what plane distances are measured")
     outputs: Outputs = Field(description="what is written, and where")
     run: Run = Field(Run(), description="how the batch runs")
@@ -248,6 +295,16 @@ class Batch(BatchSections):
     measures: tuple[MeasureRequest, ...] = Field(min_length=1, description="what is measured, of which layer")
 
     _tree: YamlTree | None = PrivateAttr(None)
+
+    @property
+    def vector_layers(self) -> dict[str, VectorLayer]:
+        """Return the layers of lines or polygons, by name."""
+        return {name: layer for name, layer in self.layers.items() if isinstance(layer, VectorLayer)}
+
+    @property
+    def raster_layers(self) -> dict[str, RasterLayer]:
+        """Return the class maps, by name."""
+        return {name: layer for name, layer in self.layers.items() if isinstance(layer, RasterLayer)}
 
     @property
     def file(self) -> Path | None:

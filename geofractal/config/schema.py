@@ -65,6 +65,8 @@ def _tidied(node: Any) -> Any:
     }
     if "patternProperties" in tidy:
         tidy["additionalProperties"] = False
+    if "oneOf" in tidy and "discriminator" not in tidy:  # a layer's key may fit both kinds
+        tidy["anyOf"] = tidy.pop("oneOf")
     if "$ref" in tidy and len(tidy) > 1:
         tidy["allOf"] = [{"$ref": tidy.pop("$ref")}]
     return tidy

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import re
 import types
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Collection, Iterable, Iterator, Sequence
 from difflib import get_close_matches
 from typing import Annotated, Any, Union, get_args, get_origin
 
-from pydantic import BaseModel, ValidationError
+from pydantic import BaseModel, Tag, ValidationError
 from pydantic.fields import FieldInfo
 from pydantic_core import ErrorDetails
 
@@ -59,7 +59,8 @@ def problems_in(
             grouped.setdefault((path, _kind(details)), []).append(details)
     unknown, missing, refused = {}, {}, []
     for (path, kind), group in grouped.items():
-        fields = dict(_fields(model, path[len(at) : -1]))
+        tags = {str(step) for details in group for step in details["loc"]}
+        fields = dict(_fields(model, path[len(at) : -1], tags))
         if kind == "unknown":
             keys = [*fields] if len(path) > len(at) + 1 else [*also, *fields]
             unknown[path] = _unknown(tree, path, keys)
@@ -79,10 +80,12 @@ def near_match(word: str, words: Iterable[str]) -> str:
 
 def _place(details: ErrorDetails, tree: YamlTree, at: KeyPath) -> KeyPath:
     """Return the path of keys that an error speaks of, without the names of union members in it."""
-    path = (*at, *details["loc"])
-    absent = path[-1:] if details["type"] == "missing" else ()
-    path = path[: len(path) - len(absent)]
-    return next(path[:n] for n in range(len(path), -1, -1) if path[:n] in tree.values) + absent
+    absent = details["loc"][-1:] if details["type"] == "missing" else ()
+    path = at
+    for step in details["loc"]:
+        if (*path, step) in tree.values:
+            path = (*path, step)
+    return path + absent
 
 
 def _kind(details: ErrorDetails) -> str:
@@ -123,32 +126,34 @@ def _words(details: ErrorDetails, value: Any) -> str:
     return words.format_map(details.get("ctx", {}))
 
 
-def _fields(model: Any, path: KeyPath) -> Iterator[tuple[str, FieldInfo]]:
-    """Yield the keys of the mapping that stands at a path under a model."""
+def _fields(model: Any, path: KeyPath, tags: Collection[str]) -> Iterator[tuple[str, FieldInfo]]:
+    """Yield the keys of the mapping that stands at a path under a model; `tags` name the union members met."""
     found = [model]
     for step in path:
-        found = [inner for annotation in found for inner in _under(annotation, step)]
+        found = [inner for annotation in found for inner in _under(annotation, step, tags)]
     for annotation in found:
-        for member in _members(annotation):
+        for member in _members(annotation, tags):
             if isinstance(member, type) and issubclass(member, BaseModel):
                 yield from ((field.alias or name, field) for name, field in member.model_fields.items())
 
 
-def _under(annotation: Any, step: str | int) -> Iterator[Any]:
-    for member in _members(annotation):
+def _under(annotation: Any, step: str | int, tags: Collection[str]) -> Iterator[Any]:
+    for member in _members(annotation, tags):
         origin, arguments = get_origin(member), get_args(member)
         if origin is dict:
             yield arguments[1]
         elif origin is tuple:
             yield arguments[0]
         else:
-            yield from (field.annotation for key, field in _fields(member, ()) if key == step)
+            yield from (field.annotation for key, field in _fields(member, (), tags) if key == step)
 
 
-def _members(annotation: Any) -> Iterator[Any]:
-    """Yield the members of a union, or the type itself."""
+def _members(annotation: Any, tags: Collection[str]) -> Iterator[Any]:
+    """Yield the members of a union, of a tagged one those met, or the type itself."""
     if get_origin(annotation) in {Union, types.UnionType, Annotated}:
-        for argument in get_args(annotation):
-            yield from _members(argument)
+        tag = next((said.tag for said in get_args(annotation)[1:] if isinstance(said, Tag)), None)
+        if tag is None or tag in tags:
+            for argument in get_args(annotation):
+                yield from _members(argument, tags)
     else:
         yield annotation
