@@ -21,7 +21,7 @@ NO_LIMIT = 2**62
 @dataclass
 class Walked:
     length: np.ndarray
-    noise: np.ndarray
+    spread: np.ndarray
     steps: np.ndarray
     left_out: np.ndarray
     tallies: np.ndarray
@@ -84,10 +84,6 @@ def plain_length(line, ruler):
     return steps * ruler + rest
 
 
-def standard_error(lengths):
-    return np.std(lengths, ddof=1) / math.sqrt(len(lengths))
-
-
 def random_line(seed, count, size):
     rng = np.random.default_rng(seed)
     return np.cumsum(rng.normal(size=(count, size)), axis=0)
@@ -144,7 +140,7 @@ def test_both_ways_along_a_random_line_agree_with_the_plain_walk(seed, count, si
         lengths = [n * ruler + d for n, d in (there, back)]
         assert found.steps[0] == (there[0] + back[0]) / 2
         assert found.length[0] == pytest.approx(sum(lengths) / 2, rel=1e-9)
-        assert found.noise[0] == pytest.approx(standard_error(lengths), abs=1e-9 * ruler)
+        assert found.spread[0] == pytest.approx(np.std(lengths, ddof=1), abs=1e-9 * ruler)
         assert found.left_out[0] == 0
 
 
@@ -166,7 +162,7 @@ def test_inner_starts_walk_to_both_ends(size):
         whole.append(plain_length(line[i:], ruler) + plain_length(line[i::-1], ruler))
     found = walk([line], ruler, starts=4)
     assert found.length[0] == pytest.approx(np.mean(whole), rel=1e-9)
-    assert found.noise[0] == pytest.approx(standard_error(whole), rel=1e-9)
+    assert found.spread[0] == pytest.approx(np.std(whole, ddof=1), rel=1e-9)
 
 
 def noisy_ring(seed, count=200):
@@ -188,7 +184,7 @@ def test_a_ring_is_walked_both_ways_from_evenly_spaced_starts_that_begin_at_its_
     expected = [plain_length(path, ruler) for way in (1, -1) for path in (p[::way] for p in paths)]
     found = walk([ring], ruler, starts=16, closed=True)
     assert found.length[0] == pytest.approx(np.mean(expected), rel=1e-9)
-    assert found.noise[0] == pytest.approx(standard_error(expected), abs=1e-8)
+    assert found.spread[0] == pytest.approx(np.std(expected, ddof=1), abs=1e-8)
 
 
 @pytest.mark.parametrize("shift", [1, 50, 123])
@@ -222,7 +218,7 @@ def test_reversal_changes_not_one_bit(starts):
     rulers = np.geomspace(0.5, 20, 12)
     there, back = walk([line], rulers, starts=starts), walk([line[::-1]], rulers, starts=starts)
     assert np.array_equal(there.length, back.length)
-    assert np.array_equal(there.noise, back.noise)
+    assert np.array_equal(there.spread, back.spread)
 
 
 @given(
@@ -247,7 +243,7 @@ def test_parts_add_up_where_they_are_long_enough():
     alone = walk([long], [0.05, 5.0])
     tail = walk([short], [0.05, 5.0])
     assert found.length == pytest.approx([alone.length[0] + tail.length[0], alone.length[1]])
-    assert found.noise[0] == pytest.approx(math.hypot(alone.noise[0], tail.noise[0]))
+    assert found.spread[0] == pytest.approx(math.hypot(alone.spread[0], tail.spread[0]))
     assert found.left_out[1] == pytest.approx(np.linalg.norm(np.diff(short, axis=0), axis=1).sum())
 
 

@@ -41,7 +41,7 @@ class Walks(NamedTuple):
     """What the walks found at each rung of a set of ladders; see `walk_ladders`."""
 
     length: Floats
-    noise: Floats
+    spread: Floats
     steps: Floats
     left_out: Floats
     tallies: Floats
@@ -97,8 +97,8 @@ def _walk(
         inner_starts,
         stretches,
     )
-    length, noise, steps, left_out = np.ascontiguousarray(table[:, :4].T)
-    return Walks(length, noise, steps, left_out, table[:, 4:])
+    length, spread, steps, left_out = np.ascontiguousarray(table[:, :4].T)
+    return Walks(length, spread, steps, left_out, table[:, 4:])
 
 
 def finest_rulers(lines: Lines) -> Floats:

@@ -290,7 +290,7 @@ def _walk_part(part: Part, radius: float, rulers: Floats, enough: int, found: Fl
             found[q, 3] += part.length
         else:
             found[q, 0] += mean
-            found[q, 1] += variance / walks
+            found[q, 1] += variance
             found[q, 2] += steps
             for k in range(len(tally)):
                 found[q, 4 + k] += tally[k] / walks
@@ -336,9 +336,9 @@ def walk_ladders(
     Returns
     -------
     (q, 4 + stretches)
-        mean walked length in metres, NaN where no part is long enough; its standard error over starts
-        and directions; mean number of whole steps of a walk; polyline length in metres of the parts
-        that are not long enough; mean number of the whole steps that end in each stretch
+        mean walked length in metres, NaN where no part is long enough; standard deviation of one walk
+        over starts and directions; mean number of whole steps of a walk; polyline length in metres of
+        the parts that are not long enough; mean number of the whole steps that end in each stretch
     """
     found = np.zeros((rulers.size, 4 + stretches))
     for f in range(feature_offsets.size - 1):
