@@ -13,7 +13,8 @@ from geofractal.errors import ConfigError, LayerError
 from geofractal.landcover.labelling import PatchTable, label_patches
 from geofractal.landcover.perimeter import Outline, Perimeter, area_m2
 from geofractal.landcover.strips import Strip
-from geofractal.reader.raster import ClassMap, Path, Raster, RasterOptions, open_raster
+from geofractal.reader.raster import Raster, RasterOptions, open_raster
+from geofractal.reader.raster_source import ClassMap, Path
 
 if TYPE_CHECKING:
     import pandas as pd

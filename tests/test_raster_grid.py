@@ -10,8 +10,9 @@ from pyproj import CRS, Proj
 from geofractal.errors import ConfigError, SourceError
 from geofractal.landcover.grid import Grid
 from geofractal.landcover.strips import NOT_COVERED
-from geofractal.reader.raster import ClassMap, RasterOptions, open_raster
+from geofractal.reader.raster import RasterOptions, open_raster
 from geofractal.reader.raster_plane import choose_grid, equal_distance_grid
+from geofractal.reader.raster_source import ClassMap
 
 ELLIPSOID_AREA = 510_065_621_724_088.0  # m2, WGS 84: Karney's geodesic library tests
 WORLD = Grid(180, 360, (1.0, 0.0, -180.0, 0.0, -1.0, 90.0), CRS("EPSG:4326"))

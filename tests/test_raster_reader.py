@@ -9,7 +9,8 @@ from affine import Affine
 
 from geofractal.errors import ConfigError, LayerError, SourceError
 from geofractal.landcover.strips import NOT_COVERED
-from geofractal.reader.raster import ClassMap, RasterOptions, open_raster
+from geofractal.reader.raster import RasterOptions, open_raster
+from geofractal.reader.raster_source import ClassMap
 
 UTM = "EPSG:32632"
 NORTH_UP = (10.0, 0.0, 500_000.0, 0.0, -10.0, 5_000_000.0)
