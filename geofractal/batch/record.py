@@ -46,7 +46,8 @@ def peak_memory_mb() -> float | None:
 class MeasureTally:
     """Counts of one measure on one layer, from its columns alone.
 
-    A row counts as refused where the measure's first column is null; the reason is its note.
+    A row counts as refused where the measure's first column is null; the reason is the first thing that
+    its note says.
     """
 
     request: MeasureRequest
@@ -68,7 +69,8 @@ class MeasureTally:
         missing = pc.is_null(batch.column(self.columns[0].name))
         self.rows += batch.num_rows
         self.refused += int(pc.sum(missing).as_py() or 0)
-        self.reasons.update(_counted(batch.column(self.note).filter(missing)))
+        notes = batch.column(self.note).filter(missing).fill_null("no reason given")
+        self.reasons.update(_counted(pc.list_element(pc.split_pattern(notes, "; ", max_splits=1), 0)))
         for column in self.columns:
             values = batch.column(column.name).drop_null()
             if column.kind == "text" and column.name != self.note:
@@ -98,8 +100,7 @@ class MeasureTally:
 
 
 def _counted(values: pa.Array) -> dict[str, int]:
-    counts = pc.value_counts(values.fill_null("no reason given"))
-    return {entry["values"]: entry["counts"] for entry in counts.to_pylist()}
+    return {entry["values"]: entry["counts"] for entry in pc.value_counts(values).to_pylist()}
 
 
 def run_record(
@@ -128,13 +129,15 @@ def run_record(
 
 def layer_record(found: Measured) -> dict[str, Any]:
     """Return what the record says of a measured layer."""
+    from pyproj import CRS
+
     info, work = found.plan.info, found.plan.work
     return {
         "source": str(info.path),
         "layer": info.layer,
         "format": info.driver,
         "geometry": info.geometry,
-        "crs": info.crs,
+        "crs": {"name": CRS.from_user_input(info.crs).name, "wkt": info.crs},
         "rows": info.features,
         "where": found.plan.layer.where,
         "prepare": work.prepare.model_dump(mode="json", by_alias=True),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import codecs
+import os
 import re
 from difflib import get_close_matches
 from pathlib import Path
@@ -43,7 +44,7 @@ def _refusal(allowed: str, near: str = "") -> PydanticCustomError:
 def _beside_file(path: Path, info: ValidationInfo) -> Path:
     """Return `path` as seen from the folder of the batch file."""
     folder: Path = (info.context or {}).get("folder", Path())
-    return (folder / path.expanduser()).absolute()
+    return Path(os.path.normpath((folder / path.expanduser()).absolute()))
 
 
 def _there(path: Path) -> Path:

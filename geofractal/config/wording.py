@@ -127,7 +127,7 @@ def _words(details: ErrorDetails, value: Any) -> str:
 
 
 def _fields(model: Any, path: KeyPath, tags: Collection[str]) -> Iterator[tuple[str, FieldInfo]]:
-    """Yield the keys of the mapping that stands at a path under a model; `tags` name the union members met."""
+    """Yield the keys of the mapping that stands at a path under a model; `tags` name the members met."""
     found = [model]
     for step in path:
         found = [inner for annotation in found for inner in _under(annotation, step, tags)]
