@@ -69,6 +69,7 @@ class Constants(NamedTuple):
     bias_doubt: float
     quantile: float
     skew: float
+    tilt: float
     ripple_share: float
     threshold: float
     break_shift: float
@@ -158,7 +159,8 @@ def _bends(w: Floats, x: Floats, y: Floats, mean_x: float, xx: float) -> float:
 def _own_error(x: Floats, steps: Floats, tallies: Floats) -> float:
     """Return the standard deviation of the slope between the windows of a line's stretches.
 
-    Fitted over the rungs on which a window holds at least eight steps, or else the first three.
+    Fitted over the rungs on which a window holds at least eight steps, or else the first three. What
+    counting whole steps adds, were each count the mean of two walks, is taken out, up to three quarters.
     """
     pieces = tallies.shape[1]
     windows = pieces - WINDOW + 1
@@ -169,6 +171,10 @@ def _own_error(x: Floats, steps: Floats, tallies: Floats) -> float:
     used = min(max(used, 3), len(x))
     mean_x = x[:used].mean()
     xx = ((x[:used] - mean_x) ** 2).sum()
+    rounding = 0.0
+    for k in range(used):
+        whole = steps[k] * WINDOW / pieces
+        rounding += ((x[k] - mean_x) / xx / whole) ** 2 / 12.0
     total, square = 0.0, 0.0
     for b in range(windows):
         slope = 0.0
@@ -180,7 +186,8 @@ def _own_error(x: Floats, steps: Floats, tallies: Floats) -> float:
         slope /= xx
         total += slope
         square += slope * slope
-    return float(np.sqrt(max(square - total * total / windows, 0.0) / (windows - 1)))
+    between = max(square - total * total / windows, 0.0) / (windows - 1)
+    return float(np.sqrt(max(between - rounding, 0.25 * between)))
 
 
 @kernel
@@ -242,21 +249,21 @@ def _limits(left: Floats, places: Floats, best: int, freedom: float) -> tuple[fl
 def _smooth_up_to(x: Floats, y: Floats, gap: float) -> float:
     """Return where a line that is smooth over the ladder's first half decade stops to be; NaN if it is not.
 
-    Smooth: shorter by less than a fifth of what dimension 1 + `gap` says. It stops where a tenth of the
-    length is lost against the continued foot: bends large enough to ripple like a fractal begin there.
+    Smooth: shorter by less than a fifth of what dimension 1 + `gap` says. It stops where it has lost a tenth
+    of its length, or half of what it loses at all, against the foot.
     """
-    if gap < 0.03:
+    if gap < 0.01:
         return np.nan
     foot = 0
     while foot < len(x) - 1 and x[foot] < x[0] + 1.15:
         foot += 1
-    lost = y[0] - y[foot]
-    if foot < 4 or lost > 0.2 * gap * (x[foot] - x[0]) or foot > len(x) - 4:
+    if foot < 4 or foot > len(x) - 4 or y[0] - y[foot] > 0.2 * gap * (x[foot] - x[0]):
         return np.nan
+    enough = min(0.1, 0.5 * (y[foot] - y[-1]))
     for k in range(foot, len(x)):
-        if y[0] - y[k] - lost > 0.1:
+        if y[foot] - y[k] > enough:
             return float(x[k])
-    return np.nan
+    return float(x[-1])
 
 
 @kernel
@@ -270,11 +277,12 @@ def _alternatives(
     """
     gap = row[0] - 1.0
     threshold = c.threshold * (0.45 + min(max(gap - 0.05, 0.0) / 0.15, 1.0) * 0.55)
-    threshold += c.threshold * min(max(gap - 0.2, 0.0) / 0.3, 1.0) * 0.55
+    threshold += c.threshold * min(max(gap - 0.2, 0.0) / 0.3, 1.0) * 0.8
     threshold *= max(1.0, (x[-1] - x[0]) / 5.0) ** 0.7
     needed = threshold * threshold * unit
     row[20] = np.sqrt(residual / unit) / threshold
-    if residual <= needed:
+    bend = _smooth_up_to(x, y, gap)
+    if np.isnan(bend) and residual <= needed:
         return
     span = x[-1] - x[0]
     margin = max(0.15 * span, min(0.55, 0.3 * span))
@@ -284,18 +292,17 @@ def _alternatives(
     parabola = _residual(w, y, x, x * x)[0]
     best = min(hinge_left[hinge], step_left[step], parabola)
     row[20] = np.sqrt(max(residual - best, 0.0) / unit) / threshold
-    bend = _smooth_up_to(x, y, gap)
     if np.isnan(bend) and (residual - best <= needed or best > c.ripple_share * residual):
         return
     freedom = span / 0.55 - 4.0
     row[12] = TWO_REGIME
     row[16], row[17] = 1.0 - fine, 1.0 - coarse
-    if not np.isnan(bend):
-        row[13], row[14], row[15] = bend, bend - 0.5, bend + 0.5
-    elif step_left[step] < 0.64 * min(hinge_left[hinge], parabola):
+    if step_left[step] < 0.64 * min(hinge_left[hinge], parabola):
         low, high = _limits(step_left, places, step, freedom)
         row[13], row[14], row[15] = places[step], low - 0.5, high + 0.5
         row[16], row[17] = 1.0 - slope, 1.0 - slope
+    elif not np.isnan(bend) and (fine < coarse or best > c.ripple_share * residual):
+        row[13], row[14], row[15] = bend, bend - 0.5, bend + 0.5
     elif hinge_left[hinge] <= 3.0 * parabola:
         low, high = _limits(hinge_left, places, hinge, freedom)
         row[13] = places[hinge] + c.break_shift
@@ -306,12 +313,18 @@ def _alternatives(
 
 @kernel
 def _interval(row: Floats, c: Constants) -> None:
-    """Write the 95 % interval of the process: symmetric, but longer upwards near dimension 1."""
+    """Write the 95 % interval of the process.
+
+    Longer upwards near dimension 1, where estimates are skewed, and above 1.5, where short ladders find
+    most families too low.
+    """
     gap = max(row[0] - 1.0, 0.0)
     half = c.quantile * row[18]
     reach = min(half / max(gap, 0.002), c.skew * (0.05 / max(gap, 0.007)) ** 0.37)
-    row[1] = max(row[0] - half, 1.0)
-    row[2] = max(row[0] + half, 1.0 + gap * np.exp(reach))
+    tilt = min(max((gap - 0.35) / 0.3, 0.0), 1.0)
+    short = min(3.0 / (row[11] - row[10]), 1.0) ** 2
+    row[1] = max(row[0] - half * (1.0 - 0.1 * tilt), 1.0)
+    row[2] = max(row[0] + half + c.tilt * tilt * short, 1.0 + gap * np.exp(reach))
     if row[12] == TWO_REGIME or row[12] == CURVED:
         row[1] = max(min(row[1], row[16], row[17]), 1.0)
         row[2] = max(row[2], row[16], row[17])

@@ -27,10 +27,11 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from geofractal.kernels.ladder_judge import FIELDS, judge_ladders
+from geofractal.kernels.line_scales import line_scales
 from geofractal.scaling.calibrated import BOX, DIVIDER
 
 if TYPE_CHECKING:
-    from geofractal.measure import Bools, Floats, Ints
+    from geofractal.measure import Bools, Floats, Ints, Lines
     from geofractal.scaling.ladder import Ladders
 
 VERDICTS = ("power-law", "two-regime", "curved", "smooth", "too-few-scales")
@@ -181,6 +182,20 @@ def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"
         _CONSTANTS[estimator],
     )
     return _judgement(table)
+
+
+def divider_rungs(
+    lines: Lines, *, length: Floats, spread: Floats, steps: Floats, tallies: Floats, left_out: Floats
+) -> Rungs:
+    """Return what divider walks found, with what the lines' mapping hides, ready to be judged.
+
+    Parameters as `geofractal.kernels.walk.walk_ladders` gives them. A rung's mean is at least as sure as
+    that of two walks, one each way.
+    """
+    scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
+    opens = np.concatenate(([0], np.cumsum(~lines.closed)))[lines.feature_offsets]
+    detail = np.where(scales[:, 3] > 0, 0.0, scales[:, 0])
+    return Rungs(length, steps, spread / np.sqrt(2), tallies, left_out, detail, np.diff(opens).astype(float))
 
 
 def _whole_enough(ladders: Ladders, rungs: Rungs) -> Bools:
