@@ -91,7 +91,7 @@ def test_a_good_file_becomes_a_batch_with_absolute_paths(load, folder):
     batch = load(GOOD)
     assert batch.name == "Bericht für 2026"
     assert batch.layers["shore"].source == folder / "data" / "shoreline.gpkg"
-    assert batch.outputs.folder == folder / ".." / "out"
+    assert batch.outputs.folder == folder.parent / "out"
     assert batch.outputs.formats == ("geopackage", "shapefile")
     assert batch.layers["channels"].prepare.join_within_m == 2
     assert [request.of for request in batch.measures] == ["shore", "channels", "channels"]
