@@ -64,29 +64,81 @@ def test_every_column_is_filled_for_every_feature():
 
 
 def test_rulers_name_their_columns():
-    columns = DividerDimension().columns(DividerOptions(lengths_at_m=(1000.0, 0.5, 2500.5, 1e6, 1.25e6)))
+    columns = DividerDimension().columns(DividerOptions(lengths_at_m=(1000.0, 0.5, 2500.5, 1e6)))
     named = {column.name: column.short for column in columns if column.name.startswith("length")}
     assert named == {
         "length_at_1000m_ruler_km": "len1000m",
+        "length_at_1000m_ruler_fit_km": "fit1000m",
+        "length_at_1000m_ruler_low_km": "lo_1000m",
+        "length_at_1000m_ruler_high_km": "hi_1000m",
         "length_at_0_5m_ruler_km": "len0_5m",
+        "length_at_0_5m_ruler_fit_km": "fit0_5m",
+        "length_at_0_5m_ruler_low_km": "lo_0_5m",
+        "length_at_0_5m_ruler_high_km": "hi_0_5m",
         "length_at_2500_5m_ruler_km": "len2500_5m",
+        "length_at_2500_5m_ruler_fit_km": "fit2500_5m",
+        "length_at_2500_5m_ruler_low_km": "lo_2500_5m",
+        "length_at_2500_5m_ruler_high_km": "hi_2500_5m",
         "length_at_1000000m_ruler_km": "len_4",
-        "length_at_1250000m_ruler_km": "len_5",
+        "length_at_1000000m_ruler_fit_km": "fit_4",
+        "length_at_1000000m_ruler_low_km": "lo_4",
+        "length_at_1000000m_ruler_high_km": "hi_4",
     }
 
 
-def test_the_koch_curve_has_dimension_log_4_over_log_3_on_rulers_that_divide_it():
-    found = measured(lines_of(koch(8)), ruler_min_m=3.0**-7, ruler_max_m=1 / 3, rungs=7, starts=1)
-    assert found["divider_dim"][0] == pytest.approx(math.log(4) / math.log(3), rel=1e-9)
-    assert found["divider_r2"][0] == pytest.approx(1)
+def test_the_koch_curve_has_dimension_log_4_over_log_3():
+    # von Koch 1904; 0.02 is what the ripple of a curve made of equal pieces may cost
+    found = measured(lines_of(koch(8)))
+    exact = math.log(4) / math.log(3)
+    assert found["divider_dim"][0] == pytest.approx(exact, abs=0.02)
+    assert found["divider_dim_low"][0] < exact < found["divider_dim_high"][0]
+    assert found["divider_verdict"][0] == "power-law"
+
+
+def test_a_ladder_that_is_stated_is_used():
+    found = measured(lines_of(koch(8)), ruler_min_m=3.0**-7, ruler_max_m=3.0**-2, rungs=9)
     assert found["divider_ruler_min_m"][0] == pytest.approx(3.0**-7)
-    assert found["divider_ruler_max_m"][0] == pytest.approx(1 / 3)
-    assert found["divider_rungs"][0] == 7
+    assert found["divider_ruler_max_m"][0] == pytest.approx(3.0**-2)
+    assert found["divider_rungs"][0] == 9
 
 
-def test_a_straight_line_has_dimension_one():
+def test_the_fit_gives_the_lengths_that_are_walked():
+    found = measured(lines_of(wander(count=20_000)), lengths_at_m=(15.0,))
+    walked, fitted, low, high = (
+        found[f"length_at_15m_ruler_{which}km"][0] for which in ("", "fit_", "low_", "high_")
+    )
+    assert low < walked < high
+    # L(r) = content r^(1 - D)
+    content, dimension = found["divider_content"][0], found["divider_dim"][0]
+    assert fitted == pytest.approx(content * 15 ** (1 - dimension) / 1000)
+    assert found["divider_log10_content"][0] == pytest.approx(math.log10(content))
+
+
+def test_lengths_outside_the_ladder_are_fitted_only_where_asked_and_flagged():
+    lines = lines_of(wander(count=20_000))
+    refused = measured(lines, ruler_max_m=50.0, lengths_at_m=(70.0,))
+    assert math.isnan(refused["length_at_70m_ruler_fit_km"][0])
+    assert refused["length_at_70m_ruler_km"][0] > 0
+    assert refused["divider_note"][0] == "its ladder does not hold a ruler of 70 m"
+    given = measured(lines, ruler_max_m=50.0, lengths_at_m=(70.0,), extrapolate=True)
+    assert given["length_at_70m_ruler_fit_km"][0] > 0
+    assert given["divider_note"][0] == "the fitted length is extrapolated to a ruler of 70 m"
+
+
+def test_a_straight_line_is_smooth_and_has_dimension_one():
     straight = np.linspace(0, 1, 2000)[:, None] * [3000.0, 4000.0]
-    assert measured(lines_of(straight))["divider_dim"][0] == pytest.approx(1, abs=1e-9)
+    found = measured(lines_of(straight))
+    assert found["divider_dim"][0] == pytest.approx(1, abs=1e-9)
+    assert found["divider_verdict"][0] == "smooth"
+
+
+def test_parts_too_short_for_the_last_ruler_are_told():
+    long, short = wander(1, count=5000), wander(2, count=20)
+    found = measured(lines_of([long, short]), ruler_max_m=30.0)
+    assert found["divider_left_out_km"][0] == pytest.approx(
+        np.linalg.norm(np.diff(short, axis=0), axis=1).sum() / 1000
+    )
+    assert measured(lines_of(long), ruler_max_m=30.0)["divider_left_out_km"][0] == 0
 
 
 @pytest.mark.parametrize("unit", [1e-3, 1.0, 1e4])

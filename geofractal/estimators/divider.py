@@ -8,17 +8,25 @@ from typing import TYPE_CHECKING, Annotated, ClassVar, NamedTuple, Self
 import numpy as np
 from pydantic import Field, field_validator, model_validator
 
+from geofractal.estimators.divider_columns import (
+    DIMENSION_COLUMNS,
+    MANDELBROT,
+    PLANE_COLUMNS,
+    length_columns,
+)
 from geofractal.kernels.ladder_judge import STRETCHES
 from geofractal.kernels.line_scales import line_scales
 from geofractal.kernels.walk import walk_ladders
 from geofractal.measure import PLANES, Column, Measure, Options
-from geofractal.scaling.fit import fit_power_law
-from geofractal.scaling.ladder import FIRST_RUNG_SEGMENTS, Ladders, divider_ladders
+from geofractal.scaling import ladder
+from geofractal.scaling.judge import VERDICTS, divider_rungs, judge
+from geofractal.scaling.ladder import Ladders, divider_ladders
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from geofractal.measure import Bools, Floats, Lines, Values
+    from geofractal.scaling.judge import Judgement
 
 RING_STARTS = 16
 """Evenly spaced starts of a ring, each walked both ways: single walks of real shores scatter by 2 %."""
@@ -102,12 +110,13 @@ def _walk(
 
 
 def finest_rulers(lines: Lines) -> Floats:
-    """Return each feature's finest ruler that its source supports: three median source segments, (n,).
+    """Return the finest ruler that each feature's source supports, metres, (n,); NaN where it has no length.
 
-    NaN where the feature has no length.
+    The first rung of its ladder: `geofractal.scaling.ladder` says how it is chosen.
     """
-    scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
-    return FIRST_RUNG_SEGMENTS * scales[:, 0]
+    return ladder.finest_rulers(
+        line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
+    )
 
 
 def too_coarse(rulers_m: float | Floats, finest_m: Floats) -> Bools:
@@ -152,7 +161,11 @@ class DividerOptions(Options):
         description="starting points of each ruler's walks; left out: the more the fewer steps there are",
     )
     lengths_at_m: tuple[Metres, ...] = Field(
-        (), description="rulers in metres at which the walked length is written"
+        (), description="rulers in metres at which the walked and the fitted length are written"
+    )
+    extrapolate: bool = Field(
+        False,
+        description="whether fitted lengths may be given outside a feature's ladder; flagged in the note",
     )
 
     @field_validator("lengths_at_m")
@@ -172,122 +185,94 @@ class DividerOptions(Options):
         return self
 
 
-def length_columns(ruler_m: float, index: int) -> tuple[Column, ...]:
-    """Return the column of the length walked with a stated ruler; `index` makes long short names unique."""
-    number = plain_number(ruler_m)
-    tag = number.replace(".", "_")
-    short = f"len{tag}m" if len(tag) <= 6 else f"len_{index}"
-    return (
-        Column(
-            f"length_at_{tag}m_ruler_km",
-            short,
-            "number",
-            "km",
-            f"length walked with a ruler of {number} m; null below the source's detail",
-            "L(r) = r n + d: n whole steps of r, last straight distance d; open lines: mean of both"
-            f" directions; rings: from {RING_STARTS} evenly spaced starts each",
-            "Mandelbrot 1967, Science 156:636-638",
-        ),
-    )
-
-
-_FIT_COLUMNS = (
-    Column(
-        "divider_dim",
-        "div_dim",
-        "number",
-        "",
-        "divider dimension between the first and the last ruler",
-        "D = 1 - slope of ln L(r) on ln r",
-        "Mandelbrot 1967, Science 156:636-638",
-    ),
-    Column(
-        "divider_r2",
-        "div_r2",
-        "number",
-        "",
-        "share of the variance of ln L that the fitted line explains; near 1 for any line on logarithmic"
-        " axes, so no evidence that a dimension exists",
-    ),
-    Column("divider_ruler_min_m", "div_rmin_m", "number", "m", "first ruler of the ladder that was used"),
-    Column("divider_ruler_max_m", "div_rmax_m", "number", "m", "last ruler of the ladder that was used"),
-    Column("divider_rungs", "div_rungs", "count", "", "number of rulers that were used"),
-)
-
-_PLANE_COLUMNS = (
-    Column(
-        "divider_distortion_percent",
-        "div_distor",
-        "number",
-        "percent",
-        "worst relative distance error of the plane on which the feature was walked",
-    ),
-    Column("divider_plane", "div_plane", "text", "", "on what the feature was walked: " + ", ".join(PLANES)),
-)
-
-
 class DividerDimension(Measure[DividerOptions]):
-    """Divider (Richardson) dimension of lines, and their lengths at stated rulers."""
+    """Divider (Richardson) dimension of lines with interval and verdict, and lengths at stated rulers."""
 
     name: ClassVar[str] = "divider-dimension"
     title: ClassVar[str] = "Divider dimension and length at a ruler"
     formula: ClassVar[str] = "L(r) = r n + d; D = 1 - slope of ln L on ln r"
-    sources: ClassVar[tuple[str, ...]] = ("Mandelbrot 1967, Science 156:636-638",)
+    sources: ClassVar[tuple[str, ...]] = (MANDELBROT,)
     stem: ClassVar[str] = "divider"
+    version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = DividerOptions
 
     def columns(self, options: DividerOptions) -> tuple[Column, ...]:
-        """Return the fit's columns, those of each stated ruler, the plane's and the note."""
-        lengths = [column for i, r in enumerate(options.lengths_at_m) for column in length_columns(r, i + 1)]
-        return (*_FIT_COLUMNS, *lengths, *_PLANE_COLUMNS, self.note_column())
+        """Return the columns of dimension and verdict, of each stated ruler, of the plane, and the note."""
+        lengths = [
+            column
+            for i, ruler in enumerate(options.lengths_at_m, start=1)
+            for column in length_columns(plain_number(ruler), i)
+        ]
+        return (*DIMENSION_COLUMNS, *lengths, *PLANE_COLUMNS, self.note_column())
 
     def measure(self, lines: Lines, options: DividerOptions) -> Values:
-        """Walk every feature with its ladder and with the stated rulers."""
+        """Walk every feature with its ladder and with the stated rulers, and judge what was found."""
         finest = finest_rulers(lines)
         notes = Notes(finest)
-        values = _fitted(lines, options, notes) | _lengths(lines, options.lengths_at_m, finest, notes)
+        ladders = divider_ladders(
+            lines, ruler_min_m=options.ruler_min_m, ruler_max_m=options.ruler_max_m, rungs=options.rungs
+        )
+        walks = walk(lines, ladders, starts=options.starts)
+        found = judge(ladders, divider_rungs(lines, **walks._asdict()))
+        values = _dimension(ladders, walks, found, notes)
+        for i, ruler in enumerate(options.lengths_at_m, start=1):
+            names = [column.name for column in length_columns(plain_number(ruler), i)]
+            figures = _length(lines, ruler, finest, found, options, notes)
+            values |= dict(zip(names, figures, strict=True))
         values["divider_distortion_percent"] = 100 * lines.distortion
         values["divider_plane"] = np.array(PLANES, dtype=object)[lines.plane]
         values["divider_note"] = notes.texts
         return values
 
 
-def _fitted(lines: Lines, options: DividerOptions, notes: Notes) -> Values:
-    """Return the columns of the fit through each feature's ladder."""
-    ladders = divider_ladders(
-        lines, ruler_min_m=options.ruler_min_m, ruler_max_m=options.ruler_max_m, rungs=options.rungs
-    )
-    walks = walk(lines, ladders, starts=options.starts)
-    fit = fit_power_law(ladders, walks.length)
-    used = np.isfinite(walks.length)
-    owners = np.repeat(np.arange(len(lines)), np.diff(ladders.offsets))[used]
-    lowest, highest = np.full(len(lines), np.inf), np.full(len(lines), -np.inf)
-    np.minimum.at(lowest, owners, ladders.rulers[used])
-    np.maximum.at(highest, owners, ladders.rulers[used])
-    few = fit.rungs < FEWEST_RUNGS
-    unfit = np.where(few, np.nan, 1.0)
-    notes.add(few, "no dimension: too few rulers between its detail and its extent")
+def _dimension(ladders: Ladders, walks: Walks, found: Judgement, notes: Notes) -> Values:
+    """Return the columns of dimension, verdict and content."""
+    notes.add(np.isnan(found.dimension), "no dimension: too few rulers between its detail and its extent")
     return {
-        "divider_dim": unfit - fit.slope,
-        "divider_r2": unfit * fit.r2,
-        "divider_ruler_min_m": unfit * lowest,
-        "divider_ruler_max_m": unfit * highest,
-        "divider_rungs": fit.rungs,
+        "divider_dim": found.dimension,
+        "divider_dim_low": found.low,
+        "divider_dim_high": found.high,
+        "divider_spread": found.spread,
+        "divider_verdict": np.array(VERDICTS, dtype=object)[found.verdict],
+        "divider_ruler_min_m": found.ruler_min,
+        "divider_ruler_max_m": found.ruler_max,
+        "divider_rungs": found.rungs,
+        "divider_r2": found.r2,
+        "divider_break_m": found.break_at,
+        "divider_break_low_m": found.break_low,
+        "divider_break_high_m": found.break_high,
+        "divider_fine_dim": found.fine_dimension,
+        "divider_coarse_dim": found.coarse_dimension,
+        "divider_content": found.content,
+        "divider_log10_content": found.log10_content,
+        "divider_left_out_km": _left_out(ladders, walks, found) / 1000,
     }
 
 
-def _lengths(lines: Lines, rulers_m: tuple[float, ...], finest: Floats, notes: Notes) -> Values:
-    """Return the walked length at each stated ruler, null where the source is coarser than the ruler."""
-    if not rulers_m:
-        return {}
-    walked = walk_rulers(lines, rulers_m)
-    values: Values = {}
-    for i, ruler in enumerate(rulers_m):
-        length = walked.length[:, i] / 1000
-        coarse = too_coarse(ruler, finest)
-        text = plain_number(ruler)
-        notes.add(coarse, f"the source is too coarse for a ruler of {text} m")
-        notes.add(~coarse & np.isnan(length), f"too short for a ruler of {text} m")
-        values[length_columns(ruler, i + 1)[0].name] = np.where(coarse, np.nan, length)
-    return values
+def _left_out(ladders: Ladders, walks: Walks, found: Judgement) -> Floats:
+    """Return the length of the parts that are too short for the last ruler used, metres, (n,)."""
+    last = np.repeat(found.ruler_max, np.diff(ladders.offsets)) * (1 + 1e-9)
+    used = np.where(ladders.rulers <= last, walks.left_out, 0.0)
+    longest: Floats = np.full(len(ladders), np.nan)
+    some = ~np.isnan(found.ruler_max)
+    longest[some] = np.maximum.reduceat(used, ladders.offsets[:-1][some]) if some.any() else 0.0
+    return longest
+
+
+def _length(
+    lines: Lines, ruler: float, finest: Floats, found: Judgement, options: DividerOptions, notes: Notes
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """Return a ruler's walked length, and its fitted one with interval, km; null where not deserved."""
+    text = f"a ruler of {plain_number(ruler)} m"
+    walked = walk_rulers(lines, (ruler,)).length[:, 0] / 1000
+    coarse = too_coarse(ruler, finest)
+    notes.add(coarse, f"the source is too coarse for {text}")
+    notes.add(~coarse & np.isnan(walked), f"too short for {text}")
+    outside = ~np.isnan(found.dimension) & np.isnan(found.length_at(ruler)[0])
+    if options.extrapolate:
+        notes.add(outside, f"the fitted length is extrapolated to {text}")
+    else:
+        notes.add(outside & ~coarse, f"its ladder does not hold {text}")
+    fitted, low, high = (metres / 1000 for metres in found.length_at(ruler, extrapolate=options.extrapolate))
+    return np.where(coarse, np.nan, walked), fitted, low, high

@@ -200,10 +200,8 @@ def divider_rungs(
 
 def _whole_enough(ladders: Ladders, rungs: Rungs) -> Bools:
     """Whether a rung leaves out little more of its feature than the feature's first rung does."""
-    counts = np.diff(ladders.offsets)
-    first = np.repeat(rungs.left_out[np.minimum(ladders.offsets[:-1], len(rungs.left_out) - 1)], counts)
-    walked = np.repeat(rungs.lengths[np.minimum(ladders.offsets[:-1], len(rungs.lengths) - 1)], counts)
-    return ~(rungs.left_out - first > LEFT_OUT * walked)
+    first = np.repeat(ladders.offsets[:-1], np.diff(ladders.offsets))
+    return ~(rungs.left_out - rungs.left_out[first] > LEFT_OUT * rungs.lengths[first])
 
 
 def _judgement(table: Floats) -> Judgement:

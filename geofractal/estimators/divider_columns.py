@@ -1,0 +1,160 @@
+"""What the columns of `divider-dimension` are called and mean."""
+
+from __future__ import annotations
+
+from geofractal.measure import PLANES, Column
+
+MANDELBROT = "Mandelbrot 1967, Science 156:636-638"
+
+_CALIBRATION = "set by simulation on curves of exactly known dimension; `geofractal calibrate` repeats it"
+
+DIMENSION_COLUMNS = (
+    Column(
+        "divider_dim",
+        "div_dim",
+        "number",
+        "",
+        "divider dimension between the first and the last ruler used; null where there are too few scales",
+        "D = 1 - slope of ln L(r) on ln r",
+        MANDELBROT,
+    ),
+    Column(
+        "divider_dim_low",
+        "div_dlow",
+        "number",
+        "",
+        "lower end of the 95 % interval for the process that made the line: the one to use when two"
+        " different lines are compared; under two-regime and curved it holds both ends of the ladder",
+        source=_CALIBRATION,
+    ),
+    Column(
+        "divider_dim_high",
+        "div_dhigh",
+        "number",
+        "",
+        "upper end of the same interval",
+        source=_CALIBRATION,
+    ),
+    Column(
+        "divider_spread",
+        "div_spread",
+        "number",
+        "",
+        "standard error of divider_dim for this line alone: starts, directions, placement of the rulers;"
+        " too narrow to compare two different lines with",
+    ),
+    Column(
+        "divider_verdict",
+        "div_verdic",
+        "text",
+        "",
+        "whether a dimension exists: power-law; two-regime (one dimension on each side of a break); curved;"
+        " smooth (nothing beyond dimension 1); too-few-scales",
+        "a hinge, a step and a parabola against the straight line on logarithmic axes",
+        _CALIBRATION,
+    ),
+    Column("divider_ruler_min_m", "div_rmin_m", "number", "m", "first ruler of the ladder that was used"),
+    Column("divider_ruler_max_m", "div_rmax_m", "number", "m", "last ruler of the ladder that was used"),
+    Column("divider_rungs", "div_rungs", "count", "", "number of rulers that were used"),
+    Column(
+        "divider_r2",
+        "div_r2",
+        "number",
+        "",
+        "share of the variance of ln L that the fitted line explains; near 1 for any line on logarithmic"
+        " axes, so no evidence that a dimension exists",
+    ),
+    Column("divider_break_m", "div_brk_m", "number", "m", "ruler at which the two regimes meet"),
+    Column("divider_break_low_m", "div_brkl_m", "number", "m", "lower end of the break's interval"),
+    Column("divider_break_high_m", "div_brkh_m", "number", "m", "upper end of the break's interval"),
+    Column(
+        "divider_fine_dim",
+        "div_fine",
+        "number",
+        "",
+        "dimension below the break; under curved, at the first ruler",
+    ),
+    Column(
+        "divider_coarse_dim",
+        "div_coarse",
+        "number",
+        "",
+        "dimension above the break; under curved, at the last ruler",
+    ),
+    Column(
+        "divider_content",
+        "div_conten",
+        "number",
+        "m^D",
+        "prefactor that states a length at any ruler of the ladder; contents of different dimension do not"
+        " compare, and it is no estimate of a Hausdorff measure",
+        "L(r) = content x r^(1 - D)",
+    ),
+    Column("divider_log10_content", "div_logcon", "number", "", "decimal logarithm of divider_content"),
+    Column(
+        "divider_left_out_km",
+        "div_out_km",
+        "number",
+        "km",
+        "length of the parts that are too short for the last ruler used",
+    ),
+)
+
+PLANE_COLUMNS = (
+    Column(
+        "divider_distortion_percent",
+        "div_distor",
+        "number",
+        "percent",
+        "worst relative distance error of the plane on which the feature was walked",
+    ),
+    Column("divider_plane", "div_plane", "text", "", "on what the feature was walked: " + ", ".join(PLANES)),
+)
+
+
+def length_columns(ruler: str, index: int) -> tuple[Column, Column, Column, Column]:
+    """Return the columns of the length at a stated ruler: walked, fitted, and the fit's interval.
+
+    Parameters
+    ----------
+    ruler : metres as plain text: 1000, 2500.5
+    index : place among the stated rulers, which makes short names unique where the ruler is too long
+    """
+    tag = ruler.replace(".", "_")
+    short = f"{tag}m" if len(tag) <= 6 else f"_{index}"
+    name = f"length_at_{tag}m_ruler"
+    fit = "content x r^(1 - D)"
+    return (
+        Column(
+            f"{name}_km",
+            f"len{short}",
+            "number",
+            "km",
+            f"length walked with a ruler of {ruler} m; null below the source's detail",
+            "L(r) = r n + d: n whole steps of r, last straight distance d; mean of both directions, rings"
+            " also of 16 evenly spaced starts",
+            MANDELBROT,
+        ),
+        Column(
+            f"{name}_fit_km",
+            f"fit{short}",
+            "number",
+            "km",
+            f"length that the fitted line gives at a ruler of {ruler} m; null outside the ladder",
+            fit,
+        ),
+        Column(
+            f"{name}_low_km",
+            f"lo_{short}".replace("__", "_"),
+            "number",
+            "km",
+            "lower end of the 95 % interval in which one more walk of this line at that ruler is expected",
+        ),
+        Column(
+            f"{name}_high_km",
+            f"hi_{short}".replace("__", "_"),
+            "number",
+            "km",
+            "upper end of the same interval",
+        ),
+    )
