@@ -31,7 +31,7 @@ Draw = Callable[[float, int, int], "Curve"]
 
 
 def _level(pieces: float, vertices: int) -> int:
-    return max(1, round(np.log(vertices) / np.log(pieces)))
+    return max(1, round(float(np.log(vertices) / np.log(pieces))))
 
 
 FAMILIES: dict[str, Draw] = {

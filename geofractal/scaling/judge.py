@@ -27,8 +27,8 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from geofractal.kernels.ladder_judge import FIELDS, judge_ladders
-from geofractal.kernels.line_scales import line_scales
 from geofractal.scaling.calibrated import BOX, DIVIDER
+from geofractal.scaling.ladder import scales_of
 
 if TYPE_CHECKING:
     from geofractal.measure import Bools, Floats, Ints, Lines
@@ -185,14 +185,21 @@ def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"
 
 
 def divider_rungs(
-    lines: Lines, *, length: Floats, spread: Floats, steps: Floats, tallies: Floats, left_out: Floats
+    lines: Lines,
+    *,
+    length: Floats,
+    spread: Floats,
+    steps: Floats,
+    tallies: Floats,
+    left_out: Floats,
+    scales: Floats | None = None,
 ) -> Rungs:
     """Return what divider walks found, with what the lines' mapping hides, ready to be judged.
 
-    Parameters as `geofractal.kernels.walk.walk_ladders` gives them. A rung's mean is at least as sure as
-    that of two walks, one each way.
+    Parameters as `geofractal.kernels.walk.walk_ladders` gives them, and the lines' scales where they are
+    known already. A rung's mean is at least as sure as that of two walks, one each way.
     """
-    scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
+    scales = scales_of(lines) if scales is None else scales
     opens = np.concatenate(([0], np.cumsum(~lines.closed)))[lines.feature_offsets]
     detail = np.where(scales[:, 3] > 0, 0.0, scales[:, 0])
     return Rungs(length, steps, spread / np.sqrt(2), tallies, left_out, detail, np.diff(opens).astype(float))

@@ -57,6 +57,7 @@ def divider_ladders(
     ruler_min_m: float | None = None,
     ruler_max_m: float | None = None,
     rungs: int | None = None,
+    scales: Floats | None = None,
 ) -> Ladders:
     """Choose each feature's rulers from its own vertex spacing and extent.
 
@@ -65,18 +66,24 @@ def divider_ladders(
     lines : projected lines
     ruler_min_m, ruler_max_m : first and last ruler in metres; None chooses them from the feature
     rungs : number of rulers; None takes `RUNGS_PER_DECADE` a decade
+    scales : (n, 4) of the lines where they are known already, see `scales_of`
 
     Returns
     -------
     Ladders
         A feature without length, or whose first ruler is not below its last, owns no rung.
     """
-    scales = line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
+    scales = scales_of(lines) if scales is None else scales
     n = len(lines)
     lowest = np.full(n, ruler_min_m) if ruler_min_m is not None else finest_rulers(scales)
     highest = np.full(n, ruler_max_m) if ruler_max_m is not None else LAST_RUNG_EXTENT * scales[:, 1]
     highest[np.isnan(scales[:, 0])] = np.nan
     return geometric_ladders(lowest, highest, rungs)
+
+
+def scales_of(lines: Lines) -> Floats:
+    """Return the scales that each feature carries, (n, 4) as `line_scales` gives them."""
+    return line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
 
 
 def finest_rulers(scales: Floats) -> Floats:
