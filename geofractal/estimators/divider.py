@@ -15,12 +15,11 @@ from geofractal.estimators.divider_columns import (
     length_columns,
 )
 from geofractal.kernels.ladder_judge import STRETCHES
-from geofractal.kernels.line_scales import line_scales
 from geofractal.kernels.walk import walk_ladders
 from geofractal.measure import PLANES, Column, Measure, Options
 from geofractal.scaling import ladder
 from geofractal.scaling.judge import VERDICTS, divider_rungs, judge
-from geofractal.scaling.ladder import Ladders, divider_ladders
+from geofractal.scaling.ladder import Ladders, divider_ladders, scales_of
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -114,9 +113,7 @@ def finest_rulers(lines: Lines) -> Floats:
 
     The first rung of its ladder: `geofractal.scaling.ladder` says how it is chosen.
     """
-    return ladder.finest_rulers(
-        line_scales(lines.xy, lines.source_vertex, lines.part_offsets, lines.feature_offsets)
-    )
+    return ladder.finest_rulers(scales_of(lines))
 
 
 def too_coarse(rulers_m: float | Floats, finest_m: Floats) -> Bools:
@@ -208,13 +205,18 @@ class DividerDimension(Measure[DividerOptions]):
 
     def measure(self, lines: Lines, options: DividerOptions) -> Values:
         """Walk every feature with its ladder and with the stated rulers, and judge what was found."""
-        finest = finest_rulers(lines)
+        scales = scales_of(lines)
+        finest = ladder.finest_rulers(scales)
         notes = Notes(finest)
         ladders = divider_ladders(
-            lines, ruler_min_m=options.ruler_min_m, ruler_max_m=options.ruler_max_m, rungs=options.rungs
+            lines,
+            ruler_min_m=options.ruler_min_m,
+            ruler_max_m=options.ruler_max_m,
+            rungs=options.rungs,
+            scales=scales,
         )
         walks = walk(lines, ladders, starts=options.starts)
-        found = judge(ladders, divider_rungs(lines, **walks._asdict()))
+        found = judge(ladders, divider_rungs(lines, **walks._asdict(), scales=scales))
         values = _dimension(ladders, walks, found, notes)
         for i, ruler in enumerate(options.lengths_at_m, start=1):
             names = [column.name for column in length_columns(plain_number(ruler), i)]
