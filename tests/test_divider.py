@@ -12,6 +12,8 @@ from pyproj import Geod
 from geofractal.estimators.divider import DividerDimension, DividerOptions, walk_rulers
 from geofractal.measure import PLANES, Lines
 from geofractal.registry import check_measure_class, columns_of
+from geofractal.synthetic.degrade import traced
+from geofractal.synthetic.trails import fractional_trail
 
 
 def lines_of(*features, closed=False, radius=math.inf, source_vertex=None):
@@ -170,6 +172,17 @@ def test_a_ruler_below_three_median_segments_gives_no_length():
     assert math.isnan(found["length_at_29_9m_ruler_km"][0])
     assert found["length_at_30m_ruler_km"][0] == pytest.approx(4.99)
     assert found["divider_note"][0] == "the source is too coarse for a ruler of 29.9 m"
+
+
+def test_a_line_traced_from_raster_cells_says_so_and_its_ladder_keeps_clear_of_them():
+    trail = fractional_trail(1.2, vertices=20_000, seed=1)
+    found = measured(lines_of(traced(trail, 30.0).xy), lengths_at_m=(150.0,))
+    assert found["divider_ruler_min_m"][0] >= 6 * 30
+    assert math.isnan(found["length_at_150m_ruler_km"][0])
+    assert found["divider_note"][0] == (
+        "drawn along raster cells, which its ladder keeps clear of;"
+        " the source is too coarse for a ruler of 150 m"
+    )
 
 
 def test_vertices_added_by_the_reader_make_no_detail():

@@ -208,6 +208,7 @@ class DividerDimension(Measure[DividerOptions]):
         scales = scales_of(lines)
         finest = ladder.finest_rulers(scales)
         notes = Notes(finest)
+        notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
         ladders = divider_ladders(
             lines,
             ruler_min_m=options.ruler_min_m,
