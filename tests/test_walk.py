@@ -269,6 +269,19 @@ def test_a_ruler_past_the_antipode_has_no_length():
     assert math.isnan(walk([half], 3.2 * EARTH, radius=EARTH).length[0])
 
 
+@pytest.mark.parametrize("ruler", [1e-300, 1e-8, math.inf, math.nan])
+@pytest.mark.parametrize("closed", [False, True])
+def test_rulers_that_no_coordinate_resolves_have_no_length(ruler, closed):
+    ring = noisy_ring(1) * 1000
+    assert math.isnan(walk([ring], ruler, closed=closed).length[0])
+
+
+def test_a_ruler_far_below_the_segments_walks_along_them():
+    ring = noisy_ring(1) * 1000
+    edge = np.linalg.norm(np.diff(ring, axis=0), axis=1).sum()
+    assert walk([ring], 1e-3).length[0] == pytest.approx(edge, rel=1e-6)
+
+
 def test_each_feature_has_its_own_ladder():
     lines = [koch(4), 2 * koch(4), random_line(1, 50, 2)]
     xy = np.concatenate(lines)

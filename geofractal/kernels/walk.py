@@ -26,6 +26,9 @@ TIE = 1e-9
 """Relative tolerance at which a vertex counts as lying on the circle: rounding would otherwise make a
 walk miss circles that only touch the line, as they do all along a Koch curve."""
 
+MOST_STEPS = 1e12
+"""Steps beyond which a ruler is lost in the rounding of the coordinates; such rulers have no length."""
+
 
 class Part(NamedTuple):
     """One part of a line, ready to be walked; see `geofractal.kernels.line_path`.
@@ -252,7 +255,8 @@ def _walk_rung(
     most = len(part.starts)
     walked = np.empty(2 * most)
     starts, stride, s, steps, count = 1, 1, 0, 0, 0
-    possible = _chord(ruler, radius) > 0
+    chord = _chord(ruler, radius)
+    possible = chord > 0 and part.length / chord < MOST_STEPS
     while s < starts and possible:
         for way in range(1, -2, -2):
             at_end = s == 0 and way < 0 and not part.closed

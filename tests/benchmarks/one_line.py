@@ -11,7 +11,13 @@ from collections.abc import Callable
 
 import numpy as np
 
-from geofractal.estimators.divider import RING_STARTS, walk, walk_rulers
+from geofractal.estimators.divider import (
+    RING_STARTS,
+    DividerDimension,
+    DividerOptions,
+    walk,
+    walk_rulers,
+)
 from geofractal.measure import Floats, Lines
 from geofractal.scaling.ladder import Ladders, divider_ladders
 from geofractal.synthetic.koch import random_koch
@@ -56,6 +62,7 @@ def report(name: str, xy: Floats, *, closed: bool = False) -> None:
     middle = tuple(ladders.rulers[[RUNGS // 3, 2 * RUNGS // 3]])
     tasks: dict[str, Callable[[], object]] = {
         "ladder": lambda: walk(lines, ladders),
+        "whole measure": lambda: DividerDimension().measure(lines, DividerOptions(rungs=RUNGS)),
         "one start each way": lambda: walk(lines, ladders, starts=1),
         "choosing the ladder": lambda: divider_ladders(lines, rungs=RUNGS),
         f"two rulers, {RING_STARTS if closed else 1} starts": lambda: walk_rulers(lines, middle),
