@@ -10,15 +10,35 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from geofractal.api import divider_dimension, run, sinuosity
+    from geofractal.estimators.area_perimeter import area_perimeter_dimension, area_perimeter_residual
+    from geofractal.estimators.number_area import number_area_exponent
+    from geofractal.patches import polygon_patches, raster_patches, warping_effect
     from geofractal.versions import show_versions
 
-__all__ = ["divider_dimension", "run", "show_versions", "sinuosity"]
+__all__ = [
+    "area_perimeter_dimension",
+    "area_perimeter_residual",
+    "divider_dimension",
+    "number_area_exponent",
+    "polygon_patches",
+    "raster_patches",
+    "run",
+    "show_versions",
+    "sinuosity",
+    "warping_effect",
+]
 
 _HOMES = {
+    "area_perimeter_dimension": "geofractal.estimators.area_perimeter",
+    "area_perimeter_residual": "geofractal.estimators.area_perimeter",
     "divider_dimension": "geofractal.api",
+    "number_area_exponent": "geofractal.estimators.number_area",
+    "polygon_patches": "geofractal.patches",
+    "raster_patches": "geofractal.patches",
     "run": "geofractal.api",
     "show_versions": "geofractal.versions",
     "sinuosity": "geofractal.api",
+    "warping_effect": "geofractal.patches",
 }
 
 

@@ -172,7 +172,7 @@ def fit_patches(area: Floats, perimeter: Floats, smallest_cells: int | None) -> 
     line = fit_line(x, y)
     half = _student(len(x) - 2) * 2 * line.error + _cell_bias(smallest_cells)
     dim = 2 * line.b
-    if dim + half < 1:
+    if dim + half < 1 - 1e-9:
         note = f"fitted dimension {dim:.2f} is below 1: outlines have collapsed; use a source of finer scale"
         return figures | {"area_perimeter_note": note}
     verdict, bend = judge(x, y, line, dim - half)
@@ -248,13 +248,12 @@ def judge(x: Floats, y: Floats, line: Line, low: float) -> tuple[str, Break | No
     straight = bic(line.squares, 2)
     bend = fit_break(x, y)
     curve = np.polynomial.Polynomial.fit(x, y, 2)
-    curved = bic(float(((y - curve(x)) ** 2).sum()), 3)
+    squares = float(((y - curve(x)) ** 2).sum())
     ends = curve.deriv()(np.quantile(x, [0.05, 0.95]))
-    if bend is not None and 2 * abs(bend.above - bend.below) > LEAST_BEND:
-        broken = bic(bend.squares, 4)
-        if straight - broken > EVIDENCE and broken <= curved:
-            return "two-regime", bend
-    if straight - curved > EVIDENCE and 2 * abs(ends[1] - ends[0]) > LEAST_BEND:
+    bends = bend is not None and 2 * abs(bend.above - bend.below) > LEAST_BEND and bend.squares <= squares
+    if bend is not None and bends and straight - bic(bend.squares, 4) > EVIDENCE:
+        return "two-regime", bend
+    if straight - bic(squares, 3) > EVIDENCE and 2 * abs(ends[1] - ends[0]) > LEAST_BEND:
         return "curved", None
     return ("smooth" if low <= 1 and 2 * line.b <= SMOOTH else "power-law"), None
 

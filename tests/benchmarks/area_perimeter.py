@@ -50,7 +50,7 @@ def island(dimension: float, rng: np.random.Generator) -> shapely.Polygon:
     xy = random_koch(dimension, level=level, seed=int(rng.integers(1 << 30)), island=True).xy
     segment = np.hypot(*(xy[1] - xy[0]))
     shape = shapely.make_valid(shapely.Polygon(xy * rng.uniform(0.2, 0.5) / segment))
-    parts = [part for part in shapely.get_parts(shape) if part.geom_type == "Polygon"]
+    parts = [part for part in shapely.get_parts(shapely.get_parts(shape)) if part.geom_type == "Polygon"]
     return affinity.rotate(max(parts, key=lambda part: part.area), rng.uniform(0, 360))
 
 
