@@ -236,7 +236,7 @@ def test_open_lines_are_the_mean_of_both_directions_alone():
     # sqrt(2^2 + 3^2); backwards: from (10, 3) to (10 - sqrt(7), 0), one more step, and the rest
     forwards = 2 * 4 + math.sqrt(13)
     backwards = 4 + 4 + (10 - math.sqrt(7) - 4)
-    assert walk_rulers(lines_of(line), (4.0,)).length[0, 0] == pytest.approx((forwards + backwards) / 2)
+    assert walk_rulers(lines_of(line), np.array([4.0]))[0, 0] == pytest.approx((forwards + backwards) / 2)
 
 
 @pytest.mark.parametrize(

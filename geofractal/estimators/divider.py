@@ -73,19 +73,22 @@ def walk(lines: Lines, ladders: Ladders, *, starts: int | None = None) -> Walks:
     return _walk(lines, ladders, starts or RING_STARTS, enough, stretches=STRETCHES)
 
 
-def walk_rulers(lines: Lines, rulers_m: tuple[float, ...] | Floats) -> Walks:
-    """Walk every feature with the same rulers: open lines both ways, rings from `RING_STARTS` starts.
+def walk_rulers(lines: Lines, rulers_m: Floats) -> Floats:
+    """Return the lengths walked with stated rulers: open lines both ways, rings from `RING_STARTS` starts.
+
+    Parameters
+    ----------
+    lines : projected lines
+    rulers_m : (k,) the same for all, or (n, k); NaN where nothing is to be walked
 
     Returns
     -------
-    Walks
-        Arrays of shape (n, rulers); NaN where no part of the feature is long enough for the ruler, or
-        the ruler is NaN.
+    (n, k) metres; NaN where no part of the feature is long enough for the ruler
     """
-    n, count = len(lines), len(rulers_m)
-    ladders = Ladders(np.arange(n + 1) * count, np.tile(np.asarray(rulers_m, dtype=np.float64), n))
-    found = _walk(lines, ladders, RING_STARTS, _NO_LIMIT, inner_starts=False)
-    return Walks(*(values.reshape(n, count, *values.shape[1:]) for values in found))
+    n, count = len(lines), rulers_m.shape[-1]
+    rulers = np.broadcast_to(rulers_m, (n, count)).ravel()
+    ladders = Ladders(np.arange(n + 1) * count, rulers)
+    return _walk(lines, ladders, RING_STARTS, _NO_LIMIT, inner_starts=False).length.reshape(n, count)
 
 
 def _walk(
@@ -219,10 +222,7 @@ class DividerDimension(Measure[DividerOptions]):
         walks = walk(lines, ladders, starts=options.starts)
         found = judge(ladders, divider_rungs(lines, **walks._asdict(), scales=scales))
         values = _dimension(ladders, walks, found, notes)
-        for i, ruler in enumerate(options.lengths_at_m, start=1):
-            names = [column.name for column in length_columns(plain_number(ruler), i)]
-            figures = _length(lines, ruler, finest, found, options, notes)
-            values |= dict(zip(names, figures, strict=True))
+        values |= _lengths(lines, options, finest, found, notes)
         values["divider_distortion_percent"] = 100 * lines.distortion
         values["divider_plane"] = np.array(PLANES, dtype=object)[lines.plane]
         values["divider_note"] = notes.texts
@@ -263,19 +263,22 @@ def _left_out(ladders: Ladders, walks: Walks, found: Judgement) -> Floats:
     return longest
 
 
-def _length(
-    lines: Lines, ruler: float, finest: Floats, found: Judgement, options: DividerOptions, notes: Notes
-) -> tuple[Floats, Floats, Floats, Floats]:
-    """Return a ruler's walked length, and its fitted one with interval, km; null where not deserved."""
-    text = f"a ruler of {plain_number(ruler)} m"
-    walked = walk_rulers(lines, (ruler,)).length[:, 0] / 1000
-    coarse = too_coarse(ruler, finest)
-    notes.add(coarse, f"the source is too coarse for {text}")
-    notes.add(~coarse & np.isnan(walked), f"too short for {text}")
-    outside = ~np.isnan(found.dimension) & np.isnan(found.length_at(ruler)[0])
-    if options.extrapolate:
-        notes.add(outside, f"the fitted length is extrapolated to {text}")
-    else:
-        notes.add(outside & ~coarse, f"its ladder does not hold {text}")
-    fitted, low, high = (metres / 1000 for metres in found.length_at(ruler, extrapolate=options.extrapolate))
-    return np.where(coarse, np.nan, walked), fitted, low, high
+def _lengths(lines: Lines, options: DividerOptions, finest: Floats, found: Judgement, notes: Notes) -> Values:
+    """Return each stated ruler's walked length, and its fitted one with interval; null where not deserved."""
+    rulers = np.array(options.lengths_at_m)
+    coarse = too_coarse(rulers, finest[:, None])
+    walked = walk_rulers(lines, np.where(coarse, np.nan, rulers))
+    values: Values = {}
+    for i, ruler in enumerate(rulers):
+        text = f"a ruler of {plain_number(ruler)} m"
+        outside = ~np.isnan(found.dimension) & np.isnan(found.length_at(ruler)[0])
+        notes.add(coarse[:, i], f"the source is too coarse for {text}")
+        notes.add(~coarse[:, i] & np.isnan(walked[:, i]), f"too short for {text}")
+        if options.extrapolate:
+            notes.add(outside, f"the fitted length is extrapolated to {text}")
+        else:
+            notes.add(outside & ~coarse[:, i], f"its ladder does not hold {text}")
+        metres = (walked[:, i], *found.length_at(ruler, extrapolate=options.extrapolate))
+        names = [column.name for column in length_columns(plain_number(ruler), i + 1)]
+        values |= {name: figures / 1000 for name, figures in zip(names, metres, strict=True)}
+    return values

@@ -7,9 +7,8 @@ from typing import TYPE_CHECKING, ClassVar
 import numpy as np
 from pydantic import Field
 
-from geofractal.estimators.divider import Metres, Notes, finest_rulers, too_coarse, walk
+from geofractal.estimators.divider import Metres, Notes, finest_rulers, too_coarse, walk_rulers
 from geofractal.measure import Column, Measure, Options
-from geofractal.scaling.ladder import Ladders
 
 if TYPE_CHECKING:
     from geofractal.measure import Floats, Lines, Values
@@ -87,26 +86,21 @@ class Sinuosity(Measure[SinuosityOptions]):
         near = ~many & ~ring & (ends < rulers)
         coarse = too_coarse(rulers, finest)
         refused = many | ring | near | coarse | np.isnan(finest)
-        length = walk(lines, _one_ruler(rulers), starts=1).length
+        length = walk_rulers(lines, np.where(refused, np.nan, rulers)[:, None])[:, 0]
         notes = Notes(finest)
         notes.add(ring, "a ring has no distance from end to end")
         notes.add(many, "several parts that form no single path")
         notes.add(near, "its ends are nearer to each other than the ruler")
         notes.add(coarse, "the source is too coarse for the ruler")
         notes.add(~refused & np.isnan(length), "too short for the ruler")
-        length = np.where(refused, np.nan, length)
         return {
-            "sinuosity": length / np.where(refused, np.nan, ends),
+            "sinuosity": length / ends,
             "sinuosity_ruler_m": rulers,
             "sinuosity_length_km": length / 1000,
             "sinuosity_end_to_end_km": np.where(many | ring, np.nan, ends) / 1000,
             "sinuosity_distortion_percent": 100 * lines.distortion,
             "sinuosity_note": notes.texts,
         }
-
-
-def _one_ruler(rulers: Floats) -> Ladders:
-    return Ladders(np.arange(len(rulers) + 1), rulers)
 
 
 def _end_to_end(lines: Lines) -> Floats:

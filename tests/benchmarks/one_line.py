@@ -59,7 +59,7 @@ def report(name: str, xy: Floats, *, closed: bool = False) -> None:
     lines = one_line(xy, closed=closed)
     x, y = xy[:, 0].copy(), xy[:, 1].copy()
     ladders = divider_ladders(lines, rungs=RUNGS)
-    middle = tuple(ladders.rulers[[RUNGS // 3, 2 * RUNGS // 3]])
+    middle = ladders.rulers[[RUNGS // 3, 2 * RUNGS // 3]]
     tasks: dict[str, Callable[[], object]] = {
         "ladder": lambda: walk(lines, ladders),
         "whole measure": lambda: DividerDimension().measure(lines, DividerOptions(rungs=RUNGS)),
@@ -89,7 +89,7 @@ def main() -> None:
     """Print the tables."""
     small = random_koch(1.2, level=4, seed=1).xy
     walk(one_line(small), divider_ladders(one_line(small)))
-    walk_rulers(one_line(small, closed=True), (0.1,))
+    walk_rulers(one_line(small, closed=True), np.array([0.1]))
     for dimension in (1.05, 1.25, 1.5):
         report(f"random-sided Koch, D = {dimension}", random_koch(dimension, level=11, seed=1).xy)
     trail = fractional_trail(1.25, vertices=VERTICES, seed=1).xy
