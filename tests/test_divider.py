@@ -11,9 +11,10 @@ from pyproj import Geod
 
 from geofractal.estimators.divider import DividerDimension, DividerOptions, walk_rulers
 from geofractal.measure import PLANES, Lines
-from geofractal.registry import check_measure_class, columns_of
+from geofractal.registry import columns_of
 from geofractal.synthetic.degrade import traced
 from geofractal.synthetic.trails import fractional_trail
+from geofractal.testing import check_measure
 
 
 def lines_of(*features, closed=False, radius=math.inf, source_vertex=None):
@@ -52,8 +53,9 @@ def wander(seed=0, count=3000):
     return np.cumsum(np.random.default_rng(seed).normal(size=(count, 2)), axis=0)
 
 
-def test_the_class_keeps_the_contract():
-    check_measure_class(DividerDimension, "divider-dimension")
+@pytest.mark.parametrize("options", [None, DividerOptions(lengths_at_m=(1000.0, 2500.5))])
+def test_it_keeps_the_contract(options):
+    check_measure(DividerDimension, options)
 
 
 def test_every_column_is_filled_for_every_feature():

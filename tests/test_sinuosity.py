@@ -8,7 +8,7 @@ from scipy.special import j0
 from test_divider import lines_of, wander
 
 from geofractal.estimators.sinuosity import Sinuosity, SinuosityOptions
-from geofractal.registry import check_measure_class
+from geofractal.testing import check_measure
 
 EARTH = 6_371_000.0
 
@@ -25,8 +25,9 @@ def sine_generated(swing, bends=10, count=4000):
     return np.column_stack([points.real, points.imag])
 
 
-def test_the_class_keeps_the_contract():
-    check_measure_class(Sinuosity, "sinuosity")
+@pytest.mark.parametrize("options", [None, SinuosityOptions(ruler_m=100.0)])
+def test_it_keeps_the_contract(options):
+    check_measure(Sinuosity, options)
 
 
 def test_a_straight_line_has_sinuosity_one():
