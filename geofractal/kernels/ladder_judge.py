@@ -23,6 +23,9 @@ STRETCHES = 16
 WINDOW = 2
 """Stretches that make one window; windows overlap by all but one stretch."""
 
+PLACES = 31
+"""Places at which a break is tried."""
+
 POWER_LAW, TWO_REGIME, CURVED, SMOOTH, TOO_FEW = 0, 1, 2, 3, 4
 
 FIELDS = (
@@ -60,6 +63,7 @@ class Constants(NamedTuple):
     ramp: float
     fine_bias: float
     coarse_bias: float
+    crowding: float
     own_least: float
     own_low: float
     own_long: float
@@ -81,9 +85,14 @@ class Constants(NamedTuple):
 def _weights(x: Floats, steps: Floats, c: Constants) -> Floats:
     """Return weights of sum 1: low where steps are few, rising over the ladder's foot."""
     foot = min(c.ramp, (x[-1] - x[0]) / 3.0)
-    w = np.minimum(1.0, steps / c.sure_steps) * np.minimum(1.0, 0.2 + (x - x[0]) / foot)
-    shares: Floats = w / w.sum()
-    return shares
+    w = np.empty(len(x))
+    total = 0.0
+    for k in range(len(x)):
+        w[k] = min(1.0, steps[k] / c.sure_steps) * min(1.0, 0.2 + (x[k] - x[0]) / foot)
+        total += w[k]
+    for k in range(len(x)):
+        w[k] /= total
+    return w
 
 
 @kernel
@@ -100,12 +109,16 @@ def _slope(w: Floats, x: Floats, y: Floats) -> tuple[float, float, float, float]
 
 
 @kernel
-def _without_bias(x: Floats, y: Floats, steps: Floats, gap: float, open_parts: float, c: Constants) -> Floats:
+def _without_bias(
+    x: Floats, y: Floats, steps: Floats, detail: float, gap: float, open_parts: float, c: Constants
+) -> Floats:
     """Return y without what the ends of the ladder add, for a line whose dimension is 1 + `gap`."""
     fine = c.fine_bias * gap**1.5
     coarse = c.coarse_bias * gap / (1.0 + gap) * open_parts
-    corrected: Floats = y + fine * np.exp(-x) - coarse / steps
-    return corrected
+    z = np.empty(len(y))
+    for k in range(len(y)):
+        z[k] = y[k] + fine * np.exp(detail - x[k]) - coarse / steps[k]
+    return z
 
 
 @kernel
@@ -139,20 +152,31 @@ def _bends(w: Floats, x: Floats, y: Floats, mean_x: float, xx: float) -> float:
     A slope's own error is of the size of these neighbours: noise in a ladder is correlated over rungs,
     and a ripple that beats with the ladder's length enters all three alike.
     """
-    f = (x - mean_x) / np.sqrt(xx)
-    m3, m4 = (w * f**3).sum(), (w * f**4).sum()
-    second = f * f - 1.0 - m3 * f
-    norm = (w * second * second).sum()
-    if norm <= 1e-12 or len(x) < 4:
+    n = len(x)
+    unit = np.sqrt(xx)
+    m3, m4 = 0.0, 0.0
+    for k in range(n):
+        f = (x[k] - mean_x) / unit
+        m3 += w[k] * f**3
+        m4 += w[k] * f**4
+    norm = m4 - 1.0 - m3 * m3
+    if norm <= 1e-9:
         return 0.0
-    second /= np.sqrt(norm)
-    two = (w * second * y).sum()
-    third = f**3 - m3 - m4 * f - (w * f**3 * second).sum() * second
-    norm = (w * third * third).sum()
-    if norm <= 1e-12 or len(x) < 5:
+    two, cross = 0.0, 0.0
+    for k in range(n):
+        f = (x[k] - mean_x) / unit
+        second = (f * f - 1.0 - m3 * f) / np.sqrt(norm)
+        two += w[k] * second * y[k]
+        cross += w[k] * f**3 * second
+    three, size = 0.0, 0.0
+    for k in range(n):
+        f = (x[k] - mean_x) / unit
+        third = f**3 - m3 - m4 * f - cross * (f * f - 1.0 - m3 * f) / np.sqrt(norm)
+        size += w[k] * third * third
+        three += w[k] * third * y[k]
+    if size <= 1e-9:
         return float(two * two / xx)
-    three = (w * third * y).sum() / np.sqrt(norm)
-    return float((two * two + three * three) / (2.0 * xx))
+    return float((two * two + three * three / size) / (2.0 * xx))
 
 
 @kernel
@@ -169,8 +193,11 @@ def _own_error(x: Floats, steps: Floats, tallies: Floats) -> float:
         if steps[k] * WINDOW >= 8.0 * pieces:
             used = k + 1
     used = min(max(used, 3), len(x))
-    mean_x = x[:used].mean()
-    xx = ((x[:used] - mean_x) ** 2).sum()
+    mean_x, xx = 0.0, 0.0
+    for k in range(used):
+        mean_x += x[k] / used
+    for k in range(used):
+        xx += (x[k] - mean_x) ** 2
     rounding = 0.0
     for k in range(used):
         whole = steps[k] * WINDOW / pieces
@@ -191,6 +218,18 @@ def _own_error(x: Floats, steps: Floats, tallies: Floats) -> float:
 
 
 @kernel
+def _slope_of_some(w: Floats, x: Floats, y: Floats, first: int, last: int, every: int) -> float:
+    """Return the slope over every so many rungs from `first` to before `last`."""
+    some = np.zeros(len(w))
+    total = 0.0
+    for k in range(first, last, every):
+        total += w[k]
+    for k in range(first, last, every):
+        some[k] = w[k] / total
+    return float(_slope(some, x, y)[0])
+
+
+@kernel
 def _line_spread(w: Floats, x: Floats, y: Floats, noise: Floats, slope: float) -> float:
     """Return the standard error of the slope for this line alone: starts and placement of the rulers."""
     n = len(x)
@@ -200,11 +239,10 @@ def _line_spread(w: Floats, x: Floats, y: Floats, noise: Floats, slope: float) -
         if not np.isnan(noise[k]):
             square += (w[k] * (x[k] - mean_x) / xx * noise[k]) ** 2
     if n >= 6:
-        even = _slope(w[::2] / w[::2].sum(), x[::2], y[::2])[0]
-        odd = _slope(w[1::2] / w[1::2].sum(), x[1::2], y[1::2])[0]
-        first = _slope(w[1:] / w[1:].sum(), x[1:], y[1:])[0]
-        last = _slope(w[:-1] / w[:-1].sum(), x[:-1], y[:-1])[0]
-        square += 0.25 * (even - odd) ** 2 + 0.5 * ((first - slope) ** 2 + (last - slope) ** 2)
+        apart = _slope_of_some(w, x, y, 0, n, 2) - _slope_of_some(w, x, y, 1, n, 2)
+        first = _slope_of_some(w, x, y, 1, n, 1) - slope
+        last = _slope_of_some(w, x, y, 0, n - 1, 1) - slope
+        square += 0.25 * apart**2 + 0.5 * (first**2 + last**2)
     return float(np.sqrt(square))
 
 
@@ -212,9 +250,12 @@ def _line_spread(w: Floats, x: Floats, y: Floats, noise: Floats, slope: float) -
 def _best_hinge(w: Floats, x: Floats, y: Floats, places: Floats) -> tuple[Floats, float, float, int]:
     """Return the mean square left by a hinge at each place, both slopes of the best, and its number."""
     left = np.empty(len(places))
+    over = np.empty(len(x))
     best, slope, turn = 0, 0.0, 0.0
     for i in range(len(places)):
-        left[i], s, t = _residual(w, y, x, np.maximum(x - places[i], 0.0))
+        for k in range(len(x)):
+            over[k] = max(x[k] - places[i], 0.0)
+        left[i], s, t = _residual(w, y, x, over)
         if i == 0 or left[i] < left[best]:
             best, slope, turn = i, s, t
     return left, slope, slope + turn, best
@@ -222,15 +263,20 @@ def _best_hinge(w: Floats, x: Floats, y: Floats, places: Floats) -> tuple[Floats
 
 @kernel
 def _best_step(w: Floats, x: Floats, y: Floats, places: Floats) -> tuple[Floats, float, int]:
-    """Return the mean square left by a smooth step at each place, the common slope, and the best's number."""
-    left = np.full(len(places), np.inf)
+    """Return the mean square left by a smooth step at each place, the best's common slope, and its number."""
+    left = np.empty(len(places))
+    sharp, wide = np.empty(len(x)), np.empty(len(x))
     best, slope = 0, 0.0
-    for width in (0.5, 1.0):
-        for i in range(len(places)):
-            square, s, _ = _residual(w, y, x, np.tanh((x - places[i]) / width))
-            left[i] = min(left[i], square)
-            if (i == 0 and width == 0.5) or square < left[best] or (i == best and square <= left[best]):
-                best, slope = i, s
+    for i in range(len(places)):
+        for k in range(len(x)):
+            sharp[k] = np.tanh(2.0 * (x[k] - places[i]))
+            wide[k] = np.tanh(x[k] - places[i])
+        left[i], s, _ = _residual(w, y, x, sharp)
+        other, s_wide, _ = _residual(w, y, x, wide)
+        if other < left[i]:
+            left[i], s = other, s_wide
+        if i == 0 or left[i] < left[best]:
+            best, slope = i, s
     return left, slope, best
 
 
@@ -286,10 +332,15 @@ def _alternatives(
         return
     span = x[-1] - x[0]
     margin = max(0.15 * span, min(0.55, 0.3 * span))
-    places = np.linspace(x[0] + margin, x[-1] - margin, 31)
+    places = np.empty(PLACES)
+    for i in range(PLACES):
+        places[i] = x[0] + margin + (span - 2.0 * margin) * i / (PLACES - 1)
     hinge_left, fine, coarse, hinge = _best_hinge(w, x, y, places)
     step_left, slope, step = _best_step(w, x, y, places)
-    parabola = _residual(w, y, x, x * x)[0]
+    square = np.empty(len(x))
+    for k in range(len(x)):
+        square[k] = x[k] * x[k]
+    parabola = _residual(w, y, x, square)[0]
     best = min(hinge_left[hinge], step_left[step], parabola)
     row[20] = np.sqrt(max(residual - best, 0.0) / unit) / threshold
     if np.isnan(bend) and (residual - best <= needed or best > c.ripple_share * residual):
@@ -306,7 +357,7 @@ def _alternatives(
     elif hinge_left[hinge] <= 3.0 * parabola:
         low, high = _limits(hinge_left, places, hinge, freedom)
         row[13] = places[hinge] + c.break_shift
-        row[14], row[15] = low + c.break_shift - 0.5, high + c.break_shift + 0.5
+        row[14], row[15] = low + c.break_shift - 0.7, high + c.break_shift + 0.5
     else:
         row[12] = CURVED
 
@@ -347,7 +398,7 @@ def _judge(
     z = y
     for _ in range(3):
         gap = min(max(-slope, 0.0), 1.0)
-        z = _without_bias(x - detail, y, steps, gap, open_parts, c)
+        z = _without_bias(x, y, steps, detail, gap, open_parts, c)
         slope, mean_x, mean_y, xx = _slope(w, x, z)
     row[0], row[5], row[6] = 1.0 - slope, mean_x, mean_y
     total, residual = 0.0, 0.0
@@ -370,8 +421,7 @@ def _judge(
     row[19] = own
     row[18] = np.sqrt(own * own + c.bend * c.bend * bends + doubt * doubt)
     row[12] = POWER_LAW
-    if own > 0.0:
-        _alternatives(row, w, x, z, residual, xx * own * own, c)
+    _alternatives(row, w, x, z, residual, xx * max(own, 0.01 * gap) ** 2, c)
     if row[0] <= c.smooth_below and row[12] != TWO_REGIME:
         row[12] = SMOOTH
     _interval(row, c)
@@ -411,14 +461,20 @@ def judge_ladders(
     out = np.full((n, len(FIELDS)), np.nan)
     for i in range(n):
         fewest = c.fewest_ring_steps if open_parts[i] == 0.0 else c.fewest_steps
-        kept = np.empty(offsets[i + 1] - offsets[i], np.int64)
+        most = offsets[i + 1] - offsets[i]
+        rx, ry, rsteps, rnoise = np.empty(most), np.empty(most), np.empty(most), np.empty(most)
+        rtallies = np.empty((most, tallies.shape[1]))
         used = 0
         for q in range(offsets[i], offsets[i + 1]):
             if usable[q] and steps[q] >= fewest and np.isfinite(y[q]):
-                kept[used] = q
+                rx[used], ry[used], rsteps[used], rnoise[used] = x[q], y[q], steps[q], noise[q]
+                for b in range(tallies.shape[1]):
+                    rtallies[used, b] = tallies[q, b]
                 used += 1
         out[i, 9], out[i, 12] = used, TOO_FEW
         if used > 0:
-            k = kept[:used]
-            _judge(out[i], x[k], y[k], steps[k], noise[k], tallies[k], detail[i], open_parts[i], c)
+            _judge(
+                out[i], rx[:used], ry[:used], rsteps[:used], rnoise[:used], rtallies[:used], detail[i],
+                open_parts[i], c,
+            )  # fmt: skip
     return out

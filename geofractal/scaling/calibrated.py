@@ -15,6 +15,7 @@ DIVIDER = Constants(
     ramp=1.2,
     fine_bias=0.4,
     coarse_bias=1.2,
+    crowding=0.0,
     own_least=0.52,
     own_low=0.42,
     own_long=0.5,
@@ -27,7 +28,7 @@ DIVIDER = Constants(
     tilt=0.08,
     ripple_share=0.56,
     threshold=1.1,
-    break_shift=0.45,
+    break_shift=0.38,
     smooth_below=1.01,
     fewest_decades=0.5,
 )

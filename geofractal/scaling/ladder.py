@@ -75,8 +75,8 @@ def divider_ladders(
     """
     scales = scales_of(lines) if scales is None else scales
     n = len(lines)
-    lowest = np.full(n, ruler_min_m) if ruler_min_m is not None else finest_rulers(scales)
-    highest = np.full(n, ruler_max_m) if ruler_max_m is not None else LAST_RUNG_EXTENT * scales[:, 1]
+    lowest = np.full(n, float(ruler_min_m)) if ruler_min_m is not None else finest_rulers(scales)
+    highest = np.full(n, float(ruler_max_m)) if ruler_max_m is not None else LAST_RUNG_EXTENT * scales[:, 1]
     highest[np.isnan(scales[:, 0])] = np.nan
     return geometric_ladders(lowest, highest, rungs)
 

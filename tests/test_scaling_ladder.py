@@ -1,0 +1,167 @@
+"""Ladders start above what the mapping resolved, and fits are plain least squares."""
+
+import math
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from geofractal import synthetic
+from geofractal.calibration import lines_of
+from geofractal.kernels import ladder_fit, line_scales
+from geofractal.measure import Lines
+from geofractal.scaling.fit import fit_power_law
+from geofractal.scaling.ladder import FIRST_RUNG_CELLS, Ladders, divider_ladders
+from geofractal.synthetic import Curve
+
+
+def lines(*parts, source=None, closed=False):
+    """One feature made of parts."""
+    xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
+    counts = [len(part) for part in parts]
+    return Lines(
+        rows=np.zeros(1, np.int64),
+        xy=xy,
+        part_offsets=np.concatenate(([0], np.cumsum(counts))),
+        feature_offsets=np.array([0, len(parts)]),
+        closed=np.full(len(parts), closed),
+        source_vertex=np.ones(len(xy), bool) if source is None else np.asarray(source),
+        plane=np.zeros(1, np.uint8),
+        distortion=np.zeros(1),
+        radius=np.full(1, np.inf),
+    )
+
+
+def scales(feature):
+    return line_scales.line_scales(
+        feature.xy, feature.source_vertex, feature.part_offsets, feature.feature_offsets
+    )[0]
+
+
+def turned(xy, angle):
+    c, s = math.cos(angle), math.sin(angle)
+    return xy @ np.array([[c, s], [-s, c]])
+
+
+def straight(count, step=1.0):
+    return np.column_stack([np.arange(count) * step, np.zeros(count)])
+
+
+def test_first_ruler_is_three_median_segments_and_last_a_third_of_the_extent():
+    ladder = divider_ladders(lines(straight(1001, 2.0)))
+    assert ladder.rulers[0] == pytest.approx(3 * 2.0)
+    assert ladder.rulers[-1] == pytest.approx(2000 / 3)
+
+
+def test_rulers_are_geometric_and_at_least_eight_a_decade():
+    ladder = divider_ladders(lines(straight(1001)))
+    ratios = ladder.rulers[1:] / ladder.rulers[:-1]
+    assert ratios == pytest.approx(np.full(len(ratios), ratios[0]))
+    assert ratios[0] <= 10 ** (1 / 8)
+
+
+def test_densified_vertices_do_not_count_as_detail():
+    feature = lines(straight(1001), source=np.arange(1001) % 10 == 0)
+    assert divider_ladders(feature).rulers[0] == pytest.approx(3 * 10)
+
+
+def test_a_line_drawn_half_in_long_segments_starts_above_them():
+    """60 segments of 1 and 10 of 10: half of the length, 160, is reached among the long ones."""
+    x = np.concatenate(([0], np.cumsum([1.0] * 60 + [10.0] * 10)))
+    ladder = divider_ladders(lines(np.column_stack([x, 0 * x])))
+    assert ladder.rulers[0] == pytest.approx(2 * 10)
+
+
+def test_stated_ladder_is_honoured():
+    ladder = divider_ladders(lines(straight(1001)), ruler_min_m=1, ruler_max_m=100, rungs=5)
+    assert ladder.rulers == pytest.approx(10 ** np.array([0, 0.5, 1, 1.5, 2]))
+
+
+@pytest.mark.parametrize("xy", [np.zeros((3, 2)), straight(2), straight(4)])
+def test_features_without_usable_scales_have_no_rulers(xy):
+    ladder = divider_ladders(lines(xy))
+    assert ladder.offsets.tolist() == [0, 0]
+    assert ladder.rulers.size == 0
+
+
+def test_extent_of_a_straight_line_is_its_length_and_of_a_circle_sqrt_12_radii():
+    angle = np.linspace(0, 2 * math.pi, 2001)
+    circle = np.column_stack([np.cos(angle), np.sin(angle)])
+    assert scales(lines(straight(11)))[1] == pytest.approx(10)
+    assert scales(lines(circle))[1] == pytest.approx(math.sqrt(12), rel=1e-5)
+
+
+@settings(max_examples=25, deadline=None)
+@given(st.integers(0, 10**6), st.floats(0, 6.3), st.floats(-1e6, 1e6), st.booleans())
+def test_shift_turn_and_reversal_leave_the_ladder(seed, angle, shift, backwards):
+    xy = np.random.default_rng(seed).normal(size=(300, 2)).cumsum(axis=0)
+    moved = turned(xy, angle)[:: -1 if backwards else 1] + shift
+    one, other = divider_ladders(lines(xy)), divider_ladders(lines(moved))
+    assert other.rulers == pytest.approx(one.rulers, rel=1e-6)
+
+
+@pytest.mark.parametrize("aspect", [1.0, 0.6], ids=["square cells", "flat cells"])
+@pytest.mark.parametrize("diagonal", [True, False], ids=["8 ways", "4 ways"])
+@pytest.mark.parametrize("dimension", [1.05, 1.3, 1.6])
+def test_lines_traced_from_cells_are_found_out_however_they_are_turned(dimension, diagonal, aspect):
+    trail = synthetic.fractional_trail(dimension, vertices=20_000, seed=1)
+    stretched = Curve(trail.xy * [1, 1 / aspect], False, (), "")
+    traced = synthetic.traced(stretched, 4.0, diagonal=diagonal).xy * [1, aspect]
+    for angle in (0.0, 0.3, 1.9):
+        feature = lines(turned(traced, angle))
+        assert scales(feature)[3] == pytest.approx(4.0 * aspect, rel=0.01)
+        assert divider_ladders(feature).rulers[0] >= FIRST_RUNG_CELLS * 4.0 * aspect * 0.99
+
+
+@pytest.mark.parametrize(
+    "curve",
+    [
+        synthetic.line(vertices=500, angle=0.3),
+        synthetic.koch(level=5),
+        synthetic.random_koch(1.4, level=5, seed=1),
+        synthetic.gosper_island(level=5),
+        synthetic.meander(1.0, bends=20),
+        synthetic.fractional_trail(1.3, vertices=2000, seed=1),
+        synthetic.generalised(synthetic.fractional_trail(1.3, vertices=20_000, seed=1), 5.0),
+    ],
+    ids=lambda curve: curve.source[:20],
+)
+def test_other_lines_are_no_staircases(curve):
+    assert scales(lines(curve.xy))[3] == 0
+
+
+def test_an_outline_along_cell_edges_without_its_collinear_vertices_is_a_staircase():
+    ring = synthetic.polygonised(synthetic.circle(vertices=400).scaled(100), 1.0).xy
+    assert scales(lines(ring, closed=True))[3] == pytest.approx(1)
+
+
+def test_fit_is_least_squares_with_gaps_left_out():
+    """Against numpy.polyfit."""
+    rng = np.random.default_rng(0)
+    rulers = np.geomspace(1, 50, 12)
+    values = 9 * rulers**-0.3 * rng.lognormal(0, 0.1, 12)
+    values[[2, 7]] = np.nan
+    fit = fit_power_law(Ladders(np.array([0, 12, 13, 13]), np.append(rulers, 1.0)), np.append(values, 5.0))
+    good = np.isfinite(values)
+    slope, intercept = np.polyfit(np.log(rulers[good]), np.log(values[good]), 1)
+    r2 = np.corrcoef(np.log(rulers[good]), np.log(values[good]))[0, 1] ** 2
+    assert [fit.slope[0], fit.intercept[0], fit.r2[0]] == pytest.approx([slope, intercept, r2])
+    assert fit.rungs.tolist() == [10, 1, 0]
+    assert np.isnan(fit.slope[1:]).all()
+
+
+def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
+    rng = np.random.default_rng(3)
+    features = [lines_of([synthetic.traced(synthetic.fractional_trail(1.3, vertices=400, seed=1), 2.0)])]
+    features += [lines(rng.normal(size=(n, 2)).cumsum(axis=0)) for n in (2, 40, 400)]
+    features += [lines(rng.normal(size=(50, 3)), rng.normal(size=(9, 3)))]
+    compiled = [scales(feature) for feature in features]
+    offsets, x, y = np.array([0, 5, 5, 9]), rng.normal(size=9), rng.normal(size=9)
+    fitted = ladder_fit.fit_lines(offsets, x, y)
+    assert ladder_fit.fit_lines.py_func(offsets, x, y) == pytest.approx(fitted, nan_ok=True)
+    for name, function in list(vars(line_scales).items()):
+        if hasattr(function, "py_func"):
+            monkeypatch.setattr(line_scales, name, function.py_func)
+    for feature, expected in zip(features, compiled, strict=True):
+        assert scales(feature) == pytest.approx(expected, nan_ok=True)
