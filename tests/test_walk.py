@@ -173,18 +173,34 @@ def noisy_ring(seed, count=200):
     return np.vstack([ring, ring[:1]])
 
 
-@pytest.mark.parametrize("ruler", [0.3, 1.0, 4.0, 9.0])
-def test_a_ring_is_walked_both_ways_from_evenly_spaced_starts_that_begin_at_its_outermost_vertex(ruler):
-    ring = noisy_ring(1)
+def from_outermost(ring):
+    """Return the ring from its vertex farthest from the centre of its outline."""
     steps = np.linalg.norm(np.diff(ring, axis=0), axis=1)
     middle = (steps[:, None] * (ring[1:] + ring[:-1]) / 2).sum(axis=0) / steps.sum()
     outermost = np.argmax(np.linalg.norm(ring[:-1] - middle, axis=1))
-    turned = np.vstack([ring[outermost:-1], ring[: outermost + 1]])
-    paths = [ring_from(turned, k / 16) for k in range(16)]
-    expected = [plain_length(path, ruler) for way in (1, -1) for path in (p[::way] for p in paths)]
-    found = walk([ring], ruler, starts=16, closed=True)
-    assert found.length[0] == pytest.approx(np.mean(expected), rel=1e-9)
-    assert found.spread[0] == pytest.approx(np.std(expected, ddof=1), abs=1e-8)
+    return np.vstack([ring[outermost:-1], ring[: outermost + 1]])
+
+
+@given(
+    seed=st.integers(0, 10**6),
+    count=st.integers(3, 300),
+    size=st.sampled_from([2, 3]),
+    ruler=st.floats(0.05, 20),
+    starts=st.sampled_from([1, 4, 16]),
+)
+@settings(deadline=None, max_examples=100)
+def test_a_ring_is_walked_both_ways_from_evenly_spaced_starts(seed, count, size, ruler, starts):
+    line = random_line(seed, count, size)
+    ring = from_outermost(np.vstack([line, line[:1]]))
+    paths = [ring_from(ring, k / starts) for k in range(starts)]
+    walks = [plain_walk(path, ruler) for way in (1, -1) for path in (p[::way] for p in paths)]
+    found = walk([np.vstack([line, line[:1]])], ruler, starts=starts, closed=True)
+    if min(steps for steps, _ in walks) == 0:
+        assert math.isnan(found.length[0])
+    else:
+        lengths = [steps * ruler + rest for steps, rest in walks]
+        assert found.length[0] == pytest.approx(np.mean(lengths), rel=1e-9)
+        assert found.spread[0] == pytest.approx(np.std(lengths, ddof=1), abs=1e-7)
 
 
 @pytest.mark.parametrize("shift", [1, 50, 123])
