@@ -207,7 +207,8 @@ def _summary(record: dict[str, Any]) -> Iterator[str]:
             reasons = [f"{reason} ({count:,})" for reason, count in tally["refused_by_reason"].items()]
             refused = f"; without figure: {'; '.join(reasons[:3])}" if reasons else ""
             more = f"; and {len(reasons) - 3} other reasons" if len(reasons) > 3 else ""
-            answered = f"{tally['answered']:,} of {tally['rows']:,} rows have figures"
+            asked = tally["rows"] - tally["left_out_by_where"]
+            answered = f"{tally['answered']:,} of {asked:,} rows have figures"
             yield f"{name}: {tally['measure']}: {answered}{refused}{more}"
     for name, reason in record["failed_layers"].items():
         yield f"{name}: not measured: {reason}"

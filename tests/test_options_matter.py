@@ -150,6 +150,16 @@ def test_a_stated_crs_is_taken_and_one_that_contradicts_is_refused(tmp_path):
     assert run(tmp_path, contradicted, asked)["failed_layers"] == {}
 
 
+def test_refused_rows_are_listed_by_their_id(tmp_path):
+    write_gpkg(tmp_path / "in.gpkg", [wiggle(), None, wiggle(2)], code=["a", "b", "c"])
+    layer = {"source": "in.gpkg", "id": "code", "where": "code <> 'c'"}
+    record = run(tmp_path, {"lines": layer}, [{"measure": "divider-dimension", "of": "lines"}])
+    listed = (tmp_path / "out" / "refused_rows.csv").read_text("utf-8-sig").splitlines()
+    assert listed == ["layer,row,id,measure,reason", "lines,2,b,divider-dimension,missing geometry"]
+    tally = record["layers"]["lines"]["measures"][0]
+    assert (tally["rows"], tally["left_out_by_where"], tally["answered"], tally["refused"]) == (3, 1, 1, 1)
+
+
 def test_a_stated_encoding_reads_the_text_right(tmp_path):
     gpd.GeoDataFrame({"name": ["Größe"]}, geometry=[wiggle()], crs=UTM).to_file(
         tmp_path / "in.shp", encoding="ISO-8859-1"

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any, Self
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from geofractal.batch.parts import note_name
+from geofractal.batch.parts import NOT_WANTED, note_name
 from geofractal.config.models import Batch, MeasureRequest
 from geofractal.errors import GeofractalError
 from geofractal.measure import Column
@@ -46,14 +46,15 @@ def peak_memory_mb() -> float | None:
 class MeasureTally:
     """Counts of one measure on one layer, from its columns alone.
 
-    A row counts as refused where the measure's first column is null; the reason is the first thing that
-    its note says.
+    A row counts as refused where it was to be measured and the measure's first column is null; the
+    reason is the first thing that its note says.
     """
 
     request: MeasureRequest
     columns: Sequence[Column]
     note: str
     rows: int = 0
+    left_out: int = 0
     refused: int = 0
     reasons: Counter[str] = field(default_factory=Counter)
     ranges: dict[str, tuple[float, float]] = field(default_factory=dict)
@@ -64,11 +65,17 @@ class MeasureTally:
         """Return an empty tally of one measure asked of one layer."""
         return cls(request, request.columns(), note_name(request))
 
+    def refusals(self, batch: pa.RecordBatch) -> pa.Array:
+        """Return which rows were to be measured and have no figure."""
+        unwanted = pc.equal(batch.column(self.note), NOT_WANTED).fill_null(False)
+        return pc.and_not(pc.is_null(batch.column(self.columns[0].name)), unwanted)
+
     def add(self, batch: pa.RecordBatch) -> None:
         """Add the rows of one part."""
-        missing = pc.is_null(batch.column(self.columns[0].name))
+        missing = self.refusals(batch)
         self.rows += batch.num_rows
         self.refused += int(pc.sum(missing).as_py() or 0)
+        self.left_out += int(pc.sum(pc.equal(batch.column(self.note), NOT_WANTED)).as_py() or 0)
         notes = batch.column(self.note).filter(missing).fill_null("no reason given")
         self.reasons.update(_counted(pc.list_element(pc.split_pattern(notes, "; ", max_splits=1), 0)))
         for column in self.columns:
@@ -91,7 +98,8 @@ class MeasureTally:
             "version": load_measure(self.request.measure).version,
             "options": self.request.options.model_dump(mode="json", by_alias=True),
             "rows": self.rows,
-            "answered": self.rows - self.refused,
+            "left_out_by_where": self.left_out,
+            "answered": self.rows - self.left_out - self.refused,
             "refused": self.refused,
             "refused_by_reason": reasons,
             "ranges": {name: {"min": low, "max": high} for name, (low, high) in self.ranges.items()},

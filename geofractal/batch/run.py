@@ -18,6 +18,7 @@ from geofractal.batch.executor import available_workers, in_order, make_executor
 from geofractal.batch.parts import measured_part
 from geofractal.batch.plan import LayerPlan, Plan, parts_of, plan_batch
 from geofractal.batch.record import MeasureTally, run_record
+from geofractal.batch.refused import write_refused_rows
 from geofractal.batch.spool import RowSpool
 from geofractal.config.models import Batch
 from geofractal.errors import GeofractalError, SourceError
@@ -90,9 +91,10 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
                 _write_copy(target, word, layers, progress)
             except SourceError as error:
                 failed |= dict.fromkeys((found.plan.name for found in layers), error)
-        columns = {found.plan.name: found.plan.columns for found in measured}
-        write_data_dictionary(batch.outputs.folder, columns)
-        record = run_record(batch, measured, failed, started)
+        whole = [found for found in measured if found.plan.name not in failed]
+        write_data_dictionary(batch.outputs.folder, {found.plan.name: found.plan.columns for found in whole})
+        write_refused_rows(batch.outputs.folder, whole)
+        record = run_record(batch, whole, failed, started)
         with publish(batch.outputs.folder / RECORD) as part:
             part.write_text(json.dumps(record, indent=1, ensure_ascii=False), encoding="utf-8")
     shutil.rmtree(folder, ignore_errors=True)
