@@ -86,8 +86,8 @@ def walk_rulers(lines: Lines, rulers_m: Floats) -> Floats:
     (n, k) metres; NaN where no part of the feature is long enough for the ruler
     """
     n, count = len(lines), rulers_m.shape[-1]
-    rulers = np.broadcast_to(rulers_m, (n, count)).ravel()
-    ladders = Ladders(np.arange(n + 1) * count, rulers)
+    rulers = np.array(np.broadcast_to(rulers_m, (n, count)))
+    ladders = Ladders(np.arange(n + 1) * count, rulers.ravel())
     return _walk(lines, ladders, RING_STARTS, _NO_LIMIT, inner_starts=False).length.reshape(n, count)
 
 
@@ -108,7 +108,7 @@ def _walk(
         stretches,
     )
     length, spread, steps, left_out = np.ascontiguousarray(table[:, :4].T)
-    return Walks(length, spread, steps, left_out, table[:, 4:])
+    return Walks(length, spread, steps, left_out, np.ascontiguousarray(table[:, 4:]))
 
 
 def finest_rulers(lines: Lines) -> Floats:
