@@ -62,7 +62,8 @@ def stand_in(monkeypatch, name, **functions):
 def record(exit_code=0, refused=None, failed=None):
     reasons = refused or {}
     answered = 10 - sum(reasons.values())
-    tally = {"measure": "vertex-spacing", "rows": 10, "left_out_by_where": 0, "answered": answered, "refused_by_reason": reasons}
+    counts = {"rows": 10, "left_out_by_where": 0, "answered": answered}
+    tally = {"measure": "vertex-spacing", **counts, "refused_by_reason": reasons}
     return {
         "exit_code": exit_code,
         "layers": {"shore": {"measures": [tally]}},
