@@ -23,8 +23,8 @@ Floats = NDArray[np.float64]
 
 SMALLEST_CELLS = 100
 """Patches below this many cells are left out: on a grid the perimeter of a small patch is bound to its
-cells. From this size on the dimension is off by at most 0.02 on discs, Koch islands and percolation
-clusters; at 10 cells by up to 0.13. See ``tests/benchmarks/area_perimeter.py``."""
+cells. From this size on the dimension is off by at most 0.025 on discs, Koch islands and percolation
+clusters; at 10 cells by up to 0.14. See ``tests/benchmarks/area_perimeter.py``."""
 
 CELL_BIAS = 0.8
 """The interval is widened by this over (cells of the smallest patch)^(3/4): what the grid still does to the
@@ -38,6 +38,7 @@ SIDE = 30  # patches on either side of a break, at least
 SIDE_DECADES = 0.5  # and decades of area
 BREAKS = 200  # places tried for a break
 SMOOTH = 1.02
+COLLAPSED = 0.95  # on one side of a break
 
 
 @dataclass(frozen=True, slots=True)
@@ -189,9 +190,13 @@ def fit_patches(area: Floats, perimeter: Floats, smallest_cells: int | None) -> 
             "area_perimeter_break_m2": float(np.exp(bend.at)),
             "area_perimeter_break_low_m2": float(np.exp(bend.low)),
             "area_perimeter_break_high_m2": float(np.exp(bend.high)),
-            "area_perimeter_dim_below": _held(2 * bend.below),
-            "area_perimeter_dim_above": _held(2 * bend.above),
+            "area_perimeter_dim_below": _side(2 * bend.below),
+            "area_perimeter_dim_above": _side(2 * bend.above),
         }
+        if 2 * min(bend.below, bend.above) < COLLAPSED:
+            figures["area_perimeter_note"] = (
+                "on one side of the break outlines have collapsed: no dimension there"
+            )
     return figures
 
 
@@ -209,6 +214,11 @@ _NUMBERS = (
     "area_min_m2",
     "area_max_m2",
 )
+
+
+def _side(dimension: float) -> float:
+    """Return the dimension on one side of a break; NaN where its patches have collapsed."""
+    return np.nan if dimension < COLLAPSED else _held(dimension)
 
 
 def _held(dimension: float) -> float:

@@ -98,7 +98,7 @@ def family(name: str, size: int, seed: int) -> tuple[pd.DataFrame, float]:
 
 
 CLUSTERS = ("clusters, all edges", "clusters, outer edges", "clusters, outer on filled")
-SHAPES = ("discs", "islands 1.1", "islands 1.2", "islands 1.3", "islands 1.4")
+SHAPES = ("discs", "islands 1.1", "islands 1.2")  # rougher random islands cross themselves
 
 
 def bias_table() -> None:
