@@ -187,6 +187,13 @@ def test_a_line_traced_from_raster_cells_says_so_and_its_ladder_keeps_clear_of_t
     )
 
 
+def test_a_stated_ladder_below_the_detail_is_told():
+    regular = np.column_stack([np.arange(500.0) * 10, np.zeros(500)])
+    assert measured(lines_of(regular), ruler_min_m=30.0)["divider_note"][0] is None
+    told = measured(lines_of(regular), ruler_min_m=20.0)["divider_note"][0]
+    assert told == "its ladder starts below the source's detail"
+
+
 def test_vertices_added_by_the_reader_make_no_detail():
     regular = np.column_stack([np.arange(500.0) * 10, np.zeros(500)])
     source = np.arange(500) % 10 == 0

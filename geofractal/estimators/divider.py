@@ -193,7 +193,6 @@ class DividerDimension(Measure[DividerOptions]):
     formula: ClassVar[str] = "L(r) = r n + d; D = 1 - slope of ln L on ln r"
     sources: ClassVar[tuple[str, ...]] = (MANDELBROT,)
     stem: ClassVar[str] = "divider"
-    version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = DividerOptions
 
@@ -211,7 +210,10 @@ class DividerDimension(Measure[DividerOptions]):
         scales = scales_of(lines)
         finest = ladder.finest_rulers(scales)
         notes = Notes(finest)
-        notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
+        if options.ruler_min_m is None:
+            notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
+        else:
+            notes.add(too_coarse(options.ruler_min_m, finest), "its ladder starts below the source's detail")
         ladders = divider_ladders(
             lines,
             ruler_min_m=options.ruler_min_m,
