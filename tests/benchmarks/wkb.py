@@ -1,4 +1,4 @@
-"""WKB to ragged coordinates: our kernel against shapely's objects, in milliseconds of processor (least of five).
+"""WKB to ragged coordinates: our kernel against shapely, in milliseconds of processor (least of five).
 
 ``python tests/benchmarks/wkb.py``
 """
