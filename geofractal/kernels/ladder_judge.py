@@ -115,9 +115,10 @@ def _without_bias(
     """Return y without what the ends of the ladder add, for a line whose dimension is 1 + `gap`."""
     fine = c.fine_bias * gap**1.5
     coarse = c.coarse_bias * gap / (1.0 + gap) * open_parts
+    crowding = c.crowding * gap**1.5 / (x[-1] - x[0]) ** 0.8
     z = np.empty(len(y))
     for k in range(len(y)):
-        z[k] = y[k] + fine * np.exp(detail - x[k]) - coarse / steps[k]
+        z[k] = y[k] + fine * np.exp(detail - x[k]) - coarse / steps[k] - crowding * (x[k] - x[0])
     return z
 
 
@@ -373,7 +374,7 @@ def _interval(row: Floats, c: Constants) -> None:
     half = c.quantile * row[18]
     reach = min(half / max(gap, 0.002), c.skew * (0.05 / max(gap, 0.007)) ** 0.37)
     tilt = min(max((gap - 0.35) / 0.3, 0.0), 1.0)
-    short = min(3.0 / (row[11] - row[10]), 1.0) ** 2
+    short = min(3.0 / (row[11] - row[10]), 1.0) ** 3
     row[1] = max(row[0] - half * (1.0 - 0.1 * tilt), 1.0)
     row[2] = max(row[0] + half + c.tilt * tilt * short, 1.0 + gap * np.exp(reach))
     if row[12] == TWO_REGIME or row[12] == CURVED:

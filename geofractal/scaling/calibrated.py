@@ -23,9 +23,9 @@ DIVIDER = Constants(
     ring=1.5,
     bend=0.6,
     bias_doubt=1.0,
-    quantile=2.35,
+    quantile=2.3,
     skew=1.0,
-    tilt=0.08,
+    tilt=0.1,
     ripple_share=0.56,
     threshold=1.1,
     break_shift=0.38,
@@ -33,4 +33,15 @@ DIVIDER = Constants(
     fewest_decades=0.5,
 )
 
-BOX = DIVIDER._replace(own_without=0.6)
+BOX = DIVIDER._replace(
+    coarse_bias=0.0,
+    crowding=0.25,
+    own_least=0.6,
+    own_low=0.6,
+    bias_doubt=1.3,
+    quantile=2.6,
+    tilt=0.12,
+)
+"""`crowding`: strands that lie close share boxes, so that counts are the more too low the higher the
+dimension and the shorter the ladder. 0.4 would set trails right that cross themselves, 0 curves drawn by a
+rule: 0.25 lies between, and the doubt about it widens the interval."""

@@ -200,7 +200,7 @@ def deterministic() -> None:
         truth = curve.dimension or np.nan
         error, held = found.dimension[i] - truth, found.low[i] <= truth <= found.high[i]
         print(
-            f"{curve.source.split(';')[0][:44]:46}{len(curve):8d}  D {truth:.4f}  found {found.dimension[i]:.4f}"
+            f"{curve.source[:40]:42}{len(curve):8d}  D {truth:.4f}  found {found.dimension[i]:.4f}"
             f" [{found.low[i]:.3f}, {found.high[i]:.3f}]  error {error:+.4f}  {found.verdict_words()[i]}"
             f"{'' if held else ' OUTSIDE'}{' ERROR' if abs(error) > 0.02 and truth <= 1.4 else ''}"
         )
@@ -268,7 +268,7 @@ def smooth_below(dimension: float, seed: int) -> Curve:
 
 def verdicts(curves: int) -> None:
     print(
-        "\nVerdicts: share of each, median D, break over the true one, share within the factor and the interval"
+        "\nVerdicts: share of each, median D, break over the true one, share within factor and interval"
     )
     for case in verdict_cases(curves):
         found = judge_lines(lines_of(case.draws))[2]
