@@ -30,6 +30,7 @@ def raster_patches(
     perimeter: Outline = "cell-edges",
     map_edge: bool = True,
     zones: NDArray[Any] | None = None,
+    geometry: bool = False,
     options: RasterOptions | None = None,
     **reading: Any,
 ) -> pd.DataFrame:
@@ -43,6 +44,8 @@ def raster_patches(
         `geofractal.landcover.perimeter.Perimeter`
     map_edge : whether the map's edge and that of cells not covered count in the perimeter
     zones : (rows, columns) zone numbers on the grid measured on, -1 in none; patches go across zones
+    geometry : whether to give a GeoDataFrame with the polygons of the patches, along cell edges, in the CRS
+        of the grid measured on; not together with zones
     options, **reading : how to read it; the names are those of `geofractal.reader.raster.RasterOptions`
 
     Returns
@@ -71,12 +74,31 @@ def raster_patches(
     """
     convention = Perimeter(perimeter, map_edge)
     opened = open_class_map(raster, options, reading)
+    if zones is not None and geometry:
+        raise ConfigError("geometry and zones exclude each other: patches go across zones.")
     strips = opened.strips() if zones is None else with_zones(opened, zones)
-    frames = [
-        patch_frame(found.patches, opened, convention, zoned=zones is not None)
-        for found in label_patches(strips, neighbours=neighbours, outlines=convention.follows_outlines)
-    ]
-    return _joined(frames, opened)
+    frames = patch_frames(opened, strips, convention, neighbours, zoned=zones is not None, geometry=geometry)
+    return _joined(list(frames), opened)
+
+
+def patch_frames(
+    raster: Raster,
+    strips: Iterable[Strip],
+    convention: Perimeter,
+    neighbours: int = 8,
+    *,
+    zoned: bool = False,
+    geometry: bool = False,
+) -> Iterator[pd.DataFrame]:
+    """Yield patches as tables while the map is read, by last row, then by first cell."""
+    from geofractal.landcover.outlines import patch_polygons
+
+    outlines = convention.follows_outlines
+    for found in label_patches(strips, neighbours=neighbours, outlines=outlines, runs=geometry):
+        frame = patch_frame(found.patches, raster, convention, zoned=zoned)
+        if found.runs is not None:
+            frame["geometry"] = patch_polygons(found.runs, len(frame), raster.grid.transform)
+        yield frame
 
 
 def open_class_map(raster: RasterLike, options: RasterOptions | None, reading: Mapping[str, Any]) -> Raster:
@@ -141,6 +163,10 @@ def _joined(frames: list[pd.DataFrame], raster: Raster) -> pd.DataFrame:
         frame["cover"] = frame["cover"].cat.set_categories(names)
     table = pd.concat(frames, ignore_index=True).sort_values(["first_row", "first_column"], ignore_index=True)
     width, height = raster.grid.typical_cell
+    if "geometry" in table:
+        import geopandas as gpd
+
+        table = gpd.GeoDataFrame(table, geometry="geometry", crs=raster.grid.crs)
     table.attrs |= {
         "grid": raster.grid.plane,
         "distortion": raster.grid.distortion,

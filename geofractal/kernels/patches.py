@@ -43,8 +43,8 @@ RUN = 9
 """Columns of a run: first cell, cell after the last, class, zone, label, rings of its two ends, pairs with
 runs below that are still to come, and the last run below it so far."""
 
-N_LABELS, N_RUNS, N_LINKS, N_RINGS = range(4)
-"""Places of the state: labels and rings in use, runs of the last row, links between zones."""
+N_LABELS, N_RUNS, N_LINKS, N_RINGS, N_KEPT = range(5)
+"""Places of the state: labels and rings in use, runs of the last row, links between zones, runs kept."""
 
 RING_LENGTH, RING_AREA, RING_LABEL = range(3)
 
@@ -221,6 +221,14 @@ def new_ring(rings: Ints, ring_parent: Ints, state: Ints, label: int) -> int:
 
 
 @kernel
+def keep_run(kept: NDArray[np.int32], state: Ints, row: int, start: int, stop: int, label: int) -> None:
+    """Write a run down for the polygon of its patch."""
+    n = state[N_KEPT]
+    kept[n, 0], kept[n, 1], kept[n, 2], kept[n, 3] = row, start, stop, label
+    state[N_KEPT] = n + 1
+
+
+@kernel
 def label_rows(
     codes: NDArray[np.int16],
     zones: NDArray[np.int32],
@@ -243,6 +251,7 @@ def label_rows(
     upper: Ints,
     lower: Ints,
     pairs: Ints,
+    kept: NDArray[np.int32],
     state: Ints,
 ) -> int:
     """Label rows `row` and following of a strip; return the row at which a table is full, or their number.
@@ -254,17 +263,19 @@ def label_rows(
     corner : by line of edges, what one corner shortens a smoothed outline
     reach : 1 where cells that meet at a corner are neighbours, else 0
     rings, ring_parent : empty where outlines are not followed
+    kept : (n, 4) row, start, stop and label of every covered run; empty where they are not wanted
     upper, lower : runs of the last row, and room for the next; exchanged row by row, the last one in `upper`
     """
     zoned, barred, with_rings, columns = zones.size > 0, cuts.size > 0, len(rings) > 0, codes.shape[1]
     n_upper, n_labels, n_links = state[N_RUNS], state[N_LABELS], state[N_LINKS]
-    begin = row
+    begin, with_runs = row, len(kept) > 0
     while row < codes.shape[0]:
         n_lower = find_runs(codes, zones, cuts, row, lower)
         if (
             n_labels + n_lower > labels.shape[0]
             or n_links + n_upper + 2 * n_lower > links.shape[0]
             or (with_rings and state[N_RINGS] + 2 * n_lower > rings.shape[0])
+            or (with_runs and state[N_KEPT] + n_lower > len(kept))
         ):
             break
         line, above, below = area_line[row], edge_line[row], edge_line[row + 1]
@@ -356,6 +367,8 @@ def label_rows(
                 labels[label, EDGE] += edge
                 labels[label, BORDER] += border
                 labels[label, CORNERS] += 2 * (corner[above] + corner[below] - equal * corner[above])
+                if with_runs:
+                    keep_run(kept, state, first_row + row, start, stop, label)
                 if zoned:
                     labels[label, ZONE_EDGE] += zone_edge
                 if barred:

@@ -72,16 +72,19 @@ class Finished:
     pieces : patches cut at zone borders; not all of the pieces of `patches`, some came before
     parts : what of `patches` lies in each zone, one line a patch and zone
     part_of : (len(parts),) line of the patch in `patches`
+    runs : (m, 4) line of the patch in `patches`, row, first column and the column after the last of every
+        run of its cells, by patch, then in scan order; None unless asked for
     """
 
     patches: PatchTable
     pieces: PatchTable
     parts: PatchTable
     part_of: Ints
+    runs: Ints | None = None
 
 
 def label_patches(
-    strips: Iterable[Strip], *, neighbours: int = 8, outlines: bool = False
+    strips: Iterable[Strip], *, neighbours: int = 8, outlines: bool = False, runs: bool = False
 ) -> Iterator[Finished]:
     """Yield the patches of a class map, exactly as labelling the whole map would find them.
 
@@ -90,13 +93,15 @@ def label_patches(
     strips : all strips of a map, in order; with zones or barriers in all of them or in none
     neighbours : 4 (cells that share an edge are one patch) or 8 (or a corner)
     outlines : whether to follow outlines, for holes and filled areas; costs about a third more time
+    runs : whether to hand out the cells of patches as runs, for polygons; memory then holds those of all
+        unfinished patches, 16 bytes a run. Not with zones.
     """
     if neighbours not in {4, 8}:
         raise ConfigError(f"neighbours is {neighbours}; allowed are 4 and 8.")
     labeller: _Labeller | None = None
     for strip in strips:
         if labeller is None:
-            labeller = _Labeller(strip, eight=neighbours == 8, outlines=outlines)
+            labeller = _Labeller(strip, eight=neighbours == 8, outlines=outlines, runs=runs)
         yield from labeller.push(strip)
     if labeller is not None:
         yield from labeller.finish()
@@ -105,13 +110,15 @@ def label_patches(
 class _Labeller:
     """Tables of one run of the kernels, and what is between two strips."""
 
-    def __init__(self, strip: Strip, *, eight: bool, outlines: bool) -> None:
+    def __init__(self, strip: Strip, *, eight: bool, outlines: bool, runs: bool) -> None:
         columns = strip.codes.shape[1]
         self.reach, self.outlines, self.zoned = int(eight), outlines, strip.zones is not None
         self.upper = np.zeros((kernels.RUN, columns + 1), np.int64)
         self.lower, self.pairs = self.upper.copy(), np.zeros((2 * columns + 2, 2), np.int64)
         self.upper[:5, 0] = (0, columns, NOT_COVERED, 0, -1)  # above the map nothing is covered
-        self.state = np.array([0, 1, 0, 0], np.int64)
+        self.state = np.array([0, 1, 0, 0, 0], np.int64)
+        if runs and self.zoned:
+            raise ValueError("Runs are handed out for patches that no zone border cuts; leave zones out.")
         self.capacity = max(LABELS, columns)
         self.labels, self.parent = np.empty((self.capacity, len(LINES)), np.int64), self._room()
         rings = self.capacity if outlines else 0
@@ -122,6 +129,7 @@ class _Labeller:
             np.empty((0, len(LINES)), np.int64),
             self._room(0),
         )
+        self.kept = np.empty((4 * self.capacity if runs else 0, 4), np.int32)
         self.cuts_before = np.zeros(columns if strip.cuts is not None else 0, np.uint8)
         self.end: tuple[int, CellSizes] = (0, strip.sizes)
 
@@ -166,7 +174,8 @@ class _Labeller:
             row = kernels.label_rows(
                 codes, zones, cuts, self.cuts_before, row, first_row, sizes.area, sizes.height, sizes.width,
                 corner, sizes.area_line, sizes.edge_line, self.reach, self.labels, self.parent,
-                self.links, self.rings, self.ring_parent, self.upper, self.lower, self.pairs, self.state,
+                self.links, self.rings, self.ring_parent, self.upper, self.lower, self.pairs, self.kept,
+                self.state,
             )  # fmt: skip
             if row == stuck:
                 self._grow()
@@ -181,6 +190,7 @@ class _Labeller:
         self.links = np.concatenate([self.links, np.empty_like(self.links)])
         self.rings = np.concatenate([self.rings, np.empty_like(self.rings)])
         self.ring_parent = np.concatenate([self.ring_parent, np.empty_like(self.ring_parent)])
+        self.kept = np.concatenate([self.kept, np.empty_like(self.kept)])
 
     def _retire(self) -> Finished:
         n, n_links = int(self.state[kernels.N_LABELS]), int(self.state[kernels.N_LINKS])
@@ -193,11 +203,28 @@ class _Labeller:
         if self.zoned:
             group[: len(self.group)] = self.group
             kernels.group_pieces(self.parent, n, group, len(self.group), self.links, n_links)
+        roots = self.parent[:n].copy() if len(self.kept) else self.parent
         done, done_labels, kept = kernels.retire(self.labels, self.parent, self.upper, self.rings, self.state)
         if not self.zoned:
-            table = PatchTable(_in_order(done))
-            return Finished(table, table, table, np.arange(len(table)))
+            order = _order(done)
+            table, lines = PatchTable(done[order]), np.arange(len(done))
+            runs = self._finished_runs(roots, done_labels[order], kept) if len(self.kept) else None
+            return Finished(table, table, table, lines, runs)
         return self._join_pieces(done, group[done_labels], group[kept], group)
+
+    def _finished_runs(self, roots: Ints, done_labels: Ints, kept: Ints) -> Ints:
+        """Return the runs of finished patches, by line of the patch; hold back the others."""
+        runs = self.kept[: self.state[kernels.N_KEPT]]
+        line = np.empty(len(roots), np.int64)
+        line[done_labels], line[kept] = np.arange(len(done_labels)), -1 - np.arange(len(kept))
+        of = line[roots[runs[:, 3]]]
+        goes = np.flatnonzero(of >= 0)
+        order = goes[np.argsort(of[goes], kind="stable")]
+        finished = np.column_stack([of[order], runs[order, :3]])
+        stays = np.flatnonzero(of < 0)
+        self.state[kernels.N_KEPT] = len(stays)
+        self.kept[: len(stays)] = np.column_stack([runs[stays, :3], -1 - of[stays]])
+        return finished
 
     def _join_pieces(self, done: Ints, done_of: Ints, kept_of: Ints, group: Ints) -> Finished:
         """Put pieces together to patches; hold back those of patches that go on."""

@@ -31,7 +31,8 @@ from geofractal.reader.raster_source import (
     sound,
 )
 
-STRIP_CELLS = 4_000_000
+STRIP_CELLS = 8_000_000
+WARPED_BLOCK = 128  # rows of a block of GDAL's warped rasters; other strips would warp some blocks twice
 AHEAD = 2  # strips that wait for the caller
 
 
@@ -131,7 +132,7 @@ def open_raster(source: Path | ClassMap, options: RasterOptions | None = None) -
         codes = () if nodata is None or not math.isfinite(nodata) else (int(nodata),)
         legend = make_legend(options.classes, options.rest, (*codes, *options.nodata), named)
         chosen = choose_grid(grid, options.grid, options.distortion_budget, options.cell_size_m)
-        block_rows = dataset.block_shapes[options.band - 1][0] if chosen is grid else 1
+        block_rows = dataset.block_shapes[options.band - 1][0] if chosen is grid else WARPED_BLOCK
     rows = options.strip_rows or strip_rows(chosen.columns, block_rows)
     return Raster(source, options, chosen, grid, legend, max(1, min(rows, chosen.rows)))
 
@@ -139,7 +140,7 @@ def open_raster(source: Path | ClassMap, options: RasterOptions | None = None) -
 def strip_rows(columns: int, block_rows: int) -> int:
     """Return rows for one strip: whole blocks of the file where they are low enough."""
     rows = max(1, STRIP_CELLS // columns)
-    return rows if block_rows > 4 * rows else max(1, rows // block_rows) * block_rows
+    return rows if block_rows > 4 * rows else max(1, round(rows / block_rows)) * block_rows
 
 
 def _read_ahead(read: Callable[[], Iterator[Strip]]) -> Iterator[Strip]:
