@@ -11,7 +11,7 @@ from geofractal import synthetic
 from geofractal.calibration import lines_of
 from geofractal.kernels import ladder_fit, line_scales
 from geofractal.measure import Lines
-from geofractal.scaling.fit import fit_power_law
+from geofractal.scaling.fit import fit_power_law, local_dimensions
 from geofractal.scaling.ladder import FIRST_RUNG_CELLS, Ladders, divider_ladders
 from geofractal.synthetic import Curve
 
@@ -151,6 +151,18 @@ def test_fit_is_least_squares_with_gaps_left_out():
     assert np.isnan(fit.slope[1:]).all()
 
 
+def test_local_dimension_tells_where_a_hinge_is():
+    """L = r^-0.1 up to 10 and steeper by r^-0.3 above: 1.1 and 1.4 away from the hinge."""
+    rulers = np.geomspace(1, 100, 25)
+    lengths = rulers**-0.1 * np.maximum(rulers / 10, 1) ** -0.3
+    lengths[5] = np.nan
+    found = local_dimensions(Ladders(np.array([0, 25]), rulers), lengths)
+    assert found[:5] == pytest.approx(np.full(5, 1.1))
+    assert np.isnan(found[5])
+    assert found[15:] == pytest.approx(np.full(10, 1.4))
+    assert np.isnan(local_dimensions(Ladders(np.array([0, 2]), rulers[:2]), lengths[:2])).all()
+
+
 def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
     rng = np.random.default_rng(3)
     features = [lines_of([synthetic.traced(synthetic.fractional_trail(1.3, vertices=400, seed=1), 2.0)])]
@@ -160,6 +172,8 @@ def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
     offsets, x, y = np.array([0, 5, 5, 9]), rng.normal(size=9), rng.normal(size=9)
     fitted = ladder_fit.fit_lines(offsets, x, y)
     assert ladder_fit.fit_lines.py_func(offsets, x, y) == pytest.approx(fitted, nan_ok=True)
+    slopes = ladder_fit.local_slopes(offsets, x, y, 1)
+    assert ladder_fit.local_slopes.py_func(offsets, x, y, 1) == pytest.approx(slopes, nan_ok=True)
     for name, function in list(vars(line_scales).items()):
         if hasattr(function, "py_func"):
             monkeypatch.setattr(line_scales, name, function.py_func)

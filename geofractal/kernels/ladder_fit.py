@@ -46,3 +46,21 @@ def fit_lines(
             out[i, 1] = mean_y - slope * mean_x
             out[i, 2] = min(slope * xy / yy, 1.0) if yy > 0.0 else 1.0
     return out
+
+
+@kernel
+def local_slopes(
+    offsets: NDArray[np.int64], x: NDArray[np.float64], y: NDArray[np.float64], reach: int
+) -> NDArray[np.float64]:
+    """Return at each point the slope over it and its neighbours, up to `reach` on either side, (q,).
+
+    NaN where the point's own y is NaN, or fewer than three of them have one.
+    """
+    out = np.full(len(x), np.nan)
+    for i in range(len(offsets) - 1):
+        for k in range(offsets[i], offsets[i + 1]):
+            some = np.array([max(k - reach, offsets[i]), min(k + reach + 1, offsets[i + 1])])
+            line = fit_lines(some, x, y)
+            if line[0, 3] >= 3 and not np.isnan(y[k]):
+                out[k] = line[0, 0]
+    return out

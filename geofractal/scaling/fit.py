@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from geofractal.kernels.ladder_fit import fit_lines
+from geofractal.kernels.ladder_fit import fit_lines, local_slopes
 
 if TYPE_CHECKING:
     from geofractal.measure import Floats, Ints
@@ -46,7 +46,33 @@ def fit_power_law(ladders: Ladders, values: Floats) -> Fit:
     >>> fit_power_law(ladders, np.array([8.0, 4.0, 2.0])).slope
     array([-1., nan])
     """
+    table = fit_lines(ladders.offsets, np.log(ladders.rulers), _logs(values))
+    return Fit(table[:, 0].copy(), table[:, 1].copy(), table[:, 2].copy(), table[:, 3].astype(np.int64))
+
+
+def local_dimensions(ladders: Ladders, lengths: Floats, *, reach: int = 2) -> Floats:
+    """Return the dimension around each rung, 1 - slope of ln L over it and `reach` rungs on either side.
+
+    Parameters
+    ----------
+    ladders : of n features, q rungs in all
+    lengths : (q,) L(r); a NaN leaves its rung out
+    reach : 2 takes five rungs, a third of a decade of the default ladder
+
+    Returns
+    -------
+    (q,) NaN where fewer than three of those rungs have a length
+
+    Examples
+    --------
+    >>> ladders = Ladders(np.array([0, 4]), np.array([1.0, 2.0, 4.0, 8.0]))
+    >>> local_dimensions(ladders, np.array([8.0, 4.0, 2.0, np.nan]))
+    array([ 2.,  2.,  2., nan])
+    """
+    return 1.0 - local_slopes(ladders.offsets, np.log(ladders.rulers), _logs(lengths), reach)
+
+
+def _logs(values: Floats) -> Floats:
     logs = np.full(len(values), np.nan)
     np.log(values, out=logs, where=values > 0)
-    table = fit_lines(ladders.offsets, np.log(ladders.rulers), logs)
-    return Fit(table[:, 0].copy(), table[:, 1].copy(), table[:, 2].copy(), table[:, 3].astype(np.int64))
+    return logs
