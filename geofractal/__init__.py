@@ -9,7 +9,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from geofractal.api import divider_dimension, run, sinuosity
+    from geofractal.api import divider_dimension, divider_ladder, run, sinuosity
     from geofractal.estimators.area_perimeter import area_perimeter_dimension, area_perimeter_residual
     from geofractal.estimators.number_area import number_area_exponent
     from geofractal.patches import polygon_patches, raster_patches, warping_effect
@@ -19,6 +19,7 @@ __all__ = [
     "area_perimeter_dimension",
     "area_perimeter_residual",
     "divider_dimension",
+    "divider_ladder",
     "number_area_exponent",
     "polygon_patches",
     "raster_patches",
@@ -32,6 +33,7 @@ _HOMES = {
     "area_perimeter_dimension": "geofractal.estimators.area_perimeter",
     "area_perimeter_residual": "geofractal.estimators.area_perimeter",
     "divider_dimension": "geofractal.api",
+    "divider_ladder": "geofractal.api",
     "number_area_exponent": "geofractal.estimators.number_area",
     "polygon_patches": "geofractal.patches",
     "raster_patches": "geofractal.patches",

@@ -18,8 +18,11 @@ from geofractal.batch.spool import FID, ROW
 from geofractal.config.load import load_config
 from geofractal.config.models import MeasureRequest, Prepare
 from geofractal.errors import ConfigError
+from geofractal.estimators.divider import walk
 from geofractal.reader.planes import Projector
 from geofractal.registry import load_measure
+from geofractal.scaling.ladder import divider_ladders
+from geofractal.scaling.local import local_dimension
 
 if TYPE_CHECKING:
     from typing import TypeAlias
@@ -60,6 +63,7 @@ def divider_dimension(
     ruler_max_m: float | None = None,
     rungs: int | None = None,
     starts: int | None = None,
+    extrapolate: bool = False,
     boundaries: Literal["all", "outer"] = "all",
     repair: bool = False,
     edges: Edges = "straight",
@@ -74,6 +78,7 @@ def divider_dimension(
     crs : of a plain sequence, in any form that pyproj takes; a frame brings its own
     lengths_at_m : rulers in metres at which the walked length is returned, in km
     ruler_min_m, ruler_max_m, rungs, starts : the ladder and its walks, chosen from the data where left out
+    extrapolate : whether the fit also predicts lengths at rulers outside the ladder, which the note flags
     boundaries : every ring of a polygon, or only its outer one
     repair : measure an invalid polygon's repaired boundary rather than refuse it
     edges : straight in the source's CRS, as maps draw them, or geodesic
@@ -108,16 +113,69 @@ def divider_dimension(
         "ruler_max_m": ruler_max_m,
         "rungs": rungs,
         "starts": starts,
+        "extrapolate": extrapolate,
     }
     plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
     prepare = Prepare(boundaries=boundaries, repair=repair)
     return _measured("divider-dimension", options, geometries, crs, prepare, plane)
 
 
+def divider_ladder(
+    geometries: Geometries,
+    *,
+    crs: Any = None,
+    ruler_min_m: float | None = None,
+    ruler_max_m: float | None = None,
+    rungs: int | None = None,
+    boundaries: Literal["all", "outer"] = "all",
+    edges: Edges = "straight",
+    budget_percent: float = 0.5,
+    three_dimensions: bool = True,
+) -> pd.DataFrame:
+    """Return what the divider finds at every ruler of each line's ladder: the table behind its dimension.
+
+    Parameters
+    ----------
+    geometries, crs, ruler_min_m, ... : as in `divider_dimension`
+
+    Returns
+    -------
+    pandas.DataFrame
+        one row per input and ruler, with the input's index: ``ruler_m``, ``length_km``, ``steps`` (whole
+        ones, mean over the starts) and ``local_dim``, the dimension over half a decade about the ruler.
+        Inputs that cannot be walked have no rows.
+
+    Raises
+    ------
+    ConfigError, LayerError
+        as `divider_dimension`
+    """
+    import pandas as pd
+
+    values, index, wkt = _taken(geometries, crs)
+    projector = Projector(wkt, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
+    tables = [pd.DataFrame({"ruler_m": [], "length_km": [], "steps": [], "local_dim": []}, index=index[:0])]
+    for part in _parts(values):
+        found = part.features(Prepare(boundaries=boundaries)).lines
+        rows = part.rows[found.rows]
+        chunks, _ = projector.lines(rows, found.xy, found.part_offsets, found.feature_offsets, found.closed)
+        for lines in chunks:
+            ladders = divider_ladders(lines, ruler_min_m=ruler_min_m, ruler_max_m=ruler_max_m, rungs=rungs)
+            walks = walk(lines, ladders)
+            figures = {
+                "ruler_m": ladders.rulers,
+                "length_km": walks.length / 1000,
+                "steps": walks.steps,
+                "local_dim": local_dimension(ladders, walks.length),
+            }
+            tables.append(pd.DataFrame(figures, index=index[np.repeat(lines.rows, np.diff(ladders.offsets))]))
+    return pd.concat(tables)
+
+
 def sinuosity(
     geometries: Geometries,
     *,
-    ruler_m: float,
+    ruler_m: float | None = None,
     crs: Any = None,
     edges: Edges = "straight",
     budget_percent: float = 0.5,
@@ -127,7 +185,7 @@ def sinuosity(
 
     Parameters
     ----------
-    ruler_m : the ruler in metres
+    ruler_m : the ruler in metres; left out, the finest that each line's source supports
     geometries, crs, edges, budget_percent, three_dimensions : as in `divider_dimension`
 
     Returns
@@ -140,7 +198,7 @@ def sinuosity(
     ConfigError, LayerError
         as `divider_dimension`
     """
-    options = {"ruler_m": float(ruler_m)}
+    options = {"ruler_m": ruler_m}
     plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
     return _measured("sinuosity", options, geometries, crs, Prepare(), plane)
 
