@@ -98,7 +98,7 @@ def _half_of_length(ordered: Floats) -> float:
 def _repeats(ordered: Floats) -> bool:
     """Whether a tenth of the lengths lie within 1.5 % of each other, as steps through cells do."""
     tenth = len(ordered) // 10
-    for d in range(10):
+    for d in range(10):  # noqa: SIM110 - compiled code has no generators
         if ordered[(d + 1) * tenth - 1] < 1.015 * ordered[d * tenth]:
             return True
     return False

@@ -38,9 +38,10 @@ BOX = DIVIDER._replace(
     crowding=0.25,
     own_least=0.6,
     own_low=0.6,
-    bias_doubt=1.3,
-    quantile=2.6,
-    tilt=0.12,
+    bias_doubt=1.5,
+    quantile=2.8,
+    tilt=0.16,
+    threshold=1.8,
 )
 """`crowding`: strands that lie close share boxes, so that counts are the more too low the higher the
 dimension and the shorter the ladder. 0.4 would set trails right that cross themselves, 0 curves drawn by a

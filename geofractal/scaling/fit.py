@@ -42,6 +42,8 @@ def fit_power_law(ladders: Ladders, values: Floats) -> Fit:
 
     Examples
     --------
+    >>> import numpy as np
+    >>> from geofractal.scaling.ladder import Ladders
     >>> ladders = Ladders(np.array([0, 3, 3]), np.array([1.0, 2.0, 4.0]))
     >>> fit_power_law(ladders, np.array([8.0, 4.0, 2.0])).slope
     array([-1., nan])
@@ -65,6 +67,8 @@ def local_dimensions(ladders: Ladders, lengths: Floats, *, reach: int = 2) -> Fl
 
     Examples
     --------
+    >>> import numpy as np
+    >>> from geofractal.scaling.ladder import Ladders
     >>> ladders = Ladders(np.array([0, 4]), np.array([1.0, 2.0, 4.0, 8.0]))
     >>> local_dimensions(ladders, np.array([8.0, 4.0, 2.0, np.nan]))
     array([ 2.,  2.,  2., nan])

@@ -159,6 +159,8 @@ def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"
 
     Examples
     --------
+    >>> import numpy as np
+    >>> from geofractal.scaling.ladder import Ladders
     >>> straight = np.geomspace(1, 100, 25)
     >>> ladders = Ladders(np.array([0, 25]), straight)
     >>> unknown = np.full(25, np.nan)
