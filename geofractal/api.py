@@ -21,8 +21,8 @@ from geofractal.errors import ConfigError
 from geofractal.estimators.divider import walk
 from geofractal.reader.planes import Projector
 from geofractal.registry import load_measure
+from geofractal.scaling.fit import local_dimensions
 from geofractal.scaling.ladder import divider_ladders
-from geofractal.scaling.local import local_dimension
 
 if TYPE_CHECKING:
     from typing import TypeAlias
@@ -142,7 +142,7 @@ def divider_ladder(
     -------
     pandas.DataFrame
         one row per input and ruler, with the input's index: ``ruler_m``, ``length_km``, ``steps`` (whole
-        ones, mean over the starts) and ``local_dim``, the dimension over half a decade about the ruler.
+        ones, mean over the starts) and ``local_dim``, the dimension over the ruler and two on either side.
         Inputs that cannot be walked have no rows.
 
     Raises
@@ -166,7 +166,7 @@ def divider_ladder(
                 "ruler_m": ladders.rulers,
                 "length_km": walks.length / 1000,
                 "steps": walks.steps,
-                "local_dim": local_dimension(ladders, walks.length),
+                "local_dim": local_dimensions(ladders, walks.length),
             }
             tables.append(pd.DataFrame(figures, index=index[np.repeat(lines.rows, np.diff(ladders.offsets))]))
     return pd.concat(tables)
