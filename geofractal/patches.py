@@ -157,8 +157,6 @@ def _joined(frames: list[pd.DataFrame], raster: Raster) -> pd.DataFrame:
     import pandas as pd
 
     names = pd.Index(raster.legend.names, dtype=str)
-    if not frames:
-        frames = [patch_frame(PatchTable(np.empty((0, 17), np.int64)), raster, Perimeter())]
     for frame in frames:
         frame["cover"] = frame["cover"].cat.set_categories(names)
     table = pd.concat(frames, ignore_index=True).sort_values(["first_row", "first_column"], ignore_index=True)

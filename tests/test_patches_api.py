@@ -76,6 +76,21 @@ class TestRasterPatches:
         with pytest.raises(ConfigError, match="leave out the patches that touch it"):
             Perimeter("outer-cell-edges", map_edge=False)
 
+    def test_a_turned_grid_changes_no_figure(self):
+        turn = 10 / math.sqrt(2)
+        upright = raster_patches((CODES, TEN_M, PLANE), perimeter="smoothed")
+        turned = raster_patches((CODES, (turn, turn, 0, turn, -turn, 0), PLANE), perimeter="smoothed")
+        assert turned.area_m2.tolist() == pytest.approx(upright.area_m2.tolist())
+        assert turned.perimeter_m.tolist() == pytest.approx(upright.perimeter_m.tolist())
+
+    def test_cells_without_area(self):
+        with pytest.raises(LayerError, match="whose cells have no area"):
+            raster_patches((CODES, (10, 0, 0, 20, 0, 0), PLANE))
+
+    def test_one_class_is_one_patch(self):
+        found = raster_patches((np.ones((4, 5), np.uint8), TEN_M, PLANE))
+        assert found[["cells", "perimeter_m"]].to_numpy().tolist() == [[20, pytest.approx(2 * (40 + 50))]]
+
     def test_geographic_cells_have_their_true_size(self):
         """Two 1-degree cells on the equator: 2 x 12308.464 km2 between parallels (independent figure)."""
         found = raster_patches((np.ones((1, 2), np.uint8), (1, 0, 10, 0, -1, 1), "EPSG:4326"))

@@ -224,8 +224,12 @@ class TestClassNames:
             read(write(tmp_path / "a.tif"), classes=[("reed", 1), ("Reed", 2)])
 
     def test_a_code_in_two_classes(self, tmp_path):
-        with pytest.raises(ConfigError, match="Code 2 is in two classes, 'a' and 'b'"):
+        with pytest.raises(ConfigError, match="Code 2 stands for class 'a' and for class 'b'"):
             read(write(tmp_path / "a.tif"), classes={"a": [1, 2], "b": 2})
+
+    def test_a_class_of_the_nodata_code(self, tmp_path):
+        with pytest.raises(ConfigError, match="Code 0 stands for no data and for class 'a'"):
+            read(write(tmp_path / "a.tif", nodata=0), classes={"a": [0, 1]}, rest="b")
 
     def test_a_name_the_raster_does_not_have(self, tmp_path):
         path = write(tmp_path / "a.tif", aux=TABLE)

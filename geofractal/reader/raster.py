@@ -33,7 +33,7 @@ from geofractal.reader.raster_source import (
 
 STRIP_CELLS = 8_000_000
 WARPED_BLOCK = 128  # rows of a block of GDAL's warped rasters; other strips would warp some blocks twice
-AHEAD = 2  # strips that wait for the caller
+AHEAD = 1  # strips that wait for the caller, beside the one being read
 
 
 @dataclass(frozen=True)
@@ -49,7 +49,7 @@ class RasterOptions:
     nodata : further codes of cells without data
     whole_numbers : whether a raster of floats may be taken as whole numbers
     grid : ``auto``, ``source`` or ``warp``; see `geofractal.reader.raster_plane.choose_grid`
-    distortion_budget : largest relative error of lengths
+    budget_percent : largest error of lengths that the grid may bring in
     cell_size_m : cell size of a warped grid; the source's unless stated
     strip_rows : rows read at once; never changes a result
     """
@@ -61,7 +61,7 @@ class RasterOptions:
     nodata: tuple[int, ...] = ()
     whole_numbers: bool = False
     grid: str = "auto"
-    distortion_budget: float = 0.005
+    budget_percent: float = 0.5
     cell_size_m: float | None = None
     strip_rows: int | None = None
 
@@ -131,7 +131,7 @@ def open_raster(source: Path | ClassMap, options: RasterOptions | None = None) -
         nodata = dataset.nodatavals[options.band - 1]
         codes = () if nodata is None or not math.isfinite(nodata) else (int(nodata),)
         legend = make_legend(options.classes, options.rest, (*codes, *options.nodata), named)
-        chosen = choose_grid(grid, options.grid, options.distortion_budget, options.cell_size_m)
+        chosen = choose_grid(grid, options.grid, options.budget_percent / 100, options.cell_size_m)
         block_rows = dataset.block_shapes[options.band - 1][0] if chosen is grid else WARPED_BLOCK
     rows = options.strip_rows or strip_rows(chosen.columns, block_rows)
     return Raster(source, options, chosen, grid, legend, max(1, min(rows, chosen.rows)))

@@ -86,8 +86,11 @@ def make_legend(
         if name.casefold() in {other.casefold() for other in names}:
             raise ConfigError(f"The class {name!r} is named twice in classes.")
         for code in _member_codes(name, members, own_names):
-            if codes.get(code, NOT_COVERED) != NOT_COVERED:
-                raise ConfigError(f"Code {code} is in two classes, {names[codes[code]]!r} and {name!r}.")
+            if code in codes:
+                other = "no data" if codes[code] == NOT_COVERED else f"class {names[codes[code]]!r}"
+                raise ConfigError(
+                    f"Code {code} stands for {other} and for class {name!r}; it can be one only."
+                )
             codes[code] = len(names)
         names.append(name)
     if rest is None:

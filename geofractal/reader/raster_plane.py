@@ -40,7 +40,7 @@ def choose_grid(source: Grid, grid: str, budget: float, cell_size_m: float | Non
         raise SourceError(
             f"No grid keeps lengths within {budget:.2%} over this raster: its own grid errs by "
             f"{source.distortion:.2%}, an equal-distance plane: {found}. Cut the raster into smaller "
-            "extents, raise distortion-budget, or state grid: source."
+            "extents, raise budget-percent, or state grid: source."
         )
     return warped
 
