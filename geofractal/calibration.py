@@ -7,8 +7,8 @@ dimension from a user's own lines.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import asdict, dataclass, replace
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import asdict, dataclass, fields, replace
 from itertools import product
 from typing import TYPE_CHECKING
 
@@ -95,6 +95,23 @@ class Calibration:
         import pyarrow as pa
 
         return pa.Table.from_pylist([asdict(row) for row in self.rows])
+
+    def lines(self) -> Iterator[str]:
+        """Yield the table as text, a line a row."""
+        head = "dimension vertices decades    bias  spread coverage   width x spread refused power-law"
+        yield f"{'family':18} {head}"
+        for row in self.rows:
+            yield (
+                f"{row.family:18} {row.dimension:9.3f} {row.vertices:8,} {row.decades:7.2f} {row.bias:+7.3f} "
+                f"{row.spread:7.3f} {row.coverage:8.1%} {row.width:7.3f} {row.width_ratio:8.2f} "
+                f"{row.refused:7.1%} {row.power_law:9.1%}"
+            )
+
+    def csv(self) -> str:
+        """Return the table as CSV, columns as in `CalibrationRow`."""
+        names = [item.name for item in fields(CalibrationRow)]
+        rows = [[str(getattr(row, name)) for name in names] for row in self.rows]
+        return "\n".join(",".join(row) for row in [names, *rows]) + "\n"
 
     def figure(self) -> str:
         """Return an SVG drawing: error bars of each row about the truth, with its coverage."""

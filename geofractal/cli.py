@@ -126,15 +126,73 @@ def measures(names: tuple[str, ...], *, as_json: bool, quiet: bool, verbose: boo
     """List what can be measured; with NAMES, describe those measures."""
     with _plain_errors(quiet=quiet, verbose=verbose):
         from geofractal import describe
-        from geofractal.registry import load_measure, load_measures
+        from geofractal.registry import load_any_measure, load_measures
 
-        found = [load_measure(name) for name in names] or list(load_measures().values())
+        found = [load_any_measure(name) for name in names] or list(load_measures().values())
         if as_json:
             _print([_json([describe.as_dict(measure) for measure in found])])
         elif names:
             _print(line for measure in found for line in describe.as_lines(measure))
         else:
             _print(f"{measure.name:24} {measure.title}" for measure in found)
+
+
+@cli.command(epilog=EXIT_CODES)
+@click.argument("source", type=FILE, required=False)
+@click.option("--layer", help="The layer of SOURCE, where it holds several.")
+@click.option("--crs", help="CRS of a SOURCE that states none.")
+@click.option("--dimension", "dimensions", type=float, multiple=True, help="Dimension to draw; repeatable.")
+@click.option("--vertices", type=int, multiple=True, help="Vertices of a curve; repeatable.")
+@click.option("--curves", type=int, help="Curves of each family, dimension and size.")
+@click.option("--ruler-min-share", type=float, help="First ruler as a share of a curve's extent.")
+@click.option("--ruler-max-share", type=float, help="Last ruler as a share of a curve's extent.")
+@click.option("--rungs", type=int, help="Number of rulers.")
+@click.option("--table", type=FILE, metavar="FILE", help="Also write the table as CSV.")
+@click.option("--figure", type=FILE, metavar="FILE", help="Also draw the intervals as SVG.")
+@_with_progress
+@_shared
+def calibrate(
+    source: Path | None,
+    layer: str | None,
+    crs: str | None,
+    table: Path | None,
+    figure: Path | None,
+    style: Any,
+    *,
+    quiet: bool,
+    verbose: bool,
+    **asked: Any,
+) -> None:
+    """Measure curves of known dimension and tell how right the figures are.
+
+    The curves are like the lines of SOURCE, or as the options say: bias, spread, coverage of the interval
+    and errors of the verdict, before any figure is trusted.
+    """
+    from geofractal.interrupt import guarded
+
+    with _plain_errors(quiet=quiet, verbose=verbose), guarded():
+        from geofractal.batch.calibrate import calibrate_layer
+        from geofractal.calibration import Settings
+        from geofractal.calibration import calibrate as calibrate_stated
+        from geofractal.progress import make_progress
+        from geofractal.writer import publish
+
+        settings = Settings(**{key: value for key, value in asked.items() if value not in (None, ())})
+        progress = make_progress("none" if quiet else style, details=verbose)
+        with progress.stage("calibration", "curves of known dimension", 100, "percent") as stage:
+
+            def tell(share: float) -> None:
+                stage.advance(round(100 * share) - stage.done)
+
+            if source is None:
+                found = calibrate_stated(settings, progress=tell)
+            else:
+                found = calibrate_layer(source, settings, layer=layer, crs=crs, progress=tell)
+        _print(found.lines())
+        for target, text in ((table, found.csv), (figure, found.figure)):
+            if target is not None:
+                with publish(target) as part:
+                    part.write_text(text(), encoding="utf-8")
 
 
 @cli.command(epilog=EXIT_CODES)

@@ -13,6 +13,7 @@ import numpy as np
 import plugin_packages
 import pytest
 import shapely
+from batches import wiggle, write_gpkg
 from click.testing import CliRunner
 
 import geofractal.batch
@@ -359,6 +360,8 @@ def run_batch(batch, *, progress):
     collections.deque(itertools.repeat(0, 10**12), maxlen=0)  # as GDAL does: holds the interpreter lock
 run.run_batch = run_batch
 sys.modules["geofractal.batch.run"] = run
+from batches import wiggle, write_gpkg
+
 from geofractal.cli import main
 sys.argv = ["geofractal", "run", "batch.yaml"]
 main()
@@ -377,3 +380,28 @@ def test_an_interrupted_run_ends_within_two_seconds_and_says_what_is_kept(folder
     process.wait(10)
     assert time.monotonic() - began < 2.0
     assert process.stderr.read() == "\nInterrupted. Nothing was finished; earlier outputs are as they were.\n"
+
+
+def test_calibrate_prints_a_table_and_writes_it_and_its_figure(tmp_path):
+    table, figure = tmp_path / "found.csv", tmp_path / "found.svg"
+    asked = ["--curves", "5", "--vertices", "500", "--dimension", "1.2", "--rungs", "12"]
+    found = CliRunner().invoke(cli, ["calibrate", *asked, "--table", str(table), "--figure", str(figure)])
+    assert found.exit_code == 0, found.output
+    assert "coverage" in found.stdout.splitlines()[0]
+    rows = table.read_text("utf-8").splitlines()
+    assert len(rows) == len(found.stdout.splitlines())
+    assert rows[1].startswith("fractional trails,1.2,500,5,")
+    assert figure.read_text("utf-8").startswith("<svg")
+
+
+def test_calibrate_imitates_the_lines_of_a_layer(tmp_path):
+    source = write_gpkg(tmp_path / "in.gpkg", [wiggle(seed, vertices=800) for seed in range(4)])
+    found = CliRunner().invoke(cli, ["calibrate", str(source), "--curves", "4"])
+    assert found.exit_code == 0, found.output
+    assert {line.split()[-9] for line in found.stdout.splitlines()[1:]} == {"800"}
+
+
+def test_calibrate_says_what_cannot_be_drawn():
+    found = CliRunner().invoke(cli, ["calibrate", "--dimension", "2.5"])
+    assert found.exit_code == 2
+    assert "1 < D < 2" in found.output
