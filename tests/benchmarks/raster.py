@@ -18,9 +18,13 @@ import subprocess
 import sys
 import tempfile
 import time
+from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
+
+from geofractal.landcover.strips import Strip
 
 TILE = 4096
 CLASSES = 8
@@ -114,21 +118,34 @@ def work_strips(path: str, grid: str) -> dict[str, float]:
     return {"cells": sum(strip.codes.size for strip in open_raster(path, RasterOptions(grid=grid)).strips())}
 
 
-def work_patches(path: str, grid: str, neighbours: int = 8, outlines: bool = False) -> dict[str, float]:  # noqa: FBT001, FBT002 - filled from JSON
+def in_zones(strips: Iterator[Strip], rows: int, side: int) -> Iterator[Strip]:
+    """Yield strips with side x side square zones."""
+    for strip in strips:
+        down = (strip.first_row + np.arange(strip.rows)) * side // rows
+        across = np.arange(strip.codes.shape[1]) * side // strip.codes.shape[1]
+        yield replace(strip, zones=(down[:, None] * side + across).astype(np.int32))
+
+
+def work_patches(
+    path: str, *, grid: str, neighbours: int = 8, outlines: bool = False, zones: int = 0
+) -> dict[str, float]:
     """Label a map and add up what its patches sum to."""
     from geofractal.landcover.labelling import label_patches
     from geofractal.reader.raster import RasterOptions, open_raster
 
     raster = open_raster(path, RasterOptions(grid=grid))
-    patches = area = edge = largest = 0
-    for found in label_patches(raster.strips(), neighbours=neighbours, outlines=outlines):
+    patches = pieces = area = edge = largest = 0
+    strips = in_zones(raster.strips(), raster.grid.rows, zones) if zones else raster.strips()
+    for found in label_patches(strips, neighbours=neighbours, outlines=outlines):
         patches += len(found.patches)
+        pieces += len(found.pieces)
         area += int(found.patches["area"].sum())
         edge += int(found.patches["edge"].sum())
-        largest = max([largest, *found.patches["cells"][:0], int(found.patches["cells"].max(initial=0))])
+        largest = max(largest, int(found.patches["cells"].max(initial=0)))
     return {
         "cells": raster.grid.rows * raster.grid.columns,
         "patches": patches,
+        "pieces": pieces,
         "area_km2": area * raster.grid.area_unit_m2 / 1e6,
         "edge_km": edge * raster.grid.length_unit_m / 1e3,
         "largest": largest,
@@ -237,6 +254,11 @@ def table(folder: Path, side: int, times: int) -> None:
     row("strips, warped", measured("strips", path=land, grid="warp"), reading)
     ours = row("patches", measured("patches", path=land, grid="source"), reading)
     row("patches, warped", measured("patches", path=land, grid="warp"), reading)
+    row(
+        "patches, across and cut at 100 zones",
+        measured("patches", path=land, grid="source", zones=10),
+        reading,
+    )
     row("patches of 4 neighbours", measured("patches", path=land, grid="source", neighbours=4), reading)
     row("patches with outlines", measured("patches", path=land, grid="source", outlines=True), reading)
     for kind, title in (
