@@ -1,8 +1,9 @@
 """River reaches by the million, GeoPackage to GeoPackage: rate, memory, and the plain script beside it.
 
-Run ``python tests/benchmarks/reaches.py`` (``--features 4000000``, ``--rungs 24``, ``--groups 20`` for rivers of
-20 reaches each, ``--plain 20000`` for how many features the plain script is timed on). It prints one table
-and asserts nothing about time; that every row is accounted for is checked and printed.
+Run ``python tests/benchmarks/reaches.py``. ``--features`` and ``--rungs`` take several numbers; 0 rungs stand
+for the default ladder and starts. ``--groups`` measures rivers of 20 reaches each, and ``--plain`` says on how
+many features the plain script is timed. It prints one table and asserts nothing about time; that every row is
+accounted for is checked.
 """
 
 import argparse
@@ -24,6 +25,12 @@ BATCH_ROWS = 20_000
 MEAN_VERTICES = 30
 BAD, MULTI, LONG = 0.02, 0.05, 0.01
 LONG_VERTICES = 300
+REACHES = 20
+DRIFT = (9.0, 0.0)
+HEAD = (
+    f"{'what':34} {'features':>10} {'rungs':>5} {'s':>7} {'features/s':>11} {'peak MB':>8} "
+    f"{'answered':>10} {'told':>8}"
+)
 
 
 def reaches(features, seed=7):
@@ -33,7 +40,7 @@ def reaches(features, seed=7):
         rng = np.random.default_rng([seed, first])
         kind = rng.choice(4, size=n, p=[1 - BAD - MULTI - LONG, BAD, MULTI, LONG])
         counts = np.where(kind == 3, LONG_VERTICES, rng.poisson(MEAN_VERTICES - 3, n).clip(8))
-        steps = rng.normal(scale=12.0, size=(counts.sum(), 2)) + (9.0, 0.0)
+        steps = rng.normal(DRIFT, 12.0, size=(counts.sum(), 2))
         owner = np.repeat(np.arange(n), counts)
         xy = np.cumsum(steps, axis=0)
         starts = np.cumsum(counts) - counts
@@ -49,29 +56,54 @@ def reaches(features, seed=7):
         ]
         bad = np.flatnonzero(kind == 1)
         for place, row in enumerate(bad):
-            lines[row] = (None, shapely.LineString(), shapely.Point(5e5, 6e6), shapely.LineString([(1, 1), (1, 1)]))[
-                place % 4
-            ]
-        rows = np.arange(first, first + n)
-        yield pa.record_batch(
-            {
-                "name": pa.array([f"reach {i}" for i in rows]),
-                "river": pa.array(rows // 20),
-                "order": pa.array(rng.integers(1, 8, n), pa.int32()),
-                "wkb": pa.array(shapely.to_wkb(lines), pa.binary()),
-            }
-        )
+            lines[row] = (
+                None,
+                shapely.LineString(),
+                shapely.Point(5e5, 6e6),
+                shapely.LineString([(1, 1), (1, 1)]),
+            )[place % 4]
+        yield table(np.arange(first, first + n), lines)
 
 
-def write_source(path, features):
-    first = next(reaches(1))
-    reader = pa.RecordBatchReader.from_batches(first.schema, reaches(features))
-    pyogrio.raw.write_arrow(
-        reader, path, layer="reaches", geometry_name="wkb", geometry_type="Unknown", crs="EPSG:32631", driver="GPKG"
+def rivers(features, seed=7):
+    """Yield batches of reaches of which twenty, end to end, make a river of about 600 vertices."""
+    per_reach = MEAN_VERTICES + 1
+    for first in range(0, features, BATCH_ROWS):
+        n = min(BATCH_ROWS, features - first)
+        rng = np.random.default_rng([seed, first])
+        steps = rng.normal(DRIFT, 12.0, size=(-(-n // REACHES), REACHES * (per_reach - 1) + 1, 2))
+        xy = np.cumsum(steps, axis=1) + rng.uniform([3e5, 6.0e6], [7e5, 6.4e6], size=(len(steps), 1, 2))
+        cuts = np.arange(REACHES)[:, None] * (per_reach - 1) + np.arange(per_reach)
+        lines = shapely.linestrings(xy[:, cuts].reshape(-1, per_reach, 2)[:n])
+        yield table(np.arange(first, first + n), lines)
+
+
+def table(rows, lines):
+    return pa.record_batch(
+        {
+            "name": pa.array([f"reach {i}" for i in rows]),
+            "river": pa.array(rows // REACHES),
+            "order": pa.array(rows % 7, pa.int32()),
+            "wkb": pa.array(shapely.to_wkb(lines), pa.binary()),
+        }
     )
 
 
-def measured(folder, source, rungs, workers, group):
+def write_source(path, features, draw=reaches):
+    first = next(draw(1))
+    reader = pa.RecordBatchReader.from_batches(first.schema, draw(features))
+    pyogrio.raw.write_arrow(
+        reader,
+        path,
+        layer="reaches",
+        geometry_name="wkb",
+        geometry_type="Unknown",
+        crs="EPSG:32631",
+        driver="GPKG",
+    )
+
+
+def measured(folder, source, options, workers, group):
     """Run the batch in a process of its own and return its seconds, peak MB and record."""
     out = folder / "out"
     batch = folder / "batch.yaml"
@@ -79,7 +111,7 @@ def measured(folder, source, rungs, workers, group):
     said = {
         "batch": "reaches",
         "layers": {"reaches": layer},
-        "measures": [{"measure": "divider-dimension", "of": "reaches", "rungs": rungs, "starts": 1}],
+        "measures": [{"measure": "divider-dimension", "of": "reaches", **options}],
         "outputs": {"folder": str(out), "formats": ["geopackage"]},
         "run": {"workers": workers},
     }
@@ -104,7 +136,7 @@ def account(copy, features):
 
 
 def plain_script(source, features, rungs):
-    """What a user would write: a frame in memory, a loop over features, shapely and numpy; seconds a feature."""
+    """Return the seconds a feature of what a user would write: a frame in memory and a loop over features."""
     import geopandas as gpd
 
     begun = time.perf_counter()
@@ -143,21 +175,24 @@ def plain_walk(xy, ruler):
 
 
 def main():
-    arguments = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    arguments = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     arguments.add_argument("--features", type=int, nargs="+", default=[1_000_000])
     arguments.add_argument("--rungs", type=int, nargs="+", default=[12, 24])
     arguments.add_argument("--workers", type=int, default=2)
     arguments.add_argument("--plain", type=int, default=5_000)
     arguments.add_argument("--groups", action="store_true", help="measure rivers of 20 reaches each")
     chosen = arguments.parse_args()
-    print(f"{'what':34} {'features':>10} {'rungs':>5} {'s':>7} {'features/s':>11} {'peak MB':>8} {'answered':>10} {'told':>8}")
+    print(HEAD)
     for features in chosen.features:
         with tempfile.TemporaryDirectory() as name:
             folder = Path(name)
             source = folder / "reaches.gpkg"
-            write_source(source, features)
+            write_source(source, features, rivers if chosen.groups else reaches)
             for rungs in chosen.rungs:
-                seconds, peak, _, copy = measured(folder, source, rungs, chosen.workers, chosen.groups)
+                options = {"rungs": rungs, "starts": 1} if rungs else {}
+                seconds, peak, _, copy = measured(folder, source, options, chosen.workers, chosen.groups)
                 answered, told = account(copy, features)
                 what = f"batch, {chosen.workers} workers" + (", rivers" if chosen.groups else "")
                 print(
@@ -166,10 +201,12 @@ def main():
                     flush=True,
                 )
             if chosen.plain:
-                each = plain_script(source, chosen.plain, chosen.rungs[0])
+                each = plain_script(source, chosen.plain, chosen.rungs[0] or 12)
                 peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e3
-                print(f"{'plain script, first features':34} {chosen.plain:10,} {chosen.rungs[0]:5} "
-                      f"{each * chosen.plain:7.1f} {1 / each:11,.0f} {peak:8,.0f}")
+                print(
+                    f"{'plain script, first features':34} {chosen.plain:10,} {chosen.rungs[0]:5} "
+                    f"{each * chosen.plain:7.1f} {1 / each:11,.0f} {peak:8,.0f}"
+                )
 
 
 if __name__ == "__main__":
