@@ -1,0 +1,416 @@
+"""Box counting: kernels against brute force, known counts, and the measure `box-dimension`."""
+
+from itertools import pairwise, product
+from math import log, log2, pi
+
+import numpy as np
+import pytest
+import shapely
+from hypothesis import assume, given, settings
+from hypothesis import strategies as st
+
+from geofractal import synthetic
+from geofractal.estimators import box
+from geofractal.estimators.box_cells import CellBoxCounter, cell_sizes, count_cells
+from geofractal.kernels import boxes as kernels
+from geofractal.kernels.cell_boxes import count_rows
+from geofractal.kernels.ladder_judge import STRETCHES
+from geofractal.scaling.ladder import Ladders
+from geofractal.testing import check_measure, lines_of, specimens
+
+
+def tables(tiles=4096):
+    return kernels.Tables(
+        np.zeros(4 * tiles, np.int64),
+        np.zeros(tiles, np.int64),
+        np.zeros(tiles, np.int64),
+        np.zeros((tiles, kernels.TILE)),
+        np.zeros((tiles, kernels.TILE), np.uint16),
+    )
+
+
+def grid_of(parts, size, origin=(0, 0, 0), tallies=None, call=kernels.count_grid):
+    """Return boxes, entropy and sum of squares of one grid over parts, each (k, 2) or (k, 3)."""
+    xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
+    starts = np.concatenate([[0], np.cumsum([len(part) for part in parts])])
+    along, bounds = kernels.measure_along(xy, starts, np.array([0, len(parts)]))
+    args = xy, along, bounds, starts, size, np.array(origin, float), np.array([9, 99, 99])
+    return call(*args, tables(), np.zeros(STRETCHES) if tallies is None else tallies)
+
+
+def shares_by_shapely(parts):
+    """Length of the parts in each unit box: along an edge it is that of the box above or to the right."""
+    segments = [shapely.LineString(pair) for part in parts for pair in pairwise(part)]
+    shares = []
+    for i, j in product(range(7), range(7)):
+        beyond = shapely.LineString([(i, j + 1), (i + 1, j + 1), (i + 1, j)])
+        cell = shapely.box(i, j, i + 1, j + 1)
+        taken = shapely.length(shapely.intersection(segments, cell)).sum()
+        shares.append(taken - shapely.length(shapely.intersection(segments, beyond)).sum())
+    shares = np.array(shares)
+    assert shares.sum() == pytest.approx(shapely.length(segments).sum())
+    return shares[shares > 1e-7]
+
+
+def shares_by_crossings(part, size):
+    """Length of a line in each box of any number of axes, from its crossings with the grid's planes."""
+    shares = {}
+    for a, b in pairwise(part / size):
+        times = [0.0, 1.0]
+        for low, high in zip(a, b, strict=True):
+            planes = np.arange(np.ceil(min(low, high)), np.floor(max(low, high)) + 1)
+            times += list((planes - low) / (high - low))
+        for start, stop in pairwise(sorted(times)):
+            key = tuple(np.floor(a + (start + stop) / 2 * (b - a)).astype(int))
+            shares[key] = shares.get(key, 0.0) + (stop - start) * np.linalg.norm(b - a)
+    return np.array([share for share in shares.values() if share > 1e-12])
+
+
+def expected(shares):
+    p = shares / shares.sum()
+    return len(p), -np.sum(p * np.log(p)), np.sum(p * p)
+
+
+class TestCountGrid:
+    def test_straight_line_along_the_grid(self):
+        # a line of 4 sides along an edge lies in the 4 boxes above it
+        assert grid_of([[(0, 1), (4, 1)]], 1.0) == pytest.approx((4, log(4), 1 / 4))
+
+    def test_straight_line_across_edges(self):
+        # shares 1/2, 1, 1/2 of 2
+        found = grid_of([[(0.5, 0.5), (2.5, 0.5)]], 1.0)
+        assert found == pytest.approx((3, 0.5 * log(4) + 0.5 * log(2), 1 / 16 + 1 / 4 + 1 / 16))
+
+    @pytest.mark.parametrize("ends", [[(0, 0), (5, 5)], [(0, 5), (5, 0)], [(5, 0), (0, 5)]])
+    def test_diagonal_through_corners_touches_no_further_box(self, ends):
+        assert grid_of([ends], 1.0)[0] == 5
+
+    @pytest.mark.parametrize("third", [1 / 3, 0.1, 1e-3, 7e5])
+    def test_corners_hold_where_sizes_are_rounded(self, third):
+        assert grid_of([np.array([(0, 0), (9, 9)]) * third], third)[0] == 9
+
+    def test_unit_square_around_boxes(self):
+        # the outline of 3 x 3 boxes: right and upper sides lie in the boxes beyond
+        ring = np.array([(0, 0), (3, 0), (3, 3), (0, 3), (0, 0)])
+        assert grid_of([ring], 1.0)[0] == 3 + 3 + 3 + 3 - 1
+
+    def test_unit_square_through_boxes(self):
+        ring = np.array([(0, 0), (3, 0), (3, 3), (0, 3), (0, 0)]) + 0.5
+        assert grid_of([ring], 1.0)[0] == 12
+
+    def test_touching_an_edge_does_not_count(self):
+        assert grid_of([[(0.2, 0.5), (0.5, 1.0), (0.8, 0.5)]], 1.0)[0] == 1
+
+    def test_long_segment_meets_every_box_on_its_way(self):
+        assert grid_of([[(0.5, 0.5), (400.5, 0.5)]], 1.0)[0] == 401
+
+    def test_lines_without_length_lie_in_no_box(self):
+        assert grid_of([[(0.5, 0.5), (0.5, 0.5)]], 1.0)[0] == 0
+
+    def test_the_gap_between_parts_is_no_line(self):
+        assert grid_of([[(0.5, 0.5), (0.6, 0.5)], [(7.5, 0.5), (7.6, 0.5)]], 1.0) == pytest.approx(
+            (2, log(2), 1 / 2)
+        )
+
+    def test_parts_share_boxes(self):
+        part = [(0.5, 0.5), (2.5, 0.5)]
+        assert grid_of([part, part], 1.0) == pytest.approx(grid_of([part], 1.0))
+
+    @settings(max_examples=60, deadline=None)
+    @given(st.integers(0, 2**32), st.booleans(), st.integers(1, 3))
+    def test_it_equals_shapely(self, seed, whole, number):
+        rng = np.random.default_rng(seed)
+        parts = [rng.uniform(0, 5, (rng.integers(2, 9), 2)) for _ in range(number)]
+        if whole:  # vertices on halves of the grid: edges and corners everywhere
+            parts = [np.round(part * 2) / 2 for part in parts]
+        assume(any((part != part[0]).any() for part in parts))
+        assert grid_of(parts, 1.0) == pytest.approx(expected(shares_by_shapely(parts)), abs=1e-6)
+
+    @settings(max_examples=40, deadline=None)
+    @given(st.integers(0, 2**32), st.sampled_from([2, 3]))
+    def test_it_equals_the_crossings(self, seed, axes):
+        part = np.cumsum(np.random.default_rng(seed).normal(size=(300, axes)), axis=0)
+        part -= part.min(axis=0)
+        assert grid_of([part], 2.5) == pytest.approx(expected(shares_by_crossings(part, 2.5)), rel=1e-9)
+
+    def test_three_dimensions_of_a_flat_line_are_those_of_the_plane(self):
+        flat = np.add(synthetic.koch(level=5).xy, [0, 1])
+        solid = np.column_stack([flat, np.full(len(flat), 0.5)])
+        assert grid_of([solid], 0.05) == pytest.approx(grid_of([flat], 0.05))
+
+    def test_blocks_pass_over_nothing(self):
+        # 1,000 vertices in one box, then a spike of one vertex out of it and back
+        part = np.full((1000, 2), 0.5) + 0.1 * np.random.default_rng(1).random((1000, 2))
+        part[700] = (3.5, 0.5)
+        assert grid_of([part], 1.0)[0] == 4
+
+    @pytest.mark.parametrize("axes", [2, 3])
+    def test_it_equals_its_interpreted_twin(self, axes):
+        rng = np.random.default_rng(3)
+        parts = [rng.uniform(0, 6, (n, axes)) for n in (2, 30, 90)]
+        parts[1] = np.round(parts[1])
+        origin = np.full(3, -0.25) * (np.arange(3) < axes)
+        slow = grid_of(parts, 1.0, origin, call=kernels.count_grid.py_func)
+        assert grid_of(parts, 1.0, origin) == slow
+
+    def test_measuring_along_equals_its_interpreted_twin(self):
+        args = np.random.default_rng(3).random((200, 3)), np.array([0, 2, 131, 200]), np.array([0, 2, 3])
+        fast, slow = kernels.measure_along(*args), kernels.measure_along.py_func(*args)
+        assert np.array_equal(fast[0], slow[0])
+        assert np.array_equal(fast[1], slow[1])
+
+    def test_stretches_tell_where_the_boxes_are(self):
+        # 16 stretches of one box side each, then the same way back: boxes are counted once a stretch
+        tallies = np.zeros(STRETCHES)
+        grid_of([[(0, 0.5), (8, 0.5), (0, 0.5)]], 1.0, tallies=tallies)
+        assert tallies.tolist() == [1.0] * 16
+        tallies = np.zeros(STRETCHES)
+        grid_of([[(0, 0.5), (4, 0.5), (4, 4.5)]], 0.5, tallies=tallies)
+        assert tallies.sum() == grid_of([[(0, 0.5), (4, 0.5), (4, 4.5)]], 0.5)[0]
+
+    def test_one_box_lies_in_every_stretch(self):
+        tallies = np.zeros(STRETCHES)
+        grid_of([[(0.1, 0.5), (0.9, 0.5)]], 1.0, tallies=tallies)
+        assert tallies.tolist() == [1.0] * 16
+
+
+class TestLadders:
+    lines = lines_of([[synthetic.random_koch(1.3, level=6, seed=1).xy * 1e4]])
+
+    def ladders(self, *sizes, features=1):
+        return Ladders(np.arange(features + 1) * len(sizes), np.tile(np.array(sizes, float), features))
+
+    def test_fewest_over_the_grids(self):
+        ladders = self.ladders(500.0, 1500.0)
+        alone = [
+            box.count(self.lines, ladders, shifts=box.GRID_SHIFTS[k : k + 1]).boxes for k in range(box.GRIDS)
+        ]
+        assert np.array_equal(box.count(self.lines, ladders).boxes, np.min(alone, axis=0))
+        assert box.count(self.lines, ladders).spread == pytest.approx(np.log(alone).std(axis=0, ddof=1))
+
+    def test_further_grids_stop_where_boxes_are_many(self, monkeypatch):
+        monkeypatch.setattr(box, "ENOUGH_BOXES", 10)
+        assert np.isnan(box.count(self.lines, self.ladders(500.0)).spread[0])
+
+    def test_grids_are_shifted_along_every_axis_by_other_amounts(self):
+        shifts = box.GRID_SHIFTS
+        assert ((shifts > 0) & (shifts < 1)).all()
+        assert all(np.diff(np.sort(shifts.ravel())) > 1e-3)
+
+    def test_moving_the_line_changes_nothing(self):
+        ladders = self.ladders(*np.geomspace(50, 2000, 9))
+        moved = lines_of([[np.add(self.lines.xy, [123_456, -7_890_123])]])
+        assert np.array_equal(box.count(self.lines, ladders).boxes, box.count(moved, ladders).boxes)
+
+    def test_reversing_the_line_changes_nothing(self):
+        ladders = self.ladders(*np.geomspace(50, 2000, 9))
+        back = lines_of([[self.lines.xy[::-1]]])
+        here, there = box.count(self.lines, ladders), box.count(back, ladders)
+        assert np.array_equal(here.boxes, there.boxes)
+        assert np.array_equal(here.tallies, there.tallies[:, ::-1])
+        assert here.even == pytest.approx(there.even, rel=1e-9)
+        assert here.paired == pytest.approx(there.paired, rel=1e-9)
+
+    def test_units_change_nothing(self):
+        feet = lines_of([[self.lines.xy / 0.3048]])
+        sizes = np.geomspace(50, 2000, 9)
+        here, there = (
+            box.count(self.lines, self.ladders(*sizes)),
+            box.count(feet, self.ladders(*sizes / 0.3048)),
+        )
+        assert np.array_equal(here.boxes, there.boxes)
+
+    def test_a_network_counts_as_one(self):
+        # a river and its tributary cut into reaches cover the same boxes as uncut
+        river, branch = self.lines.xy, self.lines.xy[:900] @ [[0, 1], [-1, 0]]
+        reaches = lines_of([[river[:2000], river[1999:], branch[:400], branch[399:]], [river, branch]])
+        found = box.count(reaches, self.ladders(100.0, 800.0, features=2))
+        assert np.array_equal(found.boxes[:2], found.boxes[2:])
+
+    def test_boxes_beyond_the_tables_are_left_out(self, monkeypatch):
+        monkeypatch.setattr(box, "MOST_TILES", 50)
+        found = box.count(self.lines, self.ladders(1.0, 2000.0))
+        assert np.isnan(found.boxes[0])
+        assert found.boxes[1] > 0
+
+    @pytest.mark.parametrize("dimension", [1.0, 1.5, 1.9])
+    def test_tables_hold_every_tile(self, dimension):
+        lines = lines_of([[synthetic.random_koch(dimension, level=6, seed=2).xy]])
+        ladders = self.ladders(*np.geomspace(1e-4, 1, 9))
+        tiles = [grid_of([lines.xy + 1], size * 8)[0] for size in ladders.rulers]
+        assert (box._tiles(lines, ladders) >= tiles).all()
+
+    def test_counting_equals_its_interpreted_twin(self):
+        lines = lines_of(
+            [[np.random.default_rng(1).random((40, 2)) * 9], [[(0, 0), (5, 5)], [(1, 0), (9, 1)]]]
+        )
+        args = (
+            lines.xy,
+            lines.part_offsets,
+            lines.feature_offsets,
+            np.array([0, 2, 4]),
+            np.array([1.0, 2.0, np.nan, 3.0]),
+            box.GRID_SHIFTS,
+            30,
+        )
+        fast, slow = kernels.count_ladders(*args, tables()), kernels.count_ladders.py_func(*args, tables())
+        assert np.array_equal(fast[0], slow[0], equal_nan=True)
+        assert np.array_equal(fast[1], slow[1])
+
+
+def measured(xy, **options):
+    return box.BoxDimension().measure(lines_of([[xy]]), box.BoxOptions(**options))
+
+
+def turned(xy, angle):
+    return xy @ np.array([[np.cos(angle), np.sin(angle)], [-np.sin(angle), np.cos(angle)]])
+
+
+class TestDimensions:
+    @pytest.mark.parametrize(
+        ("curve", "error"),
+        [
+            (synthetic.koch(1.1, level=8), 0.02),
+            (synthetic.gosper_island(level=8), 0.025),
+            (synthetic.koch(level=8), 0.025),
+            (synthetic.minkowski_island(level=8), 0.04),
+            (synthetic.koch(1.4, level=8), 0.04),
+            (synthetic.quadratic_koch(2, level=5), 0.05),
+            (synthetic.dragon_boundary(level=16), 0.08),
+            (synthetic.gasket(level=9), 0.06),
+        ],
+    )
+    @pytest.mark.parametrize("angle", [0.0, 0.4])
+    def test_exact_curves_lie_in_their_interval(self, curve, error, angle):
+        values = measured(turned(curve.xy, angle) * 1e5)
+        assert values["box_dim"][0] == pytest.approx(curve.dimension, abs=error)
+        assert values["box_dim_low"][0] <= curve.dimension <= values["box_dim_high"][0]
+        assert values["box_verdict"][0] == "power-law"
+
+    @pytest.mark.parametrize("angle", [0.0, 0.1, pi / 4])
+    def test_straight_line_is_smooth(self, angle):
+        values = measured(turned(synthetic.line(vertices=20_001).xy, angle) * 1e5)
+        for name in ("box_dim", "box_information_dim", "box_correlation_dim"):
+            assert values[name][0] == pytest.approx(1, abs=0.01)
+        assert values["box_verdict"][0] == "smooth"
+
+    def test_meander_breaks_at_its_bend(self):
+        curve = synthetic.meander(1.2, bends=400).scaled(100)
+        values = measured(curve.xy)
+        assert values["box_verdict"][0] == "two-regime"
+        assert curve.breaks[0] / 2 < values["box_break_m"][0] < 2 * curve.breaks[0]
+
+    def test_uneven_mass_parts_the_dimensions(self):
+        # a straight kilometre of one line, and one of 99 lines drawn over each other: two unlike densities
+        thin, thick = [(0, 0), (1e3, 0)], [(1e3, 0), (2e3, 0)]
+        counts = box.count(lines_of([[thin, *[thick] * 99]]), Ladders(np.array([0, 1]), np.array([1e3])))
+        assert counts.paired[0] < counts.even[0] < counts.boxes[0]
+
+
+class TestMeasure:
+    def test_it_keeps_the_contract(self):
+        check_measure(box.BoxDimension)
+
+    def test_no_dimension_without_scales(self):
+        values = measured([(0, 0), (1, 0), (2, 1)])
+        assert np.isnan(values["box_dim"][0])
+        assert values["box_verdict"][0] == "too-few-scales"
+        assert "too few box sizes" in values["box_note"][0]
+
+    def test_globe_is_counted_in_cubes(self):
+        values = box.BoxDimension().measure(specimens()["three dimensions"], box.BoxOptions())
+        assert values["box_dim"][0] == pytest.approx(1, abs=0.02)  # an arc of a great circle
+        assert values["box_plane"].tolist() == ["three-dimensions"] * 2
+
+    def test_every_option_changes_the_result(self):
+        xy = synthetic.random_koch(1.3, level=6, seed=1).xy * 1e4
+        plain = measured(xy)
+        for key, value in (("size_min_m", 90.0), ("size_max_m", 900.0), ("rungs", 17), ("grids", 1)):
+            assert measured(xy, **{key: value})["box_dim"][0] != plain["box_dim"][0], key
+
+    def test_columns_are_those_that_are_filled(self):
+        names = [column.name for column in box.BoxDimension().columns(box.BoxOptions())]
+        assert list(measured(synthetic.koch(level=4).xy)) == names
+
+    def test_lines_along_cells_are_said_to_be(self):
+        shore = synthetic.traced(synthetic.random_koch(1.2, level=7, seed=1, island=True), 1 / 500)
+        values = measured(shore.xy * 1e5)
+        assert "raster cells" in values["box_note"][0]
+        assert values["box_size_min_m"][0] > 3 * 200
+
+    def test_sizes_out_of_order_are_refused(self):
+        with pytest.raises(ValueError, match=r"size-min-m \(9\) must be below size-max-m \(9\)"):
+            box.BoxOptions(size_min_m=9.0, size_max_m=9.0)
+
+
+class TestCells:
+    def test_gasket_has_three_to_the_power_of_boxes(self):
+        # ln 3 / ln 2: each halving of the box side triples the boxes
+        sizes = 2 ** np.arange(8)
+        found = count_cells(synthetic.carpet(synthetic.GASKET, level=10).cells, sizes)
+        assert found.boxes.tolist() == [3 ** (10 - k) for k in range(8)]
+        slope = np.polyfit(np.log(sizes), np.log(found.boxes), 1)[0]
+        assert -slope == pytest.approx(log2(3), rel=1e-12)
+
+    def test_carpet_has_eight_to_the_power_of_boxes_evenly_filled(self):
+        found = count_cells(synthetic.carpet(level=5).cells, 3 ** np.arange(5))
+        assert found.boxes.tolist() == [8 ** (5 - k) for k in range(5)]
+        # every box holds the same number of cells, so all dimensions agree
+        assert found.evenness == pytest.approx(found.boxes[:, None] * np.ones(2))
+
+    @settings(max_examples=30, deadline=None)
+    @given(st.integers(0, 2**32), st.integers(1, 30), st.integers(1, 30), st.integers(1, 9))
+    def test_strips_equal_brute_force(self, seed, rows, columns, strip):
+        rng = np.random.default_rng(seed)
+        cells = rng.random((rows, columns)) < 0.3
+        sizes = np.array([1, 2, 3, 7, 40])
+        counter = CellBoxCounter(rows, columns, sizes)
+        for start in range(0, rows, strip):
+            counter.add(cells[start : start + strip])
+        found = counter.counts()
+        for k, size in enumerate(sizes):
+            fewest = []
+            for down, right in counter._shifts[counter._sides == size]:
+                boxes = {((i + down) // size, (j + right) // size) for i, j in np.argwhere(cells)}
+                fewest.append(len(boxes))
+            assert found.grids[k][: len(fewest)].tolist() == fewest
+            assert found.boxes[k] == min(fewest)
+
+    def test_shares_are_those_of_the_cells(self):
+        cells = np.zeros((4, 4), bool)
+        cells[:2, :2] = True
+        cells[3, 3] = True
+        found = count_cells(cells, np.array([1, 2]))
+        p = np.array([4, 1]) / 5
+        assert found.evenness[0] == pytest.approx([5, 5])
+        assert found.evenness[1] == pytest.approx([np.exp(-np.sum(p * np.log(p))), 1 / np.sum(p**2)])
+
+    def test_absent_class_has_no_boxes(self):
+        found = count_cells(np.zeros((20, 20), bool))
+        assert (found.boxes == 0).all()
+        assert np.isnan(found.evenness).all()
+
+    def test_rows_must_fit(self):
+        with pytest.raises(ValueError, match="does not fit a map of 4 rows and 4 columns"):
+            CellBoxCounter(4, 4).add(np.ones((2, 5), bool))
+        with pytest.raises(ValueError, match="0 of 4 rows"):
+            CellBoxCounter(4, 4).counts()
+        with pytest.raises(ValueError, match="from 1 up"):
+            CellBoxCounter(4, 4, np.array([0, 1]))
+
+    def test_sizes_are_whole_and_geometric(self):
+        sizes = cell_sizes(8000, 9000)
+        assert sizes[0] == 1
+        assert sizes[-1] == 1000
+        assert np.diff(np.log(sizes[sizes > 40])).max() < 1.1 * log(10) / 12
+
+    def test_counting_rows_equals_its_interpreted_twin(self):
+        cells = np.random.default_rng(2).random((7, 9)) < 0.4
+        results = []
+        for call in (count_rows, count_rows.py_func):
+            found, below = np.zeros((2, 3)), np.zeros(8, np.int64)
+            sides, shifts = np.array([2, 4]), np.array([[1, 0], [0, 3]])
+            call(cells, 0, 7, sides, shifts, np.array([0, 5, 8]), np.zeros(10, np.int64), below, found)
+            results.append(found)
+        assert np.array_equal(*results)
+        assert results[0][0, 0] > 0
