@@ -6,15 +6,17 @@ import json
 from dataclasses import asdict
 from typing import Any
 
-from geofractal.measure import Column, Measure
+from geofractal.measure import CoverMeasure
+from geofractal.registry import AnyMeasure
 
 
-def as_dict(measure: Measure[Any]) -> dict[str, Any]:
+def as_dict(measure: AnyMeasure) -> dict[str, Any]:
     """Return a measure's word, title, formula, sources, options and columns as plain data.
 
-    The columns are those under default options, None where an option has no default.
+    The columns (of a measure of class maps: the quantities) are those under default options, None where an
+    option has no default.
     """
-    columns = _default_columns(measure)
+    held = "quantities" if isinstance(measure, CoverMeasure) else "columns"
     return {
         "measure": measure.name,
         "title": measure.title,
@@ -23,11 +25,11 @@ def as_dict(measure: Measure[Any]) -> dict[str, Any]:
         "needs": measure.needs,
         "version": measure.version,
         "options": _options(measure),
-        "columns": None if columns is None else [asdict(column) for column in columns],
+        held: _by_default(measure),
     }
 
 
-def as_lines(measure: Measure[Any]) -> list[str]:
+def as_lines(measure: AnyMeasure) -> list[str]:
     """Return the same as text."""
     told = as_dict(measure)
     text = [f"{told['measure']}: {told['title']}", f"  formula: {told['formula']}"]
@@ -38,14 +40,15 @@ def as_lines(measure: Measure[Any]) -> list[str]:
         text.append(f"    {option['key']} ({option['type']}; {default}): {option['meaning']}")
     if not told["options"]:
         text.append("    none")
-    text.append("  columns, under default options:")
-    for column in told["columns"] or ():
+    held = "quantities" if "quantities" in told else "columns"
+    text.append(f"  {held}, under default options:")
+    for column in told[held] or ():
         unit = f", {column['unit']}" if column["unit"] else ""
         text.append(f"    {column['name']} ({column['short']}; {column['kind']}{unit}): {column['meaning']}")
     return [*text, ""]
 
 
-def _options(measure: Measure[Any]) -> list[dict[str, Any]]:
+def _options(measure: AnyMeasure) -> list[dict[str, Any]]:
     schema = measure.options.model_json_schema(by_alias=True)
     return [
         {
@@ -74,7 +77,10 @@ def _type_text(schema: dict[str, Any]) -> str:
     return names.get(kind, str(kind))
 
 
-def _default_columns(measure: Measure[Any]) -> tuple[Column, ...] | None:
+def _by_default(measure: AnyMeasure) -> list[dict[str, Any]] | None:
+    """Return columns or quantities under default options."""
     if any(field.is_required() for field in measure.options.model_fields.values()):
         return None
-    return measure.columns(measure.options())
+    if isinstance(measure, CoverMeasure):
+        return [asdict(quantity) for quantity in measure.quantities(measure.options())]
+    return [asdict(column) for column in measure.columns(measure.options())]

@@ -1,19 +1,24 @@
 """The plug-in contract: what a measure is, what it is given and what it gives back.
 
 A measure is a stateless class named by an entry point of the group ``geofractal.measures``; the
-shipped ones use the same door as anybody else's. It never opens a file: the batch hands it a chunk of
-projected lines and takes one value per feature and column.
+shipped ones use the same door as anybody else's. It never opens a file: the batch hands a `Measure` a chunk
+of projected lines and takes one value per feature and column, and a `CoverMeasure` a class map with its
+zones and takes a table of figures.
 """
 
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
+from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import ClassVar, Generic, Literal, TypeVar
+from typing import TYPE_CHECKING, Any, ClassVar, Generic, Literal, Protocol, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 from pydantic import BaseModel, ConfigDict
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -143,3 +148,142 @@ class Measure(ABC, Generic[O]):
         """Return the text column that says why a figure is missing or limited."""
         meaning = "why a figure is missing or limited; null where nothing is to be said"
         return Column(f"{self.stem}_note", f"{self.stem[:5]}_note", "text", "", meaning)
+
+
+FIGURE_COLUMNS = (
+    "reporting_unit",
+    "cover",
+    "quantity",
+    "border_rule",
+    "cell_size_m",
+    "estimate",
+    "low",
+    "high",
+    "unit",
+    "note",
+)
+"""Columns of the table of figures: one row a reporting unit (zone or whole map), class and quantity."""
+
+WHOLE_MAP = "whole map"
+"""Reporting unit of figures that are not those of a zone."""
+
+GROUPS = ("amount", "border", "interior", "separation", "connectedness", "scaling")
+"""What a quantity is about."""
+
+
+@dataclass(frozen=True, slots=True)
+class Quantity:
+    """One figure of a class: a word of the table of figures, and what a reviewer must know of it.
+
+    Attributes
+    ----------
+    name : as the table has it: whole words in snake case, without the unit
+    short : at most seven letters, for columns of zones in formats that hold ten bytes
+    group : one of `GROUPS`
+    unit : empty where it has none
+    kind : ``number``, or ``text`` for a word such as a verdict: the table's ``estimate`` is then null and
+        its ``note`` is the word
+    interval : whether ``low`` and ``high`` are filled
+    border_rules : what the table's ``border_rule`` may say, a row each; empty where it says nothing
+    """
+
+    name: str
+    short: str
+    group: str
+    unit: str
+    meaning: str
+    formula: str = ""
+    source: str = ""
+    kind: Literal["number", "text"] = "number"
+    interval: bool = False
+    border_rules: tuple[str, ...] = ()
+
+
+class CoverPatches(Protocol):
+    """Patches of a class map, and the zones that were told apart while they were found.
+
+    Attributes
+    ----------
+    table : as `geofractal.raster_patches` returns; ``zone`` is the number of a zone, -1 in none, -2 in
+        several
+    zones : numbers of the zones told apart; zones that overlap come one after the other
+    """
+
+    table: pd.DataFrame
+    zones: tuple[int, ...]
+
+
+class CoverMap(Protocol):
+    """A class map that was opened, with its zones and barriers.
+
+    Attributes
+    ----------
+    raster : the map itself: its ``grid``, its ``legend`` and ``strips()``, which may be read again and again;
+        None for a layer of polygons
+    zones : `geofractal.landcover.zones.Zones` on the map's grid, None where there are none
+    barriers : what cuts links between cells, None where there is none
+    groups : names for several classes taken together, and those classes
+    covers : classes and groups that are asked for; empty for all of them
+    """
+
+    @property
+    def raster(self) -> Any: ...  # noqa: D102 - told above
+
+    @property
+    def zones(self) -> Any: ...  # noqa: D102 - told above
+
+    @property
+    def barriers(self) -> Any: ...  # noqa: D102 - told above
+
+    @property
+    def groups(self) -> dict[str, tuple[str, ...]]: ...  # noqa: D102 - told above
+
+    @property
+    def covers(self) -> tuple[str, ...]: ...  # noqa: D102 - told above
+
+    def patches(self, *, neighbours: int, perimeter: str, map_edge: bool) -> Iterator[CoverPatches]:
+        """Yield the patches of the covers asked for, whole, once for each set of zones without overlap."""
+
+
+@dataclass(frozen=True, slots=True)
+class CoverResult:
+    """What a measure of class maps found.
+
+    Attributes
+    ----------
+    figures : columns `FIGURE_COLUMNS`
+    patches : one row a patch, None where none were asked for
+    """
+
+    figures: pd.DataFrame
+    patches: pd.DataFrame | None = None
+
+
+class CoverMeasure(ABC, Generic[O]):
+    """A measure of class maps: a table of figures by reporting unit and class.
+
+    Class attributes are those of `Measure`, and
+
+    from_polygons : whether the patches of a polygon layer will do, for which `CoverMap.raster` is None
+    """
+
+    name: ClassVar[str]
+    title: ClassVar[str]
+    formula: ClassVar[str]
+    sources: ClassVar[tuple[str, ...]]
+    stem: ClassVar[str]
+    needs: ClassVar[Literal["cover"]] = "cover"
+    from_polygons: ClassVar[bool] = False
+    version: ClassVar[int] = 1
+    options: ClassVar[type[Options]]
+
+    @abstractmethod
+    def quantities(self, options: O) -> tuple[Quantity, ...]:
+        """Return what the table of figures holds under these options."""
+
+    @abstractmethod
+    def measure(self, cover: CoverMap, options: O) -> CoverResult:
+        """Measure a class map. Pure: the same map and options give the same table, however it is cut.
+
+        A figure that is not deserved is null and its note says why; that never raises.
+        """

@@ -13,19 +13,39 @@ from importlib.metadata import EntryPoint, entry_points
 from typing import Any, get_args
 
 from geofractal.errors import GeofractalWarning, MeasureError
-from geofractal.measure import Column, Measure, Options
+from geofractal.measure import GROUPS, Column, CoverMeasure, Measure, Options, Quantity
 
 GROUP = "geofractal.measures"
 
-UNITS = ("", "m", "km", "m2", "ha", "km2", "m^D", "percent", "degrees", "km/km2", "1/km2", "1/1000 km2")
+UNITS = (
+    "",
+    "m",
+    "km",
+    "m2",
+    "ha",
+    "km2",
+    "m^D",
+    "m^(1-D)",
+    "percent",
+    "degrees",
+    "km/km2",
+    "1/km2",
+    "1/1000 km2",
+)
 """Units that a column may have; a plain word among them also ends the column's name."""
 
 REQUEST_KEYS = ("measure", "of", "prefix")
 """Keys of a measure's entry in a batch file that are not its own options."""
 
+COVER_KEYS = (*REQUEST_KEYS, "covers", "zones", "barriers", "class-column")
+"""The same for measures of class maps."""
+
+AnyMeasure = Measure[Any] | CoverMeasure[Any]
+
 _MEASURE_WORD = re.compile(r"[a-z][a-z0-9]*(-[a-z0-9]+)*")
 _COLUMN_NAME = re.compile(r"[a-z][a-z0-9]*(_[a-z0-9]+)*")
 _SHORT_NAME = re.compile(r"[a-z][a-z0-9_]{0,9}")
+_SHORT_QUANTITY = re.compile(r"[a-z][a-z0-9_]{0,6}")
 _KINDS = get_args(inspect.get_annotations(Column, eval_str=True)["kind"])
 
 
@@ -43,8 +63,36 @@ def measure_names() -> tuple[str, ...]:
     return tuple(_entries())
 
 
-@cache
 def load_measure(name: str) -> Measure[Any]:
+    """Return the measure of lines of that word.
+
+    Raises
+    ------
+    MeasureError
+        as `load_any_measure`, and where it measures something else
+    """
+    measure = load_any_measure(name)
+    if not isinstance(measure, Measure):
+        raise MeasureError(f"Measure {name!r} measures class maps, not lines.")
+    return measure
+
+
+def load_cover_measure(name: str) -> CoverMeasure[Any]:
+    """Return the measure of class maps of that word.
+
+    Raises
+    ------
+    MeasureError
+        as `load_any_measure`, and where it measures something else
+    """
+    measure = load_any_measure(name)
+    if not isinstance(measure, CoverMeasure):
+        raise MeasureError(f"Measure {name!r} measures lines, not class maps.")
+    return measure
+
+
+@cache
+def load_any_measure(name: str) -> AnyMeasure:
     """Return the measure of that word.
 
     Raises
@@ -67,7 +115,7 @@ def load_measure(name: str) -> Measure[Any]:
     try:
         measure_class = entries[0].load()
         check_measure_class(measure_class, name)
-        measure: Measure[Any] = measure_class()
+        measure: AnyMeasure = measure_class()
     except MeasureError:
         raise
     except Exception as error:
@@ -76,19 +124,19 @@ def load_measure(name: str) -> Measure[Any]:
     return measure
 
 
-def load_measures() -> dict[str, Measure[Any]]:
+def load_measures() -> dict[str, AnyMeasure]:
     """Return every measure that loads, by word; each one that does not is named in a warning."""
     loaded = {}
     for name in measure_names():
         try:
-            loaded[name] = load_measure(name)
+            loaded[name] = load_any_measure(name)
         except MeasureError as error:
             warnings.warn(f"A plug-in is left out. {error}", GeofractalWarning, stacklevel=2)
     return loaded
 
 
 def check_measure_class(measure_class: Any, name: str | None = None) -> None:
-    """Check a class against the contract of `geofractal.measure.Measure`.
+    """Check a class against the contract of `geofractal.measure.Measure` or `CoverMeasure`.
 
     Parameters
     ----------
@@ -100,13 +148,14 @@ def check_measure_class(measure_class: Any, name: str | None = None) -> None:
     MeasureError
         with everything that is wrong with it
     """
-    if not (isinstance(measure_class, type) and issubclass(measure_class, Measure)):
+    if not (isinstance(measure_class, type) and issubclass(measure_class, Measure | CoverMeasure)):
         raise MeasureError(
-            f"Measure {name!r}: {measure_class!r} is not a subclass of geofractal.measure.Measure."
+            f"Measure {name!r}: {measure_class!r} is not a subclass of geofractal.measure.Measure, nor of "
+            "CoverMeasure."
         )
     faults = _class_faults(measure_class, name or getattr(measure_class, "name", None))
     if not faults:
-        faults = _default_column_faults(measure_class)
+        faults = _default_faults(measure_class)
     if faults:
         place = f"{measure_class.__module__}.{measure_class.__qualname__}"
         raise MeasureError(f"Measure {name!r} ({place}) breaks the contract: {'; '.join(faults)}.")
@@ -127,6 +176,29 @@ def columns_of(measure: Measure[Any], options: Options) -> tuple[Column, ...]:
     return columns
 
 
+def quantities_of(measure: CoverMeasure[Any], options: Options) -> tuple[Quantity, ...]:
+    """Return a measure's quantities under these options, checked.
+
+    Raises
+    ------
+    MeasureError
+        where they break the contract
+    """
+    quantities = tuple(measure.quantities(options))
+    faults = quantity_faults(quantities)
+    if faults:
+        raise MeasureError(f"Measure {measure.name!r} breaks the contract: {'; '.join(faults)}.")
+    return quantities
+
+
+def quantity_faults(quantities: Sequence[Quantity]) -> list[str]:
+    """Return what is wrong with a set of quantities."""
+    faults = [fault for quantity in quantities for fault in _one_quantity_faults(quantity)]
+    counts = Counter(quantity.name for quantity in quantities)
+    faults += [f"quantity {name!r} stands twice" for name, count in counts.items() if count > 1]
+    return faults if quantities else ["there is no quantity"]
+
+
 def column_faults(columns: Sequence[Column], note: str) -> list[str]:
     """Return what is wrong with a set of columns that has a note column of this name."""
     faults = [fault for column in columns for fault in _one_column_faults(column)]
@@ -139,7 +211,7 @@ def column_faults(columns: Sequence[Column], note: str) -> list[str]:
     return faults
 
 
-def _class_faults(measure_class: type[Measure[Any]], name: str | None) -> list[str]:
+def _class_faults(measure_class: type[AnyMeasure], name: str | None) -> list[str]:
     faults = []
     if inspect.isabstract(measure_class):
         faults.append(f"it does not define {', '.join(sorted(measure_class.__abstractmethods__))}")
@@ -152,14 +224,16 @@ def _class_faults(measure_class: type[Measure[Any]], name: str | None) -> list[s
         for attribute in ("title", "formula", "sources", "stem")
         if not getattr(measure_class, attribute, None)
     ]
-    if measure_class.needs != "lines":
-        faults.append(f"needs is {measure_class.needs!r}; allowed: 'lines'")
+    allowed = "lines" if issubclass(measure_class, Measure) else "cover"
+    if measure_class.needs != allowed:
+        faults.append(f"needs is {measure_class.needs!r}; allowed: {allowed!r}")
     if not (isinstance(measure_class.version, int) and measure_class.version >= 1):
         faults.append(f"version is {measure_class.version!r}; allowed: a whole number from 1")
-    return faults + _options_faults(getattr(measure_class, "options", None))
+    taken = REQUEST_KEYS if allowed == "lines" else COVER_KEYS
+    return faults + _options_faults(getattr(measure_class, "options", None), taken)
 
 
-def _options_faults(options: Any) -> list[str]:
+def _options_faults(options: Any, taken: Sequence[str]) -> list[str]:
     if not (isinstance(options, type) and issubclass(options, Options)):
         return [f"options is {options!r}; allowed: a subclass of geofractal.measure.Options"]
     faults = [
@@ -169,19 +243,39 @@ def _options_faults(options: Any) -> list[str]:
     ]
     for field in options.model_fields.values():
         key = field.alias or ""
-        if key in REQUEST_KEYS:
+        if key in taken:
             faults.append(f"the option {key!r} has the name of a key that every measure has")
         if not field.description:
             faults.append(f"the option {key!r} has no description")
     return faults
 
 
-def _default_column_faults(measure_class: type[Measure[Any]]) -> list[str]:
-    """Return the faults of the columns under default options, where the options have defaults."""
+def _default_faults(measure_class: type[AnyMeasure]) -> list[str]:
+    """Return the faults of columns or quantities under default options, where the options have defaults."""
     measure = measure_class()
     if any(field.is_required() for field in measure.options.model_fields.values()):
         return []
+    if isinstance(measure, CoverMeasure):
+        return quantity_faults(measure.quantities(measure.options()))
     return column_faults(measure.columns(measure.options()), measure.note_column().name)
+
+
+def _one_quantity_faults(quantity: Quantity) -> list[str]:
+    where = f"quantity {quantity.name!r}"
+    faults = []
+    if not _COLUMN_NAME.fullmatch(quantity.name):
+        faults.append(f"{where} is not in snake case")
+    if not _SHORT_QUANTITY.fullmatch(quantity.short):
+        faults.append(f"{where}: the short name {quantity.short!r} is not snake case of at most seven bytes")
+    if quantity.group not in GROUPS:
+        faults.append(f"{where}: the group is {quantity.group!r}; allowed: {', '.join(GROUPS)}")
+    if quantity.kind not in {"number", "text"}:
+        faults.append(f"{where}: the kind is {quantity.kind!r}; allowed: number, text")
+    if quantity.unit not in UNITS:
+        faults.append(f"{where}: the unit {quantity.unit!r} is unknown; allowed: {', '.join(UNITS[1:])}")
+    if not quantity.meaning.strip():
+        faults.append(f"{where} has no meaning")
+    return faults
 
 
 def _one_column_faults(column: Column) -> list[str]:

@@ -29,7 +29,7 @@ def install_example(folder):
 def forget():
     """Make the registry look again at what is installed."""
     registry._entries.cache_clear()
-    registry.load_measure.cache_clear()
+    registry.load_any_measure.cache_clear()
 
 
 def open_folder(folder, monkeypatch):

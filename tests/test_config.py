@@ -126,7 +126,7 @@ def test_what_is_left_out_has_the_stated_defaults(load):
             }
         },
         "projection": {"plane": "feature", "budget-percent": 0.5, "three-dimensions": True},
-        "outputs": {"folder": str(batch.outputs.folder), "formats": ["geopackage"]},
+        "outputs": {"folder": str(batch.outputs.folder), "formats": ["geopackage"], "tables": ["csv"]},
         "run": {"workers": "auto", "refusals": "keep"},
         "measures": [
             {
@@ -219,7 +219,11 @@ FAULTS = [
         "^branch: main-path",
         f"{STEP}.branch: unknown key 'branch'; allowed: {PREPARE_KEYS}; branches?",
     ),
-    ("{folder", "{^forlder", "outputs.forlder: unknown key 'forlder'; allowed: folder, formats; folder?"),
+    (
+        "{folder",
+        "{^forlder",
+        "outputs.forlder: unknown key 'forlder'; allowed: folder, formats, tables; folder?",
+    ),
     # missing keys
     ("batch: Bericht für 2026\n", "^", "batch: the key 'batch' is missing: title of the batch"),
     (

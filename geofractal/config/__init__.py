@@ -3,11 +3,13 @@
 from geofractal.config.load import load_config, wrong_kinds
 from geofractal.config.models import (
     Batch,
+    CoverRequest,
     Format,
     MeasureRequest,
     Outputs,
     Prepare,
     Projection,
+    RasterLayer,
     Run,
     VectorLayer,
 )
@@ -15,11 +17,13 @@ from geofractal.config.schema import json_schema
 
 __all__ = [
     "Batch",
+    "CoverRequest",
     "Format",
     "MeasureRequest",
     "Outputs",
     "Prepare",
     "Projection",
+    "RasterLayer",
     "Run",
     "VectorLayer",
     "json_schema",

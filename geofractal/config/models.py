@@ -24,11 +24,11 @@ from pydantic import (
 )
 from pydantic_core import PydanticCustomError
 
-from geofractal.config.columns import prefixed
+from geofractal.config.columns import ZoneColumn, prefixed, zone_columns
 from geofractal.config.yaml_tree import KeyPath, YamlTree
 from geofractal.errors import LayerError, Problem
-from geofractal.measure import Column, Options
-from geofractal.registry import columns_of, load_measure
+from geofractal.measure import Column, Options, Quantity
+from geofractal.registry import columns_of, load_cover_measure, load_measure, quantities_of
 
 RASTER_ENDINGS = (".tif", ".tiff", ".vrt")
 """Endings of sources that are read as class maps."""
@@ -204,7 +204,7 @@ class RasterLayer(Section):
     )
 
 
-def _kind_of_layer(layer: Any) -> str:
+def kind_of_layer(layer: Any) -> str:
     """Return which model a layer's mapping is meant for, by the ending of its source."""
     source = layer.get("source") if isinstance(layer, dict) else getattr(layer, "source", None)
     return "raster" if str(source).lower().endswith(RASTER_ENDINGS) else "vector"
@@ -212,7 +212,7 @@ def _kind_of_layer(layer: Any) -> str:
 
 Layer = Annotated[
     Annotated[VectorLayer, Tag("vector")] | Annotated[RasterLayer, Tag("raster")],
-    Discriminator(_kind_of_layer),
+    Discriminator(kind_of_layer),
 ]
 
 
@@ -242,6 +242,48 @@ class MeasureRequest(RequestHead):
         return prefixed(columns_of(load_measure(self.measure), self.options), self.prefix)
 
 
+class CoverHead(RequestHead):
+    """The keys that the entry of every measure of class maps has."""
+
+    covers: tuple[Text, ...] = Field(
+        (),
+        description="classes and groups to measure, whose figures also become columns of the zones' copy; "
+        "left out, the table has all of them and the zones get no columns",
+    )
+    zones: Text | None = Field(
+        None, description="name of a layer of polygons, for each of which figures are given"
+    )
+    barriers: tuple[Text, ...] = Field(
+        (), description="names of layers of lines, such as roads, that cut what they cross"
+    )
+    class_column: Text | None = Field(
+        None, description="column that names the class of each polygon, where patches come from polygons"
+    )
+
+
+class CoverRequest(CoverHead):
+    """One measure asked of one class map."""
+
+    options: SerializeAsAny[Options] = Field(description="the measure's own options")
+
+    def quantities(self) -> tuple[Quantity, ...]:
+        """Return the figures that this request gives.
+
+        Raises
+        ------
+        MeasureError
+            where the measure cannot be loaded or its quantities break the contract
+        """
+        return quantities_of(load_cover_measure(self.measure), self.options)
+
+    def zone_columns(self) -> tuple[ZoneColumn, ...]:
+        """Return the columns that the zones' copy gains, prefix included; none unless covers are named."""
+        if self.zones is None or not self.covers:
+            return ()
+        stem = load_cover_measure(self.measure).stem
+        return zone_columns(self.covers, self.quantities(), stem, self.prefix)
+
+
 class Projection(Section):
     """On what plane distances are measured."""
 
@@ -266,6 +308,9 @@ class Outputs(Section):
     )
     formats: tuple[Format, ...] = Field(
         ("geopackage",), min_length=1, description="formats of the copied layers"
+    )
+    tables: tuple[Literal["csv", "parquet"], ...] = Field(
+        ("csv",), min_length=1, description="formats of the tables of figures"
     )
 
 
@@ -293,7 +338,9 @@ class BatchSections(Section):
 class Batch(BatchSections):
     """One batch: layers in, the same layers with measured columns out."""
 
-    measures: tuple[MeasureRequest, ...] = Field(min_length=1, description="what is measured, of which layer")
+    measures: tuple[MeasureRequest | CoverRequest, ...] = Field(
+        min_length=1, description="what is measured, of which layer"
+    )
 
     _tree: YamlTree | None = PrivateAttr(None)
 
@@ -313,8 +360,12 @@ class Batch(BatchSections):
         return self._tree.path if self._tree else None
 
     def requests_of(self, layer: str) -> tuple[MeasureRequest, ...]:
-        """Return the measures asked of a layer, in the file's order."""
-        return tuple(request for request in self.measures if request.of == layer)
+        """Return the measures of lines asked of a layer, in the file's order."""
+        return tuple(r for r in self.measures if r.of == layer and isinstance(r, MeasureRequest))
+
+    def cover_requests_of(self, layer: str) -> tuple[CoverRequest, ...]:
+        """Return the measures of class maps asked of a layer, in the file's order."""
+        return tuple(r for r in self.measures if r.of == layer and isinstance(r, CoverRequest))
 
     def problem(self, at: KeyPath, said: str, *, allowed: str = "", near: str = "") -> Problem:
         """Return a problem at a path of keys such as ``("layers", "shore", "id")``, placed in the file."""

@@ -6,9 +6,9 @@ from typing import Any
 
 from pydantic import BaseModel
 
-from geofractal.config.models import Batch, BatchSections, RequestHead
-from geofractal.measure import Measure
-from geofractal.registry import load_measures
+from geofractal.config.models import Batch, BatchSections, CoverHead, RequestHead
+from geofractal.measure import CoverMeasure
+from geofractal.registry import AnyMeasure, load_measures
 
 DRAFT = "http://json-schema.org/draft-07/schema#"
 
@@ -33,9 +33,9 @@ def json_schema() -> dict[str, Any]:
     return {**head, **tidied, **head}  # the head first, and in its own words
 
 
-def _entry(measure: Measure[Any], definitions: dict[str, Any]) -> dict[str, Any]:
+def _entry(measure: AnyMeasure, definitions: dict[str, Any]) -> dict[str, Any]:
     """Return the schema of one measure's entry: the keys of every entry, then its own options."""
-    head = _schema_of(RequestHead, definitions)
+    head = _schema_of(CoverHead if isinstance(measure, CoverMeasure) else RequestHead, definitions)
     own = _schema_of(measure.options, definitions, f"{measure.name}.")
     word = {"const": measure.name, "description": measure.title}
     return {
