@@ -9,8 +9,8 @@ from hypothesis.extra import numpy as arrays
 from scipy import ndimage
 
 from geofractal.errors import ConfigError
-from geofractal.kernels import patches as kernels
-from geofractal.kernels.patches import LINES
+from geofractal.kernels import patch_retire, patch_rings, patch_tables, patches
+from geofractal.kernels.patch_tables import LINES
 from geofractal.landcover import labelling
 from geofractal.landcover.labelling import SEVERAL_ZONES, label_patches
 
@@ -204,25 +204,26 @@ class TestAgainstWholeMaps:
             list(label_patches(mixed))
 
 
+KERNELS = {
+    patch_tables: ("find", "join", "span", "upright"),
+    patch_rings: ("find", "join", "join_rings", "new_ring", "ring_end", "settle_rings", "span", "upright"),
+    patch_retire: ("group_pieces", "join", "retire", "settle"),
+    patches: ("barred_length", "find", "find_runs", "join_rings", "label_rows", "linked", "span", "upright"),
+    labelling: ("group_pieces", "label_rows", "retire", "settle", "settle_rings"),
+}
+
+
 @given(small_maps, st.sampled_from([4, 8]))
 def test_compiled_kernels_equal_their_interpreted_twins(codes, neighbours):
-    names = (
-        "find",
-        "find_runs",
-        "span",
-        "upright",
-        "linked",
-        "barred_length",
-        "join",
-        "new_ring",
-        "ring_end",
-    )
-    compiled = label(codes, 3, neighbours=neighbours, outlines=True, zones=codes % 2)
+    cuts = (np.indices(codes.shape).sum(axis=0) % 5).astype(np.uint8)
+    given_to_both = {"neighbours": neighbours, "outlines": True, "zones": codes % 2, "cuts": cuts}
+    compiled = label(codes, 3, **given_to_both)
     with pytest.MonkeyPatch.context() as patch:
-        for name in (*names, "join_rings", "label_rows", "settle", "settle_rings", "group_pieces", "retire"):
-            patch.setattr(kernels, name, getattr(kernels, name).py_func)
+        for module, names in KERNELS.items():
+            for name in names:
+                patch.setattr(module, name, getattr(module, name).py_func)
         with np.errstate(over="ignore"):
-            twins = label(codes, 3, neighbours=neighbours, outlines=True, zones=codes % 2)
+            twins = label(codes, 3, **given_to_both)
     for one, other in zip(compiled, twins, strict=True):
         assert np.array_equal(one, other)
 

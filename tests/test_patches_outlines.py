@@ -11,6 +11,8 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as arrays
 
 from geofractal.kernels import outlines as kernels
+from geofractal.kernels import patches
+from geofractal.landcover import labelling
 from geofractal.landcover.labelling import label_patches
 from geofractal.landcover.outlines import patch_polygons, split_at_repeats
 from geofractal.patches import raster_patches
@@ -59,6 +61,10 @@ def test_compiled_kernels_equal_their_interpreted_twins(codes):
     compiled = kernels.row_edges(runs)
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(kernels, "boundary", kernels.boundary.py_func)
+        patch.setattr(patches, "keep_run", patches.keep_run.py_func)
+        patch.setattr(labelling, "label_rows", patches.label_rows.py_func)
+        twins = [part.runs for part in label_patches(strips(codes, 3), runs=True)]
+        assert np.array_equal(np.concatenate(twins), runs)
         assert np.array_equal(kernels.row_edges.py_func(runs), compiled)
     following = np.random.default_rng(0).permutation(9)
     for one, other in zip(kernels.rings_of(following), kernels.rings_of.py_func(following), strict=True):

@@ -1,9 +1,6 @@
 """Label a class map row by row: runs of equal cells, joined from row to row, summed as they are met.
 
-A *piece* is a set of linked cells of one class and one zone. Every piece owns a line of whole-number sums
-(`LINES`); pieces found to be one are joined in a forest whose roots are the smallest labels, hence those of
-the first cell in scan order. `label_rows` goes on until the table of labels is full; `retire` then hands
-out the pieces that no run of the last row belongs to and renumbers the others.
+`label_rows` goes on until a table is full; `geofractal.kernels.patch_retire.retire` then makes room.
 """
 
 from __future__ import annotations
@@ -12,75 +9,41 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.kernels.jit import kernel
-
-Ints = NDArray[np.int64]
-
-LINES = (
-    "class",
-    "zone",
-    "first_row",
-    "first_column",
-    "last_row",
-    "left_column",
-    "right_column",
-    "cells",
-    "area",
-    "edge",
-    "border_edge",
-    "zone_edge",
-    "barrier_edge",
-    "corners",
-    "outer_edge",
-    "filled_area",
-    "holes",
+from geofractal.kernels.patch_rings import join_rings
+from geofractal.kernels.patch_tables import (
+    AREA,
+    BARRIER,
+    BORDER,
+    CELLS,
+    CLASS,
+    CORNERS,
+    CUT_DOWN,
+    CUT_DOWN_LEFT,
+    CUT_DOWN_RIGHT,
+    CUT_RIGHT,
+    EDGE,
+    FIRST_COLUMN,
+    FIRST_ROW,
+    KIND,
+    LABEL,
+    LAST_ROW,
+    LEFT,
+    N_KEPT,
+    N_LABELS,
+    N_LINKS,
+    N_RINGS,
+    N_RUNS,
+    PLACE,
+    RIGHT,
+    START,
+    STOP,
+    ZONE,
+    ZONE_EDGE,
+    Ints,
+    find,
+    span,
+    upright,
 )
-CLASS, ZONE, FIRST_ROW, FIRST_COLUMN, LAST_ROW, LEFT, RIGHT = range(7)
-CELLS, AREA, EDGE, BORDER, ZONE_EDGE, BARRIER, CORNERS, OUTER, FILLED, HOLES = range(7, 17)
-SUMS_FROM = CELLS
-
-START, STOP, KIND, PLACE, LABEL, LEFT_RING, RIGHT_RING, PAIRS, LAST_BELOW = range(9)
-RUN = 9
-"""Columns of a run: first cell, cell after the last, class, zone, label, rings of its two ends, pairs with
-runs below that are still to come, and the last run below it so far."""
-
-N_LABELS, N_RUNS, N_LINKS, N_RINGS, N_KEPT = range(5)
-"""Places of the state: labels and rings in use, runs of the last row, links between zones, runs kept."""
-
-RING_LENGTH, RING_AREA, RING_LABEL = range(3)
-
-CUT_RIGHT, CUT_DOWN, CUT_DOWN_RIGHT, CUT_DOWN_LEFT = 1, 2, 4, 8
-
-
-@kernel
-def find(parent: Ints, i: int) -> int:
-    """Return the root of `i`, halving the path on the way."""
-    while parent[i] != i:
-        parent[i] = parent[parent[i]]
-        i = parent[i]
-    return i
-
-
-@kernel
-def join(parent: Ints, i: int, j: int) -> int:
-    """Make two trees one; the smaller root stays."""
-    a, b = find(parent, i), find(parent, j)
-    low, high = min(a, b), max(a, b)
-    parent[high] = low
-    return low
-
-
-@kernel
-def span(sizes: Ints, line: int, start: int, stop: int) -> int:
-    """Return the size of the cells start..stop-1 of a line of sizes, constant or running sums."""
-    if sizes.shape[1] == 1:
-        return int(sizes[line, 0] * (stop - start))
-    return int(sizes[line, stop] - sizes[line, start])
-
-
-@kernel
-def upright(height: Ints, line: int, column: int) -> int:
-    """Return the length of the vertical cell edge at a column."""
-    return int(height[line, 0] if height.shape[1] == 1 else height[line, column])
 
 
 @kernel
@@ -134,90 +97,6 @@ def barred_length(cuts: NDArray[np.uint8], width: Ints, line: int, start: int, s
         if cuts[c] & CUT_DOWN:
             total += span(width, line, c, c + 1)
     return total
-
-
-@kernel
-def ring_end(rings: Ints, ring: int, sign: int, column: int, row_line: int, area: Ints, height: Ints) -> None:
-    """Add the vertical end of a run to a ring: its length, and the signed area to its left."""
-    rings[ring, RING_LENGTH] += upright(height, row_line, column)
-    rings[ring, RING_AREA] += sign * span(area, row_line, 0, column)
-
-
-@kernel
-def join_rings(
-    upper: Ints,
-    n_upper: int,
-    lower: Ints,
-    n_lower: int,
-    pairs: Ints,
-    n_pairs: int,
-    width: Ints,
-    edge_line: int,
-    area: Ints,
-    height: Ints,
-    row_line: int,
-    rings: Ints,
-    ring_parent: Ints,
-    state: Ints,
-) -> None:
-    """Continue the closed outlines of all pieces from one row of runs to the next.
-
-    Linked pairs of upper and lower runs come in the order of the lower ones. Two pairs that share a run
-    enclose a gap, which closes or opens there; the outer ends of a chain of pairs continue downwards.
-    """
-    for j in range(n_lower):
-        lower[LEFT_RING, j] = -1
-    for i in range(n_upper):
-        upper[PAIRS, i], upper[LAST_BELOW, i] = 0, -1
-    for t in range(n_pairs):
-        upper[PAIRS, pairs[t, 0]] += 1
-    for i in range(n_upper):
-        if upper[LABEL, i] >= 0 and upper[PAIRS, i] == 0:
-            ring = join(ring_parent, upper[LEFT_RING, i], upper[RIGHT_RING, i])
-            rings[ring, RING_LENGTH] += span(width, edge_line, upper[START, i], upper[STOP, i])
-    for t in range(n_pairs):
-        i, j = pairs[t, 0], pairs[t, 1]
-        if t > 0 and pairs[t - 1, 1] == j:
-            i0 = pairs[t - 1, 0]
-            ring = join(ring_parent, upper[RIGHT_RING, i0], upper[LEFT_RING, i])
-            here, there = upper[STOP, i0], upper[START, i]
-        elif upper[LAST_BELOW, i] >= 0:
-            j0 = upper[LAST_BELOW, i]
-            ring = new_ring(rings, ring_parent, state, lower[LABEL, j])
-            lower[RIGHT_RING, j0] = lower[LEFT_RING, j] = ring
-            here, there = lower[STOP, j0], lower[START, j]
-        else:
-            ring = find(ring_parent, upper[LEFT_RING, i])
-            lower[LEFT_RING, j] = ring
-            here, there = upper[START, i], lower[START, j]
-        rings[ring, RING_LENGTH] += span(width, edge_line, min(here, there), max(here, there))
-        upper[PAIRS, i] -= 1
-        upper[LAST_BELOW, i] = j
-        if upper[PAIRS, i] == 0 and (t + 1 == n_pairs or pairs[t + 1, 1] != j):
-            ring = find(ring_parent, upper[RIGHT_RING, i])
-            lower[RIGHT_RING, j] = ring
-            here, there = upper[STOP, i], lower[STOP, j]
-            rings[ring, RING_LENGTH] += span(width, edge_line, min(here, there), max(here, there))
-    for j in range(n_lower):
-        if lower[LABEL, j] < 0:
-            continue
-        if lower[LEFT_RING, j] < 0:
-            ring = new_ring(rings, ring_parent, state, lower[LABEL, j])
-            lower[LEFT_RING, j] = lower[RIGHT_RING, j] = ring
-            rings[ring, RING_LENGTH] += span(width, edge_line, lower[START, j], lower[STOP, j])
-        ring_end(rings, lower[LEFT_RING, j], -1, lower[START, j], row_line, area, height)
-        ring_end(rings, lower[RIGHT_RING, j], 1, lower[STOP, j], row_line, area, height)
-
-
-@kernel
-def new_ring(rings: Ints, ring_parent: Ints, state: Ints, label: int) -> int:
-    """Begin a ring of a piece."""
-    ring = int(state[N_RINGS])
-    state[N_RINGS] = ring + 1
-    ring_parent[ring] = ring
-    rings[ring, RING_LENGTH] = rings[ring, RING_AREA] = 0
-    rings[ring, RING_LABEL] = label
-    return ring
 
 
 @kernel
@@ -387,118 +266,3 @@ def label_rows(
         lower[:, :n_upper] = upper[:, :n_upper]
     state[N_RUNS], state[N_LABELS], state[N_LINKS] = n_upper, n_labels, n_links
     return row
-
-
-@kernel
-def settle(labels: Ints, parent: Ints, n: int) -> None:
-    """Point every label at its root and add its sums there."""
-    for i in range(n):
-        root = parent[parent[i]]
-        parent[i] = root
-        if root != i:
-            labels[root, LAST_ROW] = max(labels[root, LAST_ROW], labels[i, LAST_ROW])
-            labels[root, LEFT] = min(labels[root, LEFT], labels[i, LEFT])
-            labels[root, RIGHT] = max(labels[root, RIGHT], labels[i, RIGHT])
-            for k in range(SUMS_FROM, labels.shape[1]):
-                labels[root, k] += labels[i, k]
-
-
-@kernel
-def settle_rings(rings: Ints, ring_parent: Ints, labels: Ints, parent: Ints, runs: Ints, state: Ints) -> None:
-    """Give finished rings to their pieces: the one that runs round it, and holes; keep the others."""
-    n = state[N_RINGS]
-    number = np.full(n, -1, np.int64)
-    for j in range(state[N_RUNS]):
-        if runs[LABEL, j] >= 0:
-            for end in (LEFT_RING, RIGHT_RING):
-                runs[end, j] = find(ring_parent, runs[end, j])
-                number[runs[end, j]] = 0
-    kept = 0
-    for i in range(n):
-        root = ring_parent[ring_parent[i]]
-        ring_parent[i] = root
-        if root != i:
-            rings[root, RING_LENGTH] += rings[i, RING_LENGTH]
-            rings[root, RING_AREA] += rings[i, RING_AREA]
-    for i in range(n):
-        if ring_parent[i] != i:
-            continue
-        label = parent[rings[i, RING_LABEL]]
-        if number[i] == 0:
-            number[i] = kept
-            rings[kept, RING_LENGTH], rings[kept, RING_AREA] = rings[i, RING_LENGTH], rings[i, RING_AREA]
-            rings[kept, RING_LABEL] = label
-            kept += 1
-        elif rings[i, RING_AREA] > 0:
-            labels[label, OUTER] += rings[i, RING_LENGTH]
-            labels[label, FILLED] += rings[i, RING_AREA]
-        else:
-            labels[label, HOLES] += 1
-    for i in range(kept):
-        ring_parent[i] = i
-    for j in range(state[N_RUNS]):
-        if runs[LABEL, j] >= 0:
-            runs[LEFT_RING, j], runs[RIGHT_RING, j] = number[runs[LEFT_RING, j]], number[runs[RIGHT_RING, j]]
-    state[N_RINGS] = kept
-
-
-@kernel
-def group_pieces(parent: Ints, n: int, group: Ints, n_live: int, links: Ints, n_links: int) -> None:
-    """Find which pieces make one patch across zones; fill `group` with its smallest label, by label.
-
-    `group[:n_live]` gives the group of each piece that was alive before, numbered by any of its labels.
-    """
-    for i in range(n_live, n):
-        group[i] = i
-    for i in range(n):
-        join(group, i, parent[i])
-    for k in range(n_links):
-        join(group, links[k, 0], links[k, 1])
-    for i in range(n):
-        group[i] = group[group[i]]
-
-
-@kernel
-def retire(labels: Ints, parent: Ints, runs: Ints, rings: Ints, state: Ints) -> tuple[Ints, Ints, Ints]:
-    """Take out the settled pieces that no run of the last row belongs to; renumber the others in order.
-
-    Returns
-    -------
-    the lines of those taken out, the labels they had, and the labels that those who stay had
-    """
-    n = state[N_LABELS]
-    number = np.full(n, -1, np.int64)
-    for j in range(state[N_RUNS]):
-        if runs[LABEL, j] >= 0:
-            number[parent[runs[LABEL, j]]] = 0
-    stay, go = 0, 0
-    for i in range(n):
-        if parent[i] == i:
-            if number[i] == 0:
-                stay += 1
-            else:
-                go += 1
-    done, done_labels = np.empty((go, labels.shape[1]), np.int64), np.empty(go, np.int64)
-    kept = np.empty(stay, np.int64)
-    stay, go = 0, 0
-    for i in range(n):
-        if parent[i] != i:
-            continue
-        if number[i] == 0:
-            number[i] = stay
-            kept[stay] = i
-            labels[stay] = labels[i]
-            stay += 1
-        else:
-            done[go] = labels[i]
-            done_labels[go] = i
-            go += 1
-    for j in range(state[N_RUNS]):
-        if runs[LABEL, j] >= 0:
-            runs[LABEL, j] = number[parent[runs[LABEL, j]]]
-    for k in range(state[N_RINGS]):
-        rings[k, RING_LABEL] = number[rings[k, RING_LABEL]]
-    for i in range(stay):
-        parent[i] = i
-    state[N_LABELS], state[N_LINKS] = stay, 0
-    return done, done_labels, kept

@@ -14,8 +14,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.errors import ConfigError
-from geofractal.kernels import patches as kernels
-from geofractal.kernels.patches import LINES, SUMS_FROM
+from geofractal.kernels import patch_tables as tables
+from geofractal.kernels.patch_retire import group_pieces, retire, settle
+from geofractal.kernels.patch_rings import settle_rings
+from geofractal.kernels.patch_tables import LINES, SUMS_FROM
+from geofractal.kernels.patches import label_rows
 from geofractal.landcover.grid import CellSizes
 from geofractal.landcover.strips import NOT_COVERED, OUTSIDE, Strip
 
@@ -113,7 +116,7 @@ class _Labeller:
     def __init__(self, strip: Strip, *, eight: bool, outlines: bool, runs: bool) -> None:
         columns = strip.codes.shape[1]
         self.reach, self.outlines, self.zoned = int(eight), outlines, strip.zones is not None
-        self.upper = np.zeros((kernels.RUN, columns + 1), np.int64)
+        self.upper = np.zeros((tables.RUN, columns + 1), np.int64)
         self.lower, self.pairs = self.upper.copy(), np.zeros((2 * columns + 2, 2), np.int64)
         self.upper[:5, 0] = (0, columns, NOT_COVERED, 0, -1)  # above the map nothing is covered
         self.state = np.array([0, 1, 0, 0, 0], np.int64)
@@ -171,7 +174,7 @@ class _Labeller:
     ) -> Iterator[Finished]:
         corner, row, stuck = corner_savings(sizes), 0, -1
         while row < len(codes):
-            row = kernels.label_rows(
+            row = label_rows(
                 codes, zones, cuts, self.cuts_before, row, first_row, sizes.area, sizes.height, sizes.width,
                 corner, sizes.area_line, sizes.edge_line, self.reach, self.labels, self.parent,
                 self.links, self.rings, self.ring_parent, self.upper, self.lower, self.pairs, self.kept,
@@ -193,18 +196,16 @@ class _Labeller:
         self.kept = np.concatenate([self.kept, np.empty_like(self.kept)])
 
     def _retire(self) -> Finished:
-        n, n_links = int(self.state[kernels.N_LABELS]), int(self.state[kernels.N_LINKS])
-        kernels.settle(self.labels, self.parent, n)
+        n, n_links = int(self.state[tables.N_LABELS]), int(self.state[tables.N_LINKS])
+        settle(self.labels, self.parent, n)
         if self.outlines:
-            kernels.settle_rings(
-                self.rings, self.ring_parent, self.labels, self.parent, self.upper, self.state
-            )
+            settle_rings(self.rings, self.ring_parent, self.labels, self.parent, self.upper, self.state)
         group = self._room(n)
         if self.zoned:
             group[: len(self.group)] = self.group
-            kernels.group_pieces(self.parent, n, group, len(self.group), self.links, n_links)
+            group_pieces(self.parent, n, group, len(self.group), self.links, n_links)
         roots = self.parent[:n].copy() if len(self.kept) else self.parent
-        done, done_labels, kept = kernels.retire(self.labels, self.parent, self.upper, self.rings, self.state)
+        done, done_labels, kept = retire(self.labels, self.parent, self.upper, self.rings, self.state)
         if not self.zoned:
             order = _order(done)
             table, lines = PatchTable(done[order]), np.arange(len(done))
@@ -214,7 +215,7 @@ class _Labeller:
 
     def _finished_runs(self, roots: Ints, done_labels: Ints, kept: Ints) -> Ints:
         """Return the runs of finished patches, by line of the patch; hold back the others."""
-        runs = self.kept[: self.state[kernels.N_KEPT]]
+        runs = self.kept[: self.state[tables.N_KEPT]]
         line = np.empty(len(roots), np.int64)
         line[done_labels], line[kept] = np.arange(len(done_labels)), -1 - np.arange(len(kept))
         of = line[roots[runs[:, 3]]]
@@ -222,7 +223,7 @@ class _Labeller:
         order = goes[np.argsort(of[goes], kind="stable")]
         finished = np.column_stack([of[order], runs[order, :3]])
         stays = np.flatnonzero(of < 0)
-        self.state[kernels.N_KEPT] = len(stays)
+        self.state[tables.N_KEPT] = len(stays)
         self.kept[: len(stays)] = np.column_stack([runs[stays, :3], -1 - of[stays]])
         return finished
 

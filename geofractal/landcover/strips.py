@@ -7,16 +7,25 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from geofractal.kernels.patch_tables import CUT_DOWN, CUT_DOWN_LEFT, CUT_DOWN_RIGHT, CUT_RIGHT
 from geofractal.landcover.grid import CellSizes
+
+__all__ = [
+    "CUT_DOWN",
+    "CUT_DOWN_LEFT",
+    "CUT_DOWN_RIGHT",
+    "CUT_RIGHT",
+    "NOT_COVERED",
+    "OUTSIDE",
+    "Codes",
+    "Strip",
+]
 
 NOT_COVERED = -1
 """Class index of a cell without data (nodata, mask, outside the source)."""
 
 OUTSIDE = -1
 """Zone code of a cell in no zone."""
-
-CUT_RIGHT, CUT_DOWN, CUT_DOWN_RIGHT, CUT_DOWN_LEFT = 1, 2, 4, 8
-"""Bits of `Strip.cuts`: the links from a cell to its neighbours that a barrier removes."""
 
 Codes = NDArray[np.int16]
 
@@ -32,7 +41,8 @@ class Strip:
     sizes : true sizes of the cells and of their edges
     last : whether the raster ends with this strip
     zones : (rows, columns) zone of each cell, `OUTSIDE` in none; None where there are no zones
-    cuts : (rows, columns) removed links, bits `CUT_RIGHT` and so on; None where there are no barriers
+    cuts : (rows, columns) links from each cell to its neighbours that a barrier removes, as bits
+        `CUT_RIGHT`, `CUT_DOWN`, `CUT_DOWN_RIGHT`, `CUT_DOWN_LEFT`; None where there are no barriers
     """
 
     first_row: int
