@@ -9,7 +9,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from geofractal.api import divider_dimension, divider_ladder, run, sinuosity
+    from geofractal.api import box_dimension, divider_dimension, divider_ladder, run, sinuosity
     from geofractal.estimators.area_perimeter import area_perimeter_dimension, area_perimeter_residual
     from geofractal.estimators.number_area import number_area_exponent
     from geofractal.patches import polygon_patches, raster_patches, warping_effect
@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 __all__ = [
     "area_perimeter_dimension",
     "area_perimeter_residual",
+    "box_dimension",
     "divider_dimension",
     "divider_ladder",
     "number_area_exponent",
@@ -32,6 +33,7 @@ __all__ = [
 _HOMES = {
     "area_perimeter_dimension": "geofractal.estimators.area_perimeter",
     "area_perimeter_residual": "geofractal.estimators.area_perimeter",
+    "box_dimension": "geofractal.api",
     "divider_dimension": "geofractal.api",
     "divider_ladder": "geofractal.api",
     "number_area_exponent": "geofractal.estimators.number_area",

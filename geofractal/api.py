@@ -120,6 +120,53 @@ def divider_dimension(
     return _measured("divider-dimension", options, geometries, crs, prepare, plane)
 
 
+def box_dimension(
+    geometries: Geometries,
+    *,
+    crs: Any = None,
+    size_min_m: float | None = None,
+    size_max_m: float | None = None,
+    rungs: int | None = None,
+    grids: int | None = None,
+    boundaries: Literal["all", "outer"] = "all",
+    repair: bool = False,
+    edges: Edges = "straight",
+    budget_percent: float = 0.5,
+    three_dimensions: bool = True,
+) -> pd.DataFrame:
+    """Measure the box, information and correlation dimension of lines, networks or polygon boundaries.
+
+    Parameters
+    ----------
+    geometries, crs, boundaries, repair, edges, budget_percent, three_dimensions : as in `divider_dimension`;
+        all parts of a geometry count as one set, such as the reaches of a network
+    size_min_m, size_max_m, rungs : the ladder of box sizes, chosen from the data where left out
+    grids : shifted grids of which the one with the fewest boxes counts; all where left out
+
+    Returns
+    -------
+    pandas.DataFrame
+        one row per input, in order and with its index; columns as ``geofractal measures`` lists them
+
+    Raises
+    ------
+    ConfigError, LayerError
+        as `divider_dimension`
+
+    Examples
+    --------
+    >>> import shapely
+    >>> straight = shapely.LineString([(x, 0) for x in range(1001)])
+    >>> box_dimension([straight, None], crs="EPSG:32631")["box_verdict"][0]
+    'smooth'
+    """
+    options = {"size_min_m": size_min_m, "size_max_m": size_max_m, "rungs": rungs}
+    options |= {} if grids is None else {"grids": grids}
+    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
+    prepare = Prepare(boundaries=boundaries, repair=repair)
+    return _measured("box-dimension", options, geometries, crs, prepare, plane)
+
+
 def divider_ladder(
     geometries: Geometries,
     *,

@@ -9,6 +9,7 @@ import shapely
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
+import geofractal
 from geofractal import synthetic
 from geofractal.estimators import box
 from geofractal.estimators.box_cells import CellBoxCounter, cell_sizes, count_cells
@@ -337,6 +338,16 @@ class TestMeasure:
         values = measured(shore.xy * 1e5)
         assert "raster cells" in values["box_note"][0]
         assert values["box_size_min_m"][0] > 3 * 200
+
+    def test_frames_go_in_and_come_out(self):
+        shore = shapely.Polygon(synthetic.koch(level=6, island=True).xy * 1e5)
+        found = geofractal.box_dimension([shore, None, shapely.Point(0, 0)], crs="EPSG:2193")
+        assert found["box_dim"][0] == pytest.approx(log(4) / log(3), abs=0.03)
+        assert found["box_dim"].isna().tolist() == [False, True, True]
+        assert found["box_note"][1] == "missing geometry"
+        fewer = geofractal.box_dimension([shore], crs="EPSG:2193", size_min_m=2000, rungs=12, grids=1)
+        assert fewer["box_size_min_m"][0] == pytest.approx(2000)
+        assert fewer["box_rungs"][0] <= 12
 
     def test_sizes_out_of_order_are_refused(self):
         with pytest.raises(ValueError, match=r"size-min-m \(9\) must be below size-max-m \(9\)"):
