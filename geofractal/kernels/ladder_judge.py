@@ -59,6 +59,7 @@ class Constants(NamedTuple):
 
     fewest_steps: float
     fewest_ring_steps: float
+    sure_ring_steps: float
     sure_steps: float
     ramp: float
     fine_bias: float
@@ -69,6 +70,7 @@ class Constants(NamedTuple):
     own_long: float
     own_without: float
     ring: float
+    ring_doubt: float
     bend: float
     bias_doubt: float
     quantile: float
@@ -419,8 +421,9 @@ def _judge(
         own *= c.ring
     bends = _bends(w, x, z, mean_x, xx)
     doubt = c.bias_doubt * (row[0] - row[4])
+    closure = c.ring_doubt / (steps[-1] * span) if open_parts == 0.0 else 0.0
     row[19] = own
-    row[18] = np.sqrt(own * own + c.bend * c.bend * bends + doubt * doubt)
+    row[18] = np.sqrt(own * own + c.bend * c.bend * bends + doubt * doubt + closure * closure)
     row[12] = POWER_LAW
     _alternatives(row, w, x, z, residual, xx * max(own, 0.01 * gap) ** 2, c)
     if row[0] <= c.smooth_below and row[12] != TWO_REGIME:
@@ -461,12 +464,16 @@ def judge_ladders(
     n = len(offsets) - 1
     out = np.full((n, len(FIELDS)), np.nan)
     for i in range(n):
-        fewest = c.fewest_ring_steps if open_parts[i] == 0.0 else c.fewest_steps
+        ring = open_parts[i] == 0.0
         most = offsets[i + 1] - offsets[i]
         rx, ry, rsteps, rnoise = np.empty(most), np.empty(most), np.empty(most), np.empty(most)
         rtallies = np.empty((most, tallies.shape[1]))
         used = 0
         for q in range(offsets[i], offsets[i + 1]):
+            fewest = c.fewest_steps
+            if ring:
+                far = used > 0 and x[q] > rx[0] + np.log(10.0)
+                fewest = c.sure_ring_steps if far else c.fewest_ring_steps
             if usable[q] and steps[q] >= fewest and np.isfinite(y[q]):
                 rx[used], ry[used], rsteps[used], rnoise[used] = x[q], y[q], steps[q], noise[q]
                 for b in range(tallies.shape[1]):

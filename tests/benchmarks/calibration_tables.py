@@ -101,7 +101,7 @@ ONE_DIMENSION = {
     "percolation borders *": (1.75, lambda n, s: synthetic.percolation_border(vertices=n, seed=s)),
 }
 RINGS = {
-    "random Koch islands *": lambda d, n, s: synthetic.random_koch(
+    "random Koch islands": lambda d, n, s: synthetic.random_koch(
         d, level=max(1, round(np.log(n / 3) / np.log(4))), seed=s, island=True
     ),
     "closed trails": closed_trail,
@@ -267,9 +267,7 @@ def smooth_below(dimension: float, seed: int) -> Curve:
 
 
 def verdicts(curves: int) -> None:
-    print(
-        "\nVerdicts: share of each, median D, break over the true one, share within factor and interval"
-    )
+    print("\nVerdicts: share of each, median D, break over the true one, share within factor and interval")
     for case in verdict_cases(curves):
         found = judge_lines(lines_of(case.draws))[2]
         shares = np.bincount(found.verdict, minlength=5) / len(found)
