@@ -10,7 +10,7 @@ from affine import Affine
 
 from geofractal.errors import ConfigError, LayerError, SourceError
 from geofractal.landcover.strips import NOT_COVERED
-from geofractal.reader.raster import RasterOptions, open_raster
+from geofractal.reader.raster import RasterOptions, open_raster, strip_rows
 from geofractal.reader.raster_source import ClassMap
 
 UTM = "EPSG:32632"
@@ -316,6 +316,14 @@ class TestReferences:
         )
         names, _ = read(tmp_path / "m.vrt")
         assert names.tolist() == [["", "", "1", "1"]] * 2
+
+
+@pytest.mark.parametrize(
+    ("columns", "block", "rows"),
+    [(8_000, 256, 1_024), (1_000_000, 512, 8), (32_768, 128, 256), (32_768, 512, 171), (10**7, 1, 1)],
+)
+def test_strips_are_whole_blocks_or_even_parts_of_one(columns, block, rows):
+    assert strip_rows(columns, block) == rows
 
 
 def test_an_opened_raster_can_be_sent_to_another_process(tmp_path):

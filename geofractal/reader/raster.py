@@ -138,9 +138,11 @@ def open_raster(source: Path | ClassMap, options: RasterOptions | None = None) -
 
 
 def strip_rows(columns: int, block_rows: int) -> int:
-    """Return rows for one strip: whole blocks of the file where they are low enough."""
+    """Return rows for one strip: whole blocks of the file, or an even part of one, which GDAL caches."""
     rows = max(1, STRIP_CELLS // columns)
-    return rows if block_rows > 4 * rows else max(1, round(rows / block_rows)) * block_rows
+    if 2 * rows > block_rows:
+        return round(rows / block_rows) * block_rows
+    return math.ceil(block_rows / math.ceil(block_rows / rows))
 
 
 def _read_ahead(read: Callable[[], Iterator[Strip]]) -> Iterator[Strip]:

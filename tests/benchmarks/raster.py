@@ -123,7 +123,7 @@ def in_zones(strips: Iterator[Strip], rows: int, side: int) -> Iterator[Strip]:
     for strip in strips:
         down = (strip.first_row + np.arange(strip.rows)) * side // rows
         across = np.arange(strip.codes.shape[1]) * side // strip.codes.shape[1]
-        yield replace(strip, zones=(down[:, None] * side + across).astype(np.int32))
+        yield replace(strip, zones=(down * side).astype(np.int32)[:, None] + across.astype(np.int32))
 
 
 def work_patches(
