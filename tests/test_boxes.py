@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 import geofractal
 from geofractal import synthetic
 from geofractal.estimators import box
-from geofractal.estimators.box_cells import CellBoxCounter, cell_sizes, count_cells
+from geofractal.estimators.box_cells import CellBoxCounter, cell_dimensions, cell_sizes, count_cells
 from geofractal.kernels import boxes as kernels
 from geofractal.kernels.cell_boxes import count_rows
 from geofractal.kernels.ladder_judge import STRETCHES
@@ -397,9 +397,24 @@ class TestCells:
         assert found.evenness[1] == pytest.approx([np.exp(-np.sum(p * np.log(p))), 1 / np.sum(p**2)])
 
     def test_absent_class_has_no_boxes(self):
-        found = count_cells(np.zeros((20, 20), bool))
+        found = count_cells(np.zeros((200, 200), bool))
         assert (found.boxes == 0).all()
         assert np.isnan(found.evenness).all()
+        assert np.isnan(cell_dimensions(found)).all()
+
+    def test_full_map_has_dimension_two(self):
+        found = cell_dimensions(count_cells(np.ones((512, 512), bool), 2 ** np.arange(7)))
+        assert found == pytest.approx((2, 2, 2), rel=1e-12)
+
+    def test_too_few_sizes_have_no_dimension(self):
+        assert np.isnan(cell_dimensions(count_cells(np.ones((8, 8), bool), np.array([1, 2, 4])))).all()
+
+    @pytest.mark.parametrize(("side", "kept"), [(2, 3), (3, 6), (3, 8)])
+    def test_random_carpets(self, side, kept):
+        level = {2: 9, 3: 6}[side]
+        maps = [synthetic.random_carpet(side, kept, level=level, seed=seed) for seed in range(3)]
+        for one in maps:
+            assert cell_dimensions(count_cells(one.cells)) == pytest.approx((one.dimension,) * 3, abs=0.09)
 
     def test_rows_must_fit(self):
         with pytest.raises(ValueError, match="does not fit a map of 4 rows and 4 columns"):
@@ -411,7 +426,7 @@ class TestCells:
 
     def test_sizes_are_whole_and_geometric(self):
         sizes = cell_sizes(8000, 9000)
-        assert sizes[0] == 1
+        assert sizes[0] == 4
         assert sizes[-1] == 1000
         assert np.diff(np.log(sizes[sizes > 40])).max() < 1.1 * log(10) / 12
 
