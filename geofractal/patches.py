@@ -36,6 +36,8 @@ def raster_patches(
 ) -> pd.DataFrame:
     """Return the patches of a class map: connected cells of one class, one row a patch.
 
+    A map of the whole globe ends at its sides: patches are not joined across them.
+
     Parameters
     ----------
     raster : a path, or codes with transform and CRS

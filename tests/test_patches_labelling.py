@@ -181,12 +181,6 @@ class TestAgainstWholeMaps:
         for first, second in zip(calm, label(codes, 7, outlines=True, zones=zones), strict=True):
             assert np.array_equal(first, second)
 
-    def test_memory_holds_the_unfinished_only(self):
-        """Rows of their own class each: no table ever holds more than it must."""
-        codes = np.repeat(np.arange(500) % 2, 30).reshape(500, 30).astype(np.int16)
-        patches, _, _ = label(codes, 10)
-        assert len(patches) == 500
-
     def test_order_is_by_last_row_then_by_first_cell(self):
         codes = np.array([[0, 1, 0, 1], [0, 2, 2, 1], [3, 3, 3, 3]])
         patches, _, _ = label(codes, neighbours=4)

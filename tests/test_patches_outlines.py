@@ -71,6 +71,16 @@ def test_compiled_kernels_equal_their_interpreted_twins(codes):
         assert np.array_equal(one, other)
 
 
+def test_full_tables_change_nothing(monkeypatch):
+    """One patch that spans the map keeps all of its runs until the end."""
+    codes = np.zeros((40, 30), np.int16)
+    codes[1::2, ::2] = 1
+    calm = polygons(codes, 40, 8)
+    monkeypatch.setattr(labelling, "LABELS", 40)
+    for one, other in zip(calm, polygons(codes, 7, 8), strict=True):
+        assert one.equals(other)
+
+
 def test_a_walk_that_touches_itself_is_cut():
     eight = np.array([[0, 0], [1, 0], [1, 1], [2, 1], [2, 2], [1, 2], [1, 1], [0, 1]])
     loops = split_at_repeats(eight)

@@ -110,6 +110,15 @@ def label_patches(
         yield from labeller.finish()
 
 
+_TABLES = {
+    tables.N_LABELS: ("labels", "parent"),
+    tables.N_LINKS: ("links",),
+    tables.N_RINGS: ("rings", "ring_parent"),
+    tables.N_KEPT: ("kept",),
+}
+"""Tables of the labeller that may fill up, by the place of the state that tells how far."""
+
+
 class _Labeller:
     """Tables of one run of the kernels, and what is between two strips."""
 
@@ -187,13 +196,13 @@ class _Labeller:
             stuck = row
 
     def _grow(self) -> None:
-        """Double the tables, which the labels in use fill."""
-        self.labels = np.concatenate([self.labels, np.empty_like(self.labels)])
-        self.parent = np.concatenate([self.parent, np.empty_like(self.parent)])
-        self.links = np.concatenate([self.links, np.empty_like(self.links)])
-        self.rings = np.concatenate([self.rings, np.empty_like(self.rings)])
-        self.ring_parent = np.concatenate([self.ring_parent, np.empty_like(self.ring_parent)])
-        self.kept = np.concatenate([self.kept, np.empty_like(self.kept)])
+        """Double the tables that what is unfinished has filled."""
+        row = 3 * self.upper.shape[1]  # the most that one row can need
+        for place, names in _TABLES.items():
+            if self.state[place] + row > len(getattr(self, names[0])):
+                for name in names:
+                    table = getattr(self, name)
+                    setattr(self, name, np.concatenate([table, np.empty_like(table)]))
 
     def _retire(self) -> Finished:
         n, n_links = int(self.state[tables.N_LABELS]), int(self.state[tables.N_LINKS])
