@@ -105,6 +105,12 @@ class TestWhichPatches:
         assert found.patches_used.tolist() == [0, 0, 100, 100]
         assert found.patches_left_out_zone.tolist() == [100, 100, 0, 0]
 
+    def test_patches_of_unknown_perimeter(self):
+        area, perimeter = power_law(1.3)
+        perimeter[:7] = np.nan
+        found = area_perimeter_dimension(table(area, perimeter)).iloc[0]
+        assert (found.patches_used, found.patches_left_out_zone) == (393, 7)
+
     def test_filled_areas(self):
         area, perimeter = power_law(1.3)
         patches = table(area, perimeter, filled_area_m2=2 * area)

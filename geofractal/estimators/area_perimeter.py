@@ -78,7 +78,7 @@ def area_perimeter_dimension(
     ----------
     patches : table as of `geofractal.raster_patches` or `geofractal.polygon_patches`
     by : columns that make a group; with ``zone`` among them, patches across zone borders or in no zone
-        are left out
+        are left out, and always those across zone borders whose perimeter is not known
     smallest_cells : patches of fewer cells are left out, where the table has cells
     smallest_area_m2 : smaller patches are left out; a common size for sources that differ in scale
     edge_patches : whether patches that touch the map's edge are used
@@ -112,12 +112,13 @@ def area_perimeter_dimension(
         )
     rows = []
     for key, group in _groups(patches, by):
-        small = group[area] < smallest_area_m2
+        small = (group[area] < smallest_area_m2) | (group["perimeter_m"] == 0)
         if "cells" in group:
             small |= group["cells"] < smallest_cells
         edge = group["touches_edge"] & ~small & (not edge_patches)
-        astray = (group["zone"] < 0 if "zone" in by else group["touches_edge"] & False) & ~small & ~edge
-        used = group[~(small | edge | astray) & (group["perimeter_m"] > 0)]
+        astray = group["perimeter_m"].isna() | ("zone" in by and group["zone"] < 0)
+        astray &= ~small & ~edge
+        used = group[~(small | edge | astray)]
         cells = int(used["cells"].min()) if "cells" in used and len(used) else None
         figures = fit_patches(used[area].to_numpy(float), used["perimeter_m"].to_numpy(float), cells)
         counts = {"small": int(small.sum()), "edge": int(edge.sum()), "zone": int(astray.sum())}
