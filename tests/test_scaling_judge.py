@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from geofractal import synthetic
 from geofractal.calibration import judge_lines, lines_of
-from geofractal.kernels import ladder_judge
+from geofractal.kernels import ladder_evidence, ladder_fields, ladder_judge, ladder_models
 from geofractal.scaling.calibrated import BOX, DIVIDER
 from geofractal.scaling.judge import VERDICTS, Rungs, judge
 from geofractal.scaling.ladder import Ladders
@@ -182,7 +182,7 @@ def test_intervals_of_trails_hold_the_truth():
 def test_verdict_codes_and_constants_are_in_step():
     assert len(VERDICTS) == 5
     codes = ("POWER_LAW", "TWO_REGIME", "CURVED", "SMOOTH", "TOO_FEW")
-    assert [getattr(ladder_judge, code) for code in codes] == list(range(5))
+    assert [getattr(ladder_fields, code) for code in codes] == list(range(5))
     assert BOX._fields == DIVIDER._fields
     assert all(math.isfinite(value) for value in (*DIVIDER, *BOX))
     assert {field.name for field in fields(Rungs)} >= {"lengths", "steps", "tallies"}
@@ -193,9 +193,10 @@ def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
     curves += [synthetic.two_regimes(1.0, 1.3, fine_level=3, coarse_level=3, seed=1)]
     curves += [synthetic.fractional_trail(1.4, vertices=n, seed=n) for n in (60, 700)]
     ladders, rungs, compiled = judge_lines(lines_of(curves))
-    for name, function in list(vars(ladder_judge).items()):
-        if hasattr(function, "py_func"):
-            monkeypatch.setattr(ladder_judge, name, function.py_func)
+    for module in (ladder_evidence, ladder_models, ladder_judge):
+        for name, function in list(vars(module).items()):
+            if hasattr(function, "py_func"):
+                monkeypatch.setattr(module, name, function.py_func)
     monkeypatch.setattr("geofractal.scaling.judge.judge_ladders", ladder_judge.judge_ladders)
     interpreted = judge(ladders, rungs)
     for field in fields(compiled):

@@ -26,7 +26,8 @@ from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
-from geofractal.kernels.ladder_judge import FIELDS, judge_ladders
+from geofractal.kernels.ladder_fields import FIELDS
+from geofractal.kernels.ladder_judge import judge_ladders
 from geofractal.scaling.calibrated import BOX, DIVIDER
 from geofractal.scaling.ladder import scales_of
 
