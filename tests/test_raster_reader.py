@@ -158,10 +158,11 @@ class TestNotCovered:
         assert set(names.ravel()) == {"3", ""}
         assert (names == "3").sum() == pytest.approx(covered.sum(), rel=0.06)
 
-    def test_not_a_number(self, tmp_path):
+    @pytest.mark.parametrize("nodata", [np.nan, np.float32(-3.4028235e38), 0.5])
+    def test_numbers_that_are_no_code(self, tmp_path, nodata):
         codes = CODES.astype(np.float32)
-        codes[CODES == 0] = np.nan
-        names, _ = read(write(tmp_path / "a.tif", codes, nodata=np.nan), whole_numbers=True)
+        codes[CODES == 0] = nodata
+        names, _ = read(write(tmp_path / "a.tif", codes, nodata=float(nodata)), whole_numbers=True)
         assert np.array_equal(names != "", self.COVERED)
 
     def test_nodata_everywhere(self, tmp_path):
@@ -269,9 +270,7 @@ class TestReferences:
         codes = np.random.default_rng(1).integers(0, 9, (256, 256)).astype(np.uint8)
         path = write(tmp_path / "a.tif", codes, tiled=True, blockxsize=64, blockysize=64, compress="deflate")
         path.write_bytes(path.read_bytes()[: path.stat().st_size // 2])
-        with pytest.raises(
-            SourceError, match=r"read in rows \d+ to \d+, columns 0 to 255.*may be truncated"
-        ):
+        with pytest.raises(SourceError, match=r"read in rows \d+ to \d+, columns 0 to 255.*may be truncated"):
             read(path, strip_rows=64)
 
     def test_control_points_are_not_a_grid(self, tmp_path):

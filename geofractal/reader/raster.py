@@ -25,6 +25,7 @@ from geofractal.reader.raster_source import (
     check_band,
     horizontal_crs,
     name_of,
+    nodata_code,
     open_band,
     open_source,
     place_of,
@@ -128,9 +129,9 @@ def open_raster(source: Path | ClassMap, options: RasterOptions | None = None) -
         crs = horizontal_crs(own_crs, options.crs, name)
         grid = Grid(dataset.height, dataset.width, sound(transform, name), crs)
         named = own_names(dataset, options.band)
-        nodata = dataset.nodatavals[options.band - 1]
-        codes = () if nodata is None or not math.isfinite(nodata) else (int(nodata),)
-        legend = make_legend(options.classes, options.rest, (*codes, *options.nodata), named)
+        nodata = nodata_code(dataset.nodatavals[options.band - 1])
+        codes = options.nodata if nodata is None else (nodata, *options.nodata)
+        legend = make_legend(options.classes, options.rest, codes, named)
         chosen = choose_grid(grid, options.grid, options.budget_percent / 100, options.cell_size_m)
         block_rows = dataset.block_shapes[options.band - 1][0] if chosen is grid else WARPED_BLOCK
     rows = options.strip_rows or strip_rows(chosen.columns, block_rows)

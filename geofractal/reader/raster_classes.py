@@ -190,7 +190,7 @@ class Remapper:
     def _whole(self, values: NDArray[Any], first_row: int) -> NDArray[Any]:
         """Return whole numbers as such; anything else but nodata is an error."""
         nodata = [code for code, index in self.legend.codes.items() if index == NOT_COVERED]
-        rounded = np.rint(np.nan_to_num(values, nan=0.0, posinf=0.0, neginf=0.0))
+        rounded: NDArray[Any] = np.rint(np.nan_to_num(values, nan=0.0, posinf=0.0, neginf=0.0))
         broken = (rounded != values) & ~np.isin(values, np.array(nodata, float))
         if broken.any():
             row, column = np.argwhere(broken)[0]

@@ -62,6 +62,12 @@ def check_band(dataset: Any, band: int, name: str, *, whole_numbers: bool) -> No
         raise LayerError(f"{name} has control points in place of a transform; warp it first.")
 
 
+def nodata_code(value: float | None) -> int | None:
+    """Return the code of cells without data; None where there is none, or none that is whole."""
+    usable = value is not None and math.isfinite(value) and value == int(value) and abs(value) < 2**62
+    return int(value) if usable and value is not None else None
+
+
 def place_of(source: Path | ClassMap, dataset: Any) -> tuple[Any, Any]:
     """Return transform and CRS as the source states them; None where it states no CRS."""
     if isinstance(source, ClassMap):
@@ -161,7 +167,8 @@ class Band:
     @property
     def dtype(self) -> np.dtype[Any]:
         """Return the type of its codes."""
-        return np.dtype(self.dataset.dtypes[self.band - 1])
+        dtype: np.dtype[Any] = np.dtype(self.dataset.dtypes[self.band - 1])
+        return dtype
 
     def read(self, first: int, rows: int) -> tuple[NDArray[Any], NDArray[Any] | None]:
         """Return the codes of some rows, and their mask (0: not covered) where there is one."""
@@ -186,7 +193,7 @@ def open_band(source: Path | ClassMap, band: int, grid: Grid, warped_to: Grid | 
 
     with open_source(source) as dataset:
         flags, nodata = dataset.mask_flag_enums[band - 1], dataset.nodatavals[band - 1]
-        by_code = nodata is not None and math.isfinite(nodata)
+        by_code = nodata_code(nodata) is not None
         if warped_to is None:
             masked = MaskFlags.per_dataset in flags or MaskFlags.alpha in flags
             masked |= nodata is not None and not by_code
