@@ -3,16 +3,22 @@
 import os
 import shutil
 import sqlite3
+from dataclasses import replace
 from pathlib import Path
 
 import geopandas as gpd
 import numpy as np
 import pytest
 import shapely
-from batches import UTM, run, run_rivers, wiggle, write_gpkg
+from batches import UTM, run, run_rivers, wiggle, write_batch, write_gpkg
 
+from geofractal.batch import parts
+from geofractal.batch.parts import part_key
+from geofractal.batch.plan import parts_of, plan_batch
+from geofractal.config import load_config
 from geofractal.errors import ConfigError, OutputError
 from geofractal.progress import Progress
+from geofractal.reader import layers as source_layers
 
 DIVIDER = {"measure": "divider-dimension", "of": "rivers"}
 
@@ -251,3 +257,50 @@ def test_results_do_not_depend_on_the_number_of_workers(tmp_path, workers):
     _, together = run_rivers(tmp_path, lines, run={"workers": workers})
     assert together.equals(alone)
     assert len((tmp_path / "out" / "in.gpkg").read_bytes()) == len(first)
+
+
+class _StoppedError(Exception):
+    pass
+
+
+class _StopAfter(Progress):
+    def __init__(self, rows):
+        self.rows = rows
+
+    def advanced(self, stage):
+        if stage.done >= self.rows:
+            raise _StoppedError
+
+
+def test_a_stopped_run_keeps_its_parts_and_the_next_goes_on_from_them(tmp_path, monkeypatch):
+    monkeypatch.setattr(source_layers, "_BATCH_ROWS", (8, 10))
+    write_gpkg(tmp_path / "in.gpkg", [wiggle(i, vertices=40) for i in range(60)])
+    layers = {"rivers": {"source": "in.gpkg"}}
+    with pytest.raises(_StoppedError):
+        run(tmp_path, layers, [DIVIDER], progress=_StopAfter(30), run={"workers": 1})
+    assert [path.name for path in (tmp_path / "out").iterdir()] == [".geofractal-parts"]
+    kept = len([*(tmp_path / "out" / ".geofractal-parts").glob("*.arrow")])
+    assert 3 <= kept < 6
+    measured = []
+    real = parts.measure_part
+    monkeypatch.setattr(parts, "measure_part", lambda *given: measured.append(given) or real(*given))
+    run(tmp_path, layers, [DIVIDER], run={"workers": 1})
+    assert len(measured) == 6 - kept
+    resumed = (tmp_path / "out" / "in.gpkg").read_bytes()
+    run(tmp_path, layers, [DIVIDER], run={"workers": 1})
+    assert (tmp_path / "out" / "in.gpkg").read_bytes() == resumed
+    assert not (tmp_path / "out" / ".geofractal-parts").exists()
+
+
+def test_a_key_changes_with_rows_options_and_nothing_else(tmp_path):
+    write_gpkg(tmp_path / "in.gpkg", [wiggle(1), wiggle(2)])
+
+    def keys(**options):
+        file = write_batch(tmp_path, {"rivers": {"source": "in.gpkg"}}, [{**DIVIDER, **options}])
+        (layer,) = plan_batch(load_config(file)).layers
+        (part,) = parts_of(layer, tmp_path)
+        return part_key(layer.work, part), part_key(layer.work, replace(part, wkb=part.wkb[::-1]))
+
+    first, other_rows = keys()
+    assert keys() == (first, other_rows)
+    assert len({first, other_rows, *keys(rungs=9), *keys(prefix="new")}) == 6
