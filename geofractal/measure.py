@@ -199,7 +199,12 @@ class Quantity:
     border_rules: tuple[str, ...] = ()
 
 
-class CoverPatches(Protocol):
+Outline = Literal["cell-edges", "outer-cell-edges", "smoothed"]
+"""What a patch's perimeter is: all its cell edges, those without holes, or the line under them."""
+
+
+@dataclass(frozen=True, slots=True)
+class CoverPatches:
     """Patches of a class map, and the zones that were told apart while they were found.
 
     Attributes
@@ -241,7 +246,7 @@ class CoverMap(Protocol):
     @property
     def covers(self) -> tuple[str, ...]: ...  # noqa: D102 - told above
 
-    def patches(self, *, neighbours: int, perimeter: str, map_edge: bool) -> Iterator[CoverPatches]:
+    def patches(self, *, neighbours: int, perimeter: Outline, map_edge: bool) -> Iterator[CoverPatches]:
         """Yield the patches of the covers asked for, whole, once for each set of zones without overlap."""
 
 
@@ -252,11 +257,14 @@ class CoverResult:
     Attributes
     ----------
     figures : columns `FIGURE_COLUMNS`
-    patches : one row a patch, None where none were asked for
+    patches : one row a patch, as `CoverMap.patches` gave them and with further columns; None where none were
+        asked for
+    neighbours : by how many neighbours cells were joined to those patches
     """
 
     figures: pd.DataFrame
     patches: pd.DataFrame | None = None
+    neighbours: int = 8
 
 
 class CoverMeasure(ABC, Generic[O]):

@@ -30,7 +30,7 @@ UNITS = (
     "degrees",
     "km/km2",
     "1/km2",
-    "1/1000 km2",
+    "1/1000km2",
 )
 """Units that a column may have; a plain word among them also ends the column's name."""
 

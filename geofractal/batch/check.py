@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from math import ceil, isfinite
 
+from geofractal.batch.cover_plan import CoverPlan, CoverWork
 from geofractal.batch.plan import LayerPlan, Plan, plan_batch
 from geofractal.config.models import Batch
 from geofractal.errors import LayerError
@@ -33,6 +34,9 @@ class CheckReport:
         for layer in self.plan.layers:
             yield ""
             yield from _layer_lines(self.plan, layer)
+        for cover in self.plan.covers:
+            yield ""
+            yield from _cover_lines(self.plan, cover)
         for name, error in self.plan.failed.items():
             yield ""
             yield f"Layer {name}: cannot be measured"
@@ -57,8 +61,9 @@ def _layer_lines(plan: Plan, layer: LayerPlan) -> Iterator[str]:
     batches = ceil(info.features / info.rows_per_batch)
     parts = "groups" if layer.work.grouped else f"{batches:,} part{'s' if batches != 1 else ''}"
     yield f"  {info.driver}, {info.geometry}, {info.features:,} rows, at most about {vertices:,} vertices"
-    yield f"  work: {parts}, {len(layer.work.requests)} measure{'s' if len(layer.work.requests) != 1 else ''}"
-    yield from (f"  {line}" for line in _plane_lines(layer))
+    if layer.work.requests:
+        yield f"  work: {parts}, {_count(len(layer.work.requests), 'measure')}"
+        yield from (f"  {line}" for line in _plane_lines(layer))
     yield f"  {len(layer.columns)} new columns:"
     for column in layer.columns:
         unit = f" [{column.unit}]" if column.unit else ""
@@ -66,6 +71,38 @@ def _layer_lines(plan: Plan, layer: LayerPlan) -> Iterator[str]:
     for word in plan.batch.outputs.formats:
         yield f"  {word}: {plan.targets[layer.name, word]}"
         yield from (f"    not held: {loss}" for loss in plan.losses[layer.name, word])
+
+
+def _cover_lines(plan: Plan, cover: CoverPlan) -> Iterator[str]:
+    """Yield what is known of a class map before its cells are read."""
+    raster = cover.raster
+    yield f"{'Polygons' if raster is None else 'Class map'} {cover.name}: {cover.files[0]}"
+    if raster is not None:
+        grid, source, legend = raster.grid, raster.source_grid, raster.legend
+        width, height = grid.typical_cell
+        yield f"  CRS: {source.crs.name}"
+        yield f"  {grid.rows:,} rows and {grid.columns:,} columns of cells of {width:.4g} by {height:.4g} m"
+        told = f"  lengths are off by {_percent(source.distortion)} at most on its own grid"
+        warped = f", {_percent(grid.distortion)} on the {grid.plane} plane that it is warped to"
+        budget = f"; budget: {raster.options.budget_percent:g} %"
+        yield f"{told}{warped if cover.warped else ''}{budget}"
+        known = legend.names if legend.closed else [*dict.fromkeys(legend.own_names.values())]
+        yield f"  classes: {', '.join(known) or 'the codes that are met'}"
+        yield from (f"  group {name}: {', '.join(members)}" for name, members in cover.groups.items())
+    for work in cover.works:
+        yield from _work_lines(work)
+    yield from (f"  file: {target}" for target in cover.targets(plan.batch))
+
+
+def _work_lines(work: CoverWork) -> Iterator[str]:
+    request = work.request
+    zones = f" and each of the {work.zones.info.features:,} rows of {work.zones.name}" if work.zones else ""
+    barriers = f", cut by {' and '.join(request.barriers)}" if request.barriers else ""
+    covers = ", ".join(request.covers) or "every class and group"
+    yield f"  {request.measure} of {covers}, for the whole map{zones}{barriers}:"
+    for quantity in request.quantities():
+        unit = f" [{quantity.unit}]" if quantity.unit else ""
+        yield f"    {quantity.name}{unit}: {quantity.meaning}"
 
 
 def _plane_lines(layer: LayerPlan) -> Iterator[str]:
@@ -93,6 +130,10 @@ def _plane_lines(layer: LayerPlan) -> Iterator[str]:
     if told:
         yield f"worst distance error over the layer's extent: {', '.join(told)}"
     yield f"budget: {_percent(projector.budget)}; each {projector.plane} on its own plane"
+
+
+def _count(number: int, word: str) -> str:
+    return f"{number} {word}{'s' if number != 1 else ''}"
 
 
 def _percent(share: float) -> str:

@@ -1,4 +1,4 @@
-"""The plan of a batch: each layer's header, what its rows are measured with, and where its copies go."""
+"""The plan of a batch: each layer's header, what it is measured with, and where its copies go."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 
+from geofractal.batch.cover_plan import CoverPlan, plan_covers
 from geofractal.batch.parts import GroupsPart, LayerWork, PartInput, RowsPart
 from geofractal.config.load import wrong_kinds
 from geofractal.config.models import Batch, VectorLayer
@@ -28,26 +29,34 @@ from geofractal.writer.sources import refuse_sources
 
 @dataclass(frozen=True)
 class LayerPlan:
-    """One layer of the batch, ready to be measured."""
+    """One layer of lines or polygons of the batch, ready to be measured.
+
+    `zone_columns` are those that class maps give it as their zones.
+    """
 
     name: str
     layer: VectorLayer
     info: LayerInfo
     where: Where | None
     work: LayerWork
+    zone_columns: tuple[Column, ...] = ()
 
     @cached_property
     def columns(self) -> tuple[Column, ...]:
         """Columns that its copies gain."""
-        return self.work.columns
+        return (*self.work.columns, *self.zone_columns)
 
 
 @dataclass(frozen=True)
 class Plan:
-    """All layers that can be measured, why the others cannot, and what each copy will not hold."""
+    """All layers that can be measured, why the others cannot, and what each copy will not hold.
+
+    `layers` are those of lines and polygons that gain columns, `covers` the class maps.
+    """
 
     batch: Batch
     layers: tuple[LayerPlan, ...]
+    covers: tuple[CoverPlan, ...]
     failed: dict[str, SourceError]
     losses: dict[tuple[str, str], tuple[Loss, ...]]
 
@@ -83,25 +92,26 @@ def plan_batch(batch: Batch) -> Plan:
         An output would overwrite a source or another output, or a column's name is taken.
     """
     problems: list[Problem] = []
-    plans: list[LayerPlan] = []
+    vectors: dict[str, LayerPlan] = {}
     failed: dict[str, SourceError] = {}
     for name, layer in batch.vector_layers.items():
-        if not batch.requests_of(name):
+        if name not in batch.layers_used:
             continue
         try:
-            plans.append(_plan_layer(batch, name, layer, problems))
+            vectors[name] = _plan_layer(batch, name, layer, problems)
         except SourceError as error:
             failed[name] = error
-    kinds = {plan.name: {plan.info.geometry} for plan in plans}
-    problems += wrong_kinds(batch, kinds)
+    problems += wrong_kinds(batch, {name: {plan.info.geometry} for name, plan in vectors.items()})
+    covers = plan_covers(batch, vectors, failed, problems)
     if problems:
         raise config_error(batch.file or Path("batch"), problems)
+    plans = [plan for plan in vectors.values() if plan.columns]
     losses: dict[tuple[str, str], tuple[Loss, ...]] = {
         (plan.name, word): expected_losses(plan.info, plan.columns, word)
         for plan in plans
         for word in batch.outputs.formats
     }
-    plan = Plan(batch, tuple(plans), failed, losses)
+    plan = Plan(batch, tuple(plans), covers, failed, losses)
     _refuse_outputs(plan)
     return plan
 
@@ -132,7 +142,7 @@ def _plan_layer(batch: Batch, name: str, layer: VectorLayer, problems: list[Prob
         bounds=info.bounds,
     )
     work = LayerWork(batch.requests_of(name), projector, layer.prepare, grouped=layer.group_by is not None)
-    return LayerPlan(name, layer, info, where, work)
+    return LayerPlan(name, layer, info, where, work, batch.zone_columns_of(name))
 
 
 def _column_problems(batch: Batch, name: str, layer: VectorLayer, info: LayerInfo) -> Iterable[Problem]:
@@ -144,8 +154,12 @@ def _column_problems(batch: Batch, name: str, layer: VectorLayer, info: LayerInf
 
 def _refuse_outputs(plan: Plan) -> None:
     """Refuse targets that are sources or one another's, and columns whose names are taken."""
-    refuse_sources(plan.targets.values(), [layer.source for layer in plan.batch.layers.values()])
+    tables = {target: cover.name for cover in plan.covers for target in cover.targets(plan.batch)}
+    targets = [*plan.targets.values(), *tables]
+    refuse_sources(targets, [layer.source for layer in plan.batch.layers.values()])
     origins: dict[str, set[str]] = defaultdict(set)
+    for target, name in tables.items():
+        origins[str(target).casefold()].add(name)
     attached: dict[tuple[Path, str], tuple[Column, ...]] = defaultdict(tuple)
     for layer in plan.layers:
         attached[layer.info.path, layer.info.layer] += layer.columns

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any, Self
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from geofractal.batch.covers import cover_record
 from geofractal.batch.parts import NOT_WANTED, note_name
 from geofractal.config.models import Batch, MeasureRequest
 from geofractal.errors import GeofractalError
@@ -20,6 +21,7 @@ from geofractal.registry import load_measure
 from geofractal.versions import show_versions
 
 if TYPE_CHECKING:
+    from geofractal.batch.covers import MeasuredCover
     from geofractal.batch.run import Measured
 
 REASONS_KEPT = 50
@@ -112,10 +114,19 @@ def _counted(values: pa.Array) -> dict[str, int]:
 
 
 def run_record(
-    batch: Batch, measured: Sequence[Measured], failed: dict[str, GeofractalError], started: datetime
+    batch: Batch,
+    measured: Sequence[Measured],
+    covers: Sequence[MeasuredCover],
+    failed: dict[str, GeofractalError],
+    started: datetime,
 ) -> dict[str, Any]:
     """Return the record of a run that has ended."""
+    maps = {found.plan.name: cover_record(found) for found in covers}
     refused = sum(tally.refused for found in measured for tally in found.tallies)
+    refused += sum(tally["refused"] for told in maps.values() for tally in told["measures"])
+    inputs = {found.plan.info.path: found.before for found in measured}
+    for found in covers:
+        inputs |= found.prints
     return {
         "batch": batch.name,
         "batch_file": str(batch.file) if batch.file else None,
@@ -125,10 +136,10 @@ def run_record(
         "exit_code": 3 if failed else int(refused > 0 and batch.run.refusals == "fail"),
         "refused": refused,
         "inputs": [
-            {"path": path, "size_bytes": found.before.size, "sha256": found.before.sha256}
-            for path, found in sorted({str(found.plan.info.path): found for found in measured}.items())
+            {"path": str(path), "size_bytes": before.size, "sha256": before.sha256}
+            for path, before in sorted(inputs.items())
         ],
-        "layers": {found.plan.name: layer_record(found) for found in measured},
+        "layers": {found.plan.name: layer_record(found) for found in measured} | maps,
         "failed_layers": {name: str(error) for name, error in failed.items()},
         "versions": show_versions(),
         "cautions": CAUTIONS,

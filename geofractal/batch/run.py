@@ -14,19 +14,22 @@ from pathlib import Path
 from typing import Any
 
 from geofractal import interrupt
+from geofractal.batch.covers import MeasuredCover, measure_cover, write_cover
 from geofractal.batch.executor import available_workers, in_order, make_executor
 from geofractal.batch.parts import measured_part
 from geofractal.batch.plan import LayerPlan, Plan, parts_of, plan_batch
 from geofractal.batch.record import MeasureTally, run_record
 from geofractal.batch.refused import write_refused_rows
 from geofractal.batch.spool import RowSpool
+from geofractal.batch.zone_results import SideBySide, zone_spool
 from geofractal.config.models import Batch
-from geofractal.errors import GeofractalError, SourceError
+from geofractal.errors import GeofractalError, LayerError, SourceError
 from geofractal.progress import Progress
 from geofractal.writer.attach import Addition
 from geofractal.writer.commit import in_plain_words, publish
 from geofractal.writer.dictionary import write_data_dictionary
 from geofractal.writer.layer import Written, write_layer
+from geofractal.writer.rows import Results
 from geofractal.writer.sources import Fingerprint, check_unchanged, fingerprint
 
 PARTS_FOLDER = ".geofractal-parts"
@@ -38,7 +41,7 @@ class Measured:
     """A layer whose results are in its spool."""
 
     plan: LayerPlan
-    spool: RowSpool
+    spool: Results
     tallies: list[MeasureTally]
     before: Fingerprint
     seconds: float
@@ -77,38 +80,82 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
     folder = batch.outputs.folder / PARTS_FOLDER
     failed: dict[str, GeofractalError] = dict(plan.failed)
     measured: list[Measured] = []
+    covers: list[MeasuredCover] = []
     with ExitStack() as stack:
         with in_plain_words(folder):
             folder.mkdir(parents=True, exist_ok=True)
         interrupt.set_kept(f"Measured parts are kept in {folder}; run the batch again to go on from there.")
+        for cover in plan.covers:
+            try:
+                covers.append(measure_cover(cover, folder, progress))
+            except SourceError as error:
+                failed[cover.name] = error
         for layer in plan.layers:
             try:
-                measured.append(_measure_layer(layer, batch, folder, stack, progress))
+                _refuse_missing_maps(layer, batch, failed)
+                measured.append(_measure_layer(layer, batch, covers, folder, stack, progress))
             except SourceError as error:
                 failed[layer.name] = error
+        for found in covers:
+            write_cover(found, batch, progress)
         for (target, word), layers in _by_target(plan, measured).items():
             try:
                 _write_copy(target, word, layers, progress)
             except SourceError as error:
                 failed |= dict.fromkeys((found.plan.name for found in layers), error)
         whole = [found for found in measured if found.plan.name not in failed]
-        write_data_dictionary(batch.outputs.folder, {found.plan.name: found.plan.columns for found in whole})
+        columns = {found.plan.name: found.plan.columns for found in whole}
+        columns |= {f"{found.plan.name}_figures": found.quantities for found in covers}
+        write_data_dictionary(batch.outputs.folder, columns)
         write_refused_rows(batch.outputs.folder, whole)
-        record = run_record(batch, whole, failed, started)
+        record = run_record(batch, whole, covers, failed, started)
         with publish(batch.outputs.folder / RECORD) as part:
             part.write_text(json.dumps(record, indent=1, ensure_ascii=False), encoding="utf-8")
     shutil.rmtree(folder, ignore_errors=True)
     return record
 
 
+def _refuse_missing_maps(layer: LayerPlan, batch: Batch, failed: dict[str, GeofractalError]) -> None:
+    """Raise if the layer is to get columns of a class map that could not be measured."""
+    for request in batch.cover_requests:
+        if request.zones == layer.name and request.zone_columns() and request.of in failed:
+            raise LayerError(f"it awaits figures of {request.of!r}, which could not be measured")
+
+
 def _measure_layer(
-    layer: LayerPlan, batch: Batch, folder: Path, stack: ExitStack, progress: Progress
+    layer: LayerPlan,
+    batch: Batch,
+    covers: Sequence[MeasuredCover],
+    folder: Path,
+    stack: ExitStack,
+    progress: Progress,
 ) -> Measured:
-    """Measure a layer part by part into a spool, in the order of the parts whatever the workers."""
+    """Return a layer with its results: of its own measures, and of class maps whose zones it is."""
     begun = time.monotonic()
-    before = fingerprint(layer.info.path)
-    spool = stack.enter_context(RowSpool(folder / f"{layer.name}.rows", layer.columns, layer.info.features))
+    before = next(
+        (found.prints[layer.info.path] for found in covers if layer.info.path in found.prints), None
+    ) or fingerprint(layer.info.path)
     tallies = [MeasureTally.of(request) for request in layer.work.requests]
+    spools: list[Results] = []
+    if tallies:
+        spools.append(_measure_rows(layer, batch, tallies, folder, stack, progress))
+    if layer.zone_columns:
+        spools.append(stack.enter_context(zone_spool(layer, covers, folder)))
+    spool = spools[0] if len(spools) == 1 else SideBySide(spools)
+    return Measured(layer, spool, tallies, before, time.monotonic() - begun)
+
+
+def _measure_rows(
+    layer: LayerPlan,
+    batch: Batch,
+    tallies: Sequence[MeasureTally],
+    folder: Path,
+    stack: ExitStack,
+    progress: Progress,
+) -> RowSpool:
+    """Measure a layer part by part into a spool, in the order of the parts whatever the workers."""
+    columns, rows = layer.work.columns, layer.info.features
+    spool = stack.enter_context(RowSpool(folder / f"{layer.name}.rows", columns, rows))
     workers = available_workers() if batch.run.workers == "auto" else batch.run.workers
     words = " and ".join(request.measure for request in layer.work.requests)
     with (
@@ -121,7 +168,7 @@ def _measure_layer(
             for tally in tallies:
                 tally.add(results)
             stage.advance(results.num_rows)
-    return Measured(layer, spool, tallies, before, time.monotonic() - begun)
+    return spool
 
 
 def _by_target(plan: Plan, measured: Sequence[Measured]) -> dict[tuple[Path, str], list[Measured]]:

@@ -365,7 +365,23 @@ class Batch(BatchSections):
 
     def cover_requests_of(self, layer: str) -> tuple[CoverRequest, ...]:
         """Return the measures of class maps asked of a layer, in the file's order."""
-        return tuple(r for r in self.measures if r.of == layer and isinstance(r, CoverRequest))
+        return tuple(request for request in self.cover_requests if request.of == layer)
+
+    @property
+    def cover_requests(self) -> tuple[CoverRequest, ...]:
+        """Return the measures of class maps, in the file's order."""
+        return tuple(request for request in self.measures if isinstance(request, CoverRequest))
+
+    @property
+    def layers_used(self) -> set[str]:
+        """Return the names of the layers that some measure uses, be it as zones or barriers."""
+        used = {request.of for request in self.measures}
+        return used.union(*((r.zones or r.of, *r.barriers) for r in self.cover_requests))
+
+    def zone_columns_of(self, layer: str) -> tuple[Column, ...]:
+        """Return the columns that class maps give a layer as their zones."""
+        requests = [request for request in self.cover_requests if request.zones == layer]
+        return tuple(one.column for request in requests for one in request.zone_columns())
 
     def problem(self, at: KeyPath, said: str, *, allowed: str = "", near: str = "") -> Problem:
         """Return a problem at a path of keys such as ``("layers", "shore", "id")``, placed in the file."""

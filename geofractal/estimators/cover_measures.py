@@ -121,7 +121,7 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
         limits = fits["area_perimeter_note"].to_numpy(object)
         said = [_joined(verdict, limit) for verdict, limit in zip(verdicts, limits, strict=True)]
         figures = _figures(fits, AREA_PERIMETER, said, cover)
-        return CoverResult(figures, patches if options.patches else None)
+        return CoverResult(figures, patches if options.patches else None, options.neighbours)
 
 
 class NumberAreaExponent(CoverMeasure[PatchOptions]):
@@ -165,7 +165,7 @@ def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[p
 
     first = next(found)
     whole = first.table
-    wanted = cover.covers or tuple(whole["cover"].cat.remove_unused_categories().categories)
+    wanted = cover.covers or tuple(whole["cover"].cat.remove_unused_categories().cat.categories)
     rows = [_complete(fit(whole.assign(unit=WHOLE_MAP), ("unit", "cover")), [WHOLE_MAP], wanted)]
     for part in (first, *found):
         if part.zones:

@@ -36,3 +36,10 @@ def remap_by_search(
             last, last_index = known[at], index[at]
         out[i] = last_index
     return -1
+
+
+@kernel
+def count_codes(codes: NDArray[np.int16], counts: NDArray[np.int64]) -> None:
+    """Add the cells of each class index to ``counts[index + 1]``; index -1 is no class."""
+    for i in range(codes.shape[0]):
+        counts[codes[i] + 1] += 1

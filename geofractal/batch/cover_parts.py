@@ -1,0 +1,211 @@
+"""Parts of class maps: one measure of one map, with a content key; finished ones are kept on disk."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from geofractal.batch.cover_plan import CoverPlan, CoverWork
+from geofractal.batch.zone_layers import barriers_of, read_rows, zones_of
+from geofractal.cover_map import PolygonCover, RasterCover
+from geofractal.kernels.codes import count_codes
+from geofractal.landcover.strips import Strip
+from geofractal.measure import FIGURE_COLUMNS, CoverMap, Ints
+from geofractal.progress import Stage
+from geofractal.reader.raster import Raster
+from geofractal.reader.vector import stream
+from geofractal.registry import load_cover_measure
+from geofractal.versions import code_digest
+from geofractal.writer.commit import in_plain_words
+from geofractal.writer.sources import Fingerprint
+from geofractal.writer.tables import GEOMETRY
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    import pandas as pd
+
+    from geofractal.batch.plan import LayerPlan
+
+Prints = Mapping[Path, Fingerprint]
+"""Fingerprints of the files that a batch reads."""
+
+FIGURES = pa.schema(
+    [
+        pa.field(name, pa.float64() if name in {"cell_size_m", "estimate", "low", "high"} else pa.string())
+        for name in FIGURE_COLUMNS
+    ]
+)
+
+
+@dataclass(frozen=True)
+class CoverPart:
+    """What one measure of a class map gave.
+
+    Attributes
+    ----------
+    figures : columns `FIGURE_COLUMNS`
+    patches : file of the patches asked for, None where there are none
+    neighbours : by how many neighbours their cells were joined
+    zone_problems : name of each zone that could not be measured, and why
+    zone_overlaps : name of each zone that shares cells with others, and those
+    barriers_left_out : why geometries are no barrier, and how many
+    classes : cells of each class that was met
+    seconds : time that measuring took, when it was done
+    """
+
+    figures: pa.Table
+    patches: Path | None
+    neighbours: int
+    zone_problems: dict[str, str]
+    zone_overlaps: dict[str, list[str]]
+    barriers_left_out: dict[str, int]
+    classes: dict[str, int]
+    seconds: float
+
+
+@dataclass(frozen=True)
+class WatchedRaster(Raster):
+    """A raster that tells each strip it hands out."""
+
+    told: Callable[[Strip], None] = lambda _: None
+
+    def strips(self) -> Iterator[Strip]:
+        """Yield the raster's strips; each is told once the caller is done with it."""
+        for strip in super().strips():
+            yield strip
+            self.told(strip)
+
+
+@dataclass
+class Census:
+    """Counts the cells of each class in the first reading of a map, and tells the rows of all readings."""
+
+    stage: Stage
+    counts: Ints = field(default_factory=lambda: np.zeros(1, np.int64))
+    first: bool = True
+
+    def __call__(self, strip: Strip) -> None:
+        """Add a strip."""
+        self.stage.advance(strip.rows)
+        if self.first:
+            most = int(strip.codes.max()) + 2
+            self.counts = np.pad(self.counts, (0, max(0, most - len(self.counts))))
+            count_codes(np.ascontiguousarray(strip.codes).ravel(), self.counts)
+            self.first = not strip.last
+
+
+def cover_part(plan: CoverPlan, work: CoverWork, prints: Prints, folder: Path, stage: Stage) -> CoverPart:
+    """Return what a measure of a class map gives, from an earlier run where that is kept in `folder`."""
+    key = part_key(plan, work, prints)
+    kept, patches = folder / f"{key}.figures.parquet", folder / f"{key}.patches.parquet"
+    if not kept.exists():
+        _measure(plan, work, stage, kept, patches)
+    table = pq.read_table(kept)
+    told = json.loads(table.schema.metadata[b"geofractal"])
+    return CoverPart(
+        table.replace_schema_metadata(None), patches if told.pop("has_patches") else None, **told
+    )
+
+
+def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
+    """Return the content key of a part: equal for equal sources, options and code."""
+    request = work.request
+    measure = load_cover_measure(request.measure)
+    said = [code_digest(), request.measure, str(measure.version), request.options.model_dump_json()]
+    said += [repr(request.covers), repr(plan.groups), repr(request.class_column)]
+    said += [] if plan.raster is None else [repr(plan.raster.options)]
+    said += [prints[file].sha256 for file in plan.files]
+    for layer in (*((plan.polygons,) if plan.polygons else ()), *work.layers):
+        held = layer.layer
+        said.append(repr((layer.info.layer, layer.info.crs, held.id, held.where, held.prepare.repair)))
+        said.append(prints[layer.info.path].sha256)
+    return hashlib.blake2b("\x00".join(said).encode(), digest_size=16).hexdigest()
+
+
+def _measure(plan: CoverPlan, work: CoverWork, stage: Stage, kept: Path, patches: Path) -> None:
+    """Measure, and keep the results: the figures last, since they tell that the part is whole."""
+    begun = time.monotonic()
+    census = Census(stage)
+    cover = open_cover(plan, work, census)
+    measure = load_cover_measure(work.request.measure)
+    result = measure.measure(cover, work.request.options)
+    if result.patches is not None:
+        keep(_patch_table(result.patches), patches)
+    names = plan.raster.legend.names if plan.raster else []
+    zones = cover.zones
+    told = {
+        "has_patches": result.patches is not None,
+        "neighbours": result.neighbours,
+        "zone_problems": _named(zones, "problems"),
+        "zone_overlaps": {
+            name: [zones.names[other] for other in others]
+            for name, others in (_named(zones, "overlaps")).items()
+        },
+        "barriers_left_out": cover.barriers.left_out if cover.barriers else {},
+        "classes": {name: int(count) for name, count in zip(names, census.counts[1:], strict=False) if count},
+        "seconds": time.monotonic() - begun,
+    }
+    table = pa.Table.from_pandas(result.figures[list(FIGURE_COLUMNS)], FIGURES, preserve_index=False)
+    keep(table.replace_schema_metadata({"geofractal": json.dumps(told)}), kept)
+
+
+def _named(zones: Any, what: str) -> dict[str, Any]:
+    """Return what is told of zones, by name, where there is something to tell."""
+    if zones is None:
+        return {}
+    return {name: told for name, told in zip(zones.names, getattr(zones, what), strict=True) if told}
+
+
+def open_cover(plan: CoverPlan, work: CoverWork, told: Callable[[Strip], None]) -> CoverMap:
+    """Return the map of a part as its measure gets it; `told` hears of every strip that is read."""
+    if plan.polygons is not None:
+        return _polygons(plan.polygons, work)
+    assert plan.raster is not None
+    watched = WatchedRaster(
+        **{name: getattr(plan.raster, name) for name in Raster.__dataclass_fields__}, told=told
+    )
+    grid = plan.raster.grid
+    zones = None if work.zones is None else zones_of(work.zones, read_rows(work.zones), grid)
+    barriers = barriers_of(work.barriers, grid) if work.barriers else None
+    return RasterCover(watched, zones, barriers, plan.groups, work.request.covers)
+
+
+def _polygons(plan: LayerPlan, work: CoverWork) -> PolygonCover:
+    from pyproj import CRS
+
+    rows = read_rows(plan)
+    classes = None
+    if (column := work.request.class_column) is not None:
+        held = [batch.attributes.column(column).to_pylist() for batch in stream(plan.info, columns=[column])]
+        classes = np.array([str(value) for part in held for value in part], object)[rows.wanted]
+    crs = CRS.from_user_input(plan.info.crs)
+    return PolygonCover(rows.geometries[rows.wanted], classes, crs, work.request.covers)
+
+
+def _patch_table(patches: pd.DataFrame) -> pa.Table:
+    """Return patches as Arrow, polygons as WKB."""
+    import shapely
+
+    table = patches.astype({"cover": str})
+    if GEOMETRY in table:
+        table[GEOMETRY] = shapely.to_wkb(table[GEOMETRY].to_numpy())
+    return pa.Table.from_pandas(table, preserve_index=False)
+
+
+def keep(table: pa.Table, kept: Path) -> None:
+    """Write a table beside its place and rename it into it when whole."""
+    unfinished = kept.with_suffix(f".{os.getpid()}.part")
+    with in_plain_words(kept):
+        pq.write_table(table, unfinished)
+        unfinished.replace(kept)

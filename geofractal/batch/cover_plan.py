@@ -1,0 +1,179 @@
+"""The plan of class maps: each map's header, what it is measured with, and where the tables go."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from geofractal.config.models import Batch, CoverRequest, RasterLayer
+from geofractal.config.wording import near_match
+from geofractal.errors import ConfigError, LayerError, Problem, SourceError
+from geofractal.reader.raster import Raster, RasterOptions, open_raster
+from geofractal.reader.raster_source import open_source
+
+if TYPE_CHECKING:
+    from geofractal.batch.plan import LayerPlan
+
+PATCH_FORMATS = {"geopackage": ".gpkg", "geoparquet": ".parquet"}
+
+
+@dataclass(frozen=True)
+class CoverWork:
+    """One measure of a class map, with the layers of its zones and barriers."""
+
+    request: CoverRequest
+    zones: LayerPlan | None
+    barriers: tuple[LayerPlan, ...]
+
+    @property
+    def layers(self) -> tuple[LayerPlan, ...]:
+        """Return the layers of zones and barriers."""
+        return (*((self.zones,) if self.zones else ()), *self.barriers)
+
+
+@dataclass(frozen=True)
+class CoverPlan:
+    """A class map of the batch, ready to be measured: a raster, or a layer of polygons."""
+
+    name: str
+    raster: Raster | None
+    polygons: LayerPlan | None
+    groups: dict[str, tuple[str, ...]]
+    works: tuple[CoverWork, ...]
+
+    @property
+    def files(self) -> tuple[Path, ...]:
+        """Return the files that hold the map."""
+        if self.polygons is not None:
+            return (self.polygons.info.path,)
+        assert self.raster is not None
+        return raster_files(Path(str(self.raster.source)))
+
+    @property
+    def warped(self) -> bool:
+        """Whether the map is measured on another grid than its own."""
+        return self.raster is not None and self.raster.grid is not self.raster.source_grid
+
+    def table(self, folder: Path, word: str) -> Path:
+        """Return the file of the table of figures in a format."""
+        return folder / f"{self.name}_figures.{word}"
+
+    def warping_file(self, folder: Path) -> Path:
+        """Return the file of what warping did to each class."""
+        return folder / f"{self.name}_warping.csv"
+
+    def patch_files(self, batch: Batch) -> dict[str, Path]:
+        """Return the file of the patches in each format, none where none are asked for."""
+        if not any(getattr(work.request.options, "patches", False) for work in self.works):
+            return {}
+        words = [word for word in batch.outputs.formats if word in PATCH_FORMATS] or ["geopackage"]
+        if self.raster is None:
+            words = ["geoparquet"]
+        folder = batch.outputs.folder
+        return {word: folder / f"{self.name}_patches{PATCH_FORMATS[word]}" for word in words}
+
+    def targets(self, batch: Batch) -> list[Path]:
+        """Return all files that the map's results go to."""
+        folder = batch.outputs.folder
+        files = [self.table(folder, word) for word in batch.outputs.tables]
+        files += [self.warping_file(folder)] if self.warped else []
+        return [*files, *self.patch_files(batch).values()]
+
+
+def raster_files(path: Path) -> tuple[Path, ...]:
+    """Return the files of a raster: itself, what stands beside it, and what a virtual one is made of."""
+    found: dict[Path, None] = {}
+    waiting = [path]
+    while waiting:
+        file = waiting.pop()
+        if file in found or not file.is_file():
+            continue
+        found[file] = None
+        if file.suffix.lower() == ".vrt" or file == path:
+            with open_source(file) as dataset:
+                waiting += [Path(name) for name in dataset.files]
+    return tuple(found)
+
+
+def plan_covers(
+    batch: Batch, vectors: Mapping[str, LayerPlan], failed: dict[str, SourceError], problems: list[Problem]
+) -> tuple[CoverPlan, ...]:
+    """Look at every class map's header; what cannot be read goes to `failed`, what is wrong to `problems`."""
+    plans: list[CoverPlan] = []
+    for name, layer in batch.layers.items():
+        requests = batch.cover_requests_of(name)
+        if not requests or name in failed:
+            continue
+        try:
+            works = tuple(_work(request, vectors, failed) for request in requests)
+            if isinstance(layer, RasterLayer):
+                raster = open_raster(layer.source, reading_options(layer, batch))
+                problems += _cover_problems(batch, name, layer, raster)
+                plans.append(CoverPlan(name, raster, None, dict(layer.groups), works))
+            else:
+                plans.append(CoverPlan(name, None, vectors[name], {}, works))
+        except SourceError as error:
+            failed[name] = error
+        except ConfigError as error:
+            problems.append(batch.problem(("layers", name), str(error)))
+    return tuple(plans)
+
+
+def reading_options(layer: RasterLayer, batch: Batch) -> RasterOptions:
+    """Return how a layer's raster is read."""
+    return RasterOptions(
+        band=layer.band,
+        crs=layer.crs,
+        classes=layer.classes,
+        rest=layer.rest,
+        nodata=layer.nodata,
+        whole_numbers=layer.whole_numbers,
+        grid=layer.grid,
+        budget_percent=batch.projection.budget_percent,
+        cell_size_m=layer.cell_size_m,
+    )
+
+
+def _work(
+    request: CoverRequest, vectors: Mapping[str, LayerPlan], failed: Mapping[str, SourceError]
+) -> CoverWork:
+    used = [("zones", request.zones or "")] + [("barriers", name) for name in request.barriers]
+    for what, name in used:
+        if name in failed:
+            raise LayerError(f"its {what} {name!r} cannot be read: {failed[name]}")
+    zones = None if request.zones is None else vectors[request.zones]
+    return CoverWork(request, zones, tuple(vectors[name] for name in request.barriers))
+
+
+def _cover_problems(batch: Batch, name: str, layer: RasterLayer, raster: Raster) -> Iterator[Problem]:
+    """Yield classes that groups and measures name and the map does not have."""
+    legend = raster.legend
+    known = list(legend.names if legend.closed else dict.fromkeys(legend.own_names.values()))
+    free = not legend.closed and not legend.own_names  # names are the codes that will be met
+
+    def unknown(cover: str, names: list[str]) -> bool:
+        return cover not in names and not (free and cover.lstrip("-").isdigit())
+
+    def told(cover: str, names: list[str]) -> tuple[str, str, str]:
+        said = f"the class map {name!r} has no class {cover!r}"
+        return said, ", ".join(names) or "the map's codes, as text", near_match(cover, names)
+
+    for group, members in layer.groups.items():
+        if group in known:
+            said = f"{group!r} is the name of a class already"
+            yield batch.problem(("layers", name, "groups", group), said, allowed="another name")
+        for place, member in enumerate(members):
+            if unknown(member, known):
+                said, allowed, near = told(member, known)
+                yield batch.problem(
+                    ("layers", name, "groups", group, place), said, allowed=allowed, near=near
+                )
+    for index, request in enumerate(batch.measures):
+        covers = request.covers if isinstance(request, CoverRequest) and request.of == name else ()
+        for place, cover in enumerate(covers):
+            if unknown(cover, [*known, *layer.groups]):
+                said, allowed, near = told(cover, [*known, *layer.groups])
+                at = ("measures", index, "covers", place)
+                yield batch.problem(at, said, allowed=allowed, near=near)

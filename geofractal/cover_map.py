@@ -1,0 +1,135 @@
+"""A class map opened for a measure: its strips, zones and barriers, its patches by class and group."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from geofractal.errors import LayerError
+from geofractal.landcover.barriers import Barriers
+from geofractal.landcover.covers import Pack, pack_groups
+from geofractal.landcover.perimeter import Perimeter
+from geofractal.landcover.strips import NOT_COVERED, Strip
+from geofractal.landcover.zones import ZonePainter, Zones
+from geofractal.measure import CoverPatches, Outline
+from geofractal.patches import patch_frames, polygon_patches
+from geofractal.reader.raster import Raster
+from geofractal.reader.raster_classes import Legend
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+OTHER = "other"
+
+
+@dataclass(frozen=True)
+class RasterCover:
+    """A raster as measures get it: see `geofractal.measure.CoverMap`."""
+
+    raster: Raster
+    zones: Zones | None = None
+    barriers: Barriers | None = None
+    groups: dict[str, tuple[str, ...]] = field(default_factory=dict)
+    covers: tuple[str, ...] = ()
+
+    def patches(
+        self, *, neighbours: int = 8, perimeter: Outline = "cell-edges", map_edge: bool = True
+    ) -> Iterator[CoverPatches]:
+        """Yield the patches of the covers asked for, once for each set of zones that share no cell."""
+        convention = Perimeter(perimeter, map_edge)
+        for members in (self.zones.sets if self.zones else ()) or ((),):
+            yield CoverPatches(self._table(members, convention, neighbours), members)
+
+    def _table(self, members: tuple[int, ...], convention: Perimeter, neighbours: int) -> pd.DataFrame:
+        import pandas as pd
+
+        frames = list(self.frames(convention, neighbours, members=members))
+        names = self.covers or tuple(dict.fromkeys([*self.raster.legend.names, *self.groups]))
+        categories = pd.Index(list(names), dtype=str)
+        for i, frame in enumerate(frames):
+            frames[i] = frame.assign(cover=frame["cover"].cat.set_categories(categories))
+        return pd.concat(frames, ignore_index=True)
+
+    def frames(
+        self, convention: Perimeter, neighbours: int, *, members: tuple[int, ...] = ()
+    ) -> Iterator[pd.DataFrame]:
+        """Yield patches while the map is read, once for its classes and once for each pack of groups."""
+        for pack in self._packs():
+            strips = pack.remap(self.raster.strips(), self.raster.legend.names)
+            if self.barriers is not None:
+                strips = self.barriers(strips)
+            if members:
+                assert self.zones is not None
+                strips = ZonePainter(self.zones, members, np.zeros(len(self.zones), np.int64))(strips)
+            wanted = pack.names or tuple(cover for cover in self.covers if cover not in self.groups)
+            for frame in patch_frames(self._named(pack), strips, convention, neighbours, zoned=bool(members)):
+                yield frame[frame["cover"].isin(wanted)] if wanted else frame
+
+    def polygons(self, neighbours: int) -> Iterator[pd.DataFrame]:
+        """Yield the patches of the covers asked for with their polygons; whatever else is left undrawn."""
+        names = self.covers or (*self.raster.legend.names, *self.groups)
+        for pack in pack_groups({name: self.groups.get(name, (name,)) for name in names}):
+            strips = _only(pack, pack.remap(self.raster.strips(), self.raster.legend.names))
+            if self.barriers is not None:
+                strips = self.barriers(strips)
+            yield from patch_frames(self._named(pack), strips, Perimeter(), neighbours, geometry=True)
+
+    def _named(self, pack: Pack) -> Raster:
+        """Return the raster under the names of a pack's covers."""
+        return replace(self.raster, legend=Legend([*pack.names, OTHER], {})) if pack.names else self.raster
+
+    def _packs(self) -> tuple[Pack, ...]:
+        wanted = self.covers or tuple(self.groups)
+        packs = pack_groups({name: self.groups[name] for name in wanted if name in self.groups})
+        classes = not self.covers or any(name not in self.groups for name in self.covers)
+        return (Pack(), *packs) if classes else packs
+
+
+def _only(pack: Pack, strips: Iterator[Strip]) -> Iterator[Strip]:
+    """Yield strips in which cells of no cover are not covered."""
+    for strip in strips:
+        other = strip.codes == len(pack.names)
+        yield replace(strip, codes=np.where(other, np.int16(NOT_COVERED), strip.codes))
+
+
+@dataclass(frozen=True)
+class PolygonCover:
+    """A layer of polygons as measures get it: see `geofractal.measure.CoverMap`.
+
+    Attributes
+    ----------
+    geometries : (n,) shapely geometries
+    classes : (n,) class of each, None where all are one class
+    crs : of the polygons
+    """
+
+    geometries: Any
+    classes: Any
+    crs: Any
+    covers: tuple[str, ...] = ()
+    raster: None = None
+    zones: None = None
+    barriers: None = None
+    groups: dict[str, tuple[str, ...]] = field(default_factory=dict)
+
+    def patches(
+        self,
+        *,
+        neighbours: int = 8,
+        perimeter: Outline = "cell-edges",
+        map_edge: bool = True,  # noqa: ARG002 - polygons have none
+    ) -> Iterator[CoverPatches]:
+        """Yield the patches of all polygons."""
+        import pandas as pd
+
+        if perimeter == "smoothed":
+            raise LayerError("perimeter: smoothed is for class maps; polygons have no cells to smooth.")
+        table = polygon_patches(
+            self.geometries, crs=self.crs, cover=self.classes, neighbours=neighbours, perimeter=perimeter
+        )
+        names = self.covers or tuple(table["cover"].cat.categories)
+        table["cover"] = table["cover"].astype(str).astype(pd.CategoricalDtype(pd.Index(names, dtype=str)))
+        yield CoverPatches(table[table["cover"].notna()].reset_index(drop=True), ())
