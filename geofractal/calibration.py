@@ -17,7 +17,7 @@ import numpy as np
 from geofractal.errors import ConfigError
 from geofractal.measure import Lines
 from geofractal.scaling.judge import VERDICTS, Judgement, Rungs, divider_rungs, judge
-from geofractal.scaling.ladder import Ladders, divider_ladders
+from geofractal.scaling.ladder import Ladders, divider_ladders, scales_of
 from geofractal.synthetic import fractional_trail, random_koch, random_midpoint, random_ratio_koch
 
 if TYPE_CHECKING:
@@ -147,9 +147,12 @@ def judge_lines(
     """Walk a chunk of lines with their ladders and judge them, as `divider-dimension` does."""
     from geofractal.estimators.divider import walk
 
-    ladders = divider_ladders(lines, ruler_min_m=ruler_min_m, ruler_max_m=ruler_max_m, rungs=rungs)
+    scales = scales_of(lines)
+    ladders = divider_ladders(
+        lines, ruler_min_m=ruler_min_m, ruler_max_m=ruler_max_m, rungs=rungs, scales=scales
+    )
     walks = walk(lines, ladders)
-    found = divider_rungs(lines, **walks._asdict())
+    found = divider_rungs(lines, **walks._asdict(), scales=scales)
     return ladders, found, judge(ladders, found)
 
 

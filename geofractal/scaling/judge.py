@@ -6,7 +6,8 @@ Fit
     first 1.2 e-folds of the ladder weights rise from a fifth to one, so that the ripple which curves made
     of equal pieces carry does not leak into the slope. Two effects of a ladder's ends are taken out
     beforehand: what the source's own detail hides of a fine ruler's length, and the last partial step of
-    an open line.
+    an open line. A ring closes, which its coarse rungs show: beyond the first decade they need 24 steps,
+    and what is left of it is added to the doubt.
 Two uncertainties
     `spread` is that of this line alone: starts, directions and where the rulers happen to lie.
     `low` and `high` are the 95 % interval for the process that made the line, the one to use when two

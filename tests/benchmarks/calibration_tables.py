@@ -1,8 +1,9 @@
 """Print what dimension, interval and verdict do on curves of exactly known dimension.
 
 Run ``python tests/benchmarks/calibration_tables.py [--quick] [--curves N] [--sizes 2000,20000] [PART ...]``;
-parts are deterministic, verdicts, random, rings, mapped. Families marked * were kept apart: no constant was
-set on them, but the lopsidedness of the interval above D = 1.5, which percolation borders asked for.
+parts are deterministic, verdicts, cost, random, rings, mapped. Families marked * were kept apart: no
+constant was set on them, but the lopsidedness of the interval above D = 1.5, which percolation borders
+asked for.
 """
 
 from __future__ import annotations
@@ -17,7 +18,10 @@ import numpy as np
 
 from geofractal import synthetic
 from geofractal.calibration import FAMILIES, CalibrationRow, judge_lines, lines_of, summarise
+from geofractal.estimators.divider import walk
+from geofractal.scaling.fit import fit_power_law
 from geofractal.scaling.judge import VERDICTS, Judgement
+from geofractal.scaling.ladder import divider_ladders
 from geofractal.synthetic import Curve
 
 DIMENSIONS = (1.05, 1.12, 1.2, 1.3, 1.4, 1.5, 1.6, 1.75)
@@ -304,10 +308,33 @@ def verdicts(curves: int) -> None:
             )
 
 
+def cost(curves: int) -> None:
+    """What intervals and verdicts cost on lines of 600 vertices, like groups of river reaches."""
+    dimensions = np.random.default_rng(0).uniform(1.05, 1.4, 100 * curves)
+    draws = [synthetic.fractional_trail(d, vertices=600, seed=i) for i, d in enumerate(dimensions)]
+    lines = lines_of(draws)
+    judge_lines(lines_of(draws[:10]))
+    seconds = {"fit alone": np.inf, "intervals and verdicts": np.inf}
+    for _ in range(3):
+        start = time.perf_counter()
+        ladders = divider_ladders(lines)
+        fit_power_law(ladders, walk(lines, ladders).length)
+        seconds["fit alone"] = min(seconds["fit alone"], time.perf_counter() - start)
+        start = time.perf_counter()
+        found = judge_lines(lines)[2]
+        seconds["intervals and verdicts"] = min(
+            seconds["intervals and verdicts"], time.perf_counter() - start
+        )
+    ratio = seconds["intervals and verdicts"] / seconds["fit alone"]
+    print(f"\n{len(lines)} lines of 600 vertices: answered {np.isfinite(found.dimension).mean():.3f}")
+    print("; ".join(f"{name} {1e6 * s / len(lines):.0f} us a line" for name, s in seconds.items()), end="")
+    print(f"; ratio {ratio:.2f}")
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument(
-        "parts", nargs="*", default=["deterministic", "verdicts", "random", "rings", "mapped"]
+        "parts", nargs="*", default=["deterministic", "verdicts", "cost", "random", "rings", "mapped"]
     )
     parser.add_argument("--curves", type=int, default=200)
     parser.add_argument("--sizes", default="2000,20000,200000")
@@ -320,6 +347,7 @@ def main() -> None:
         {
             "deterministic": deterministic,
             "verdicts": lambda: verdicts(curves),
+            "cost": lambda: cost(curves),
             "random": lambda: random_families(curves, sizes),
             "rings": lambda: rings(curves, sizes),
             "mapped": lambda: mapped(curves, sizes),
