@@ -73,6 +73,7 @@ class Constants(NamedTuple):
     ring: float
     ring_doubt: float
     bend: float
+    ripple: float
     bias_doubt: float
     quantile: float
     skew: float
@@ -144,8 +145,9 @@ def _judge(
     bends = bend_square(w, x, z, mean_x, xx)
     doubt = c.bias_doubt * (row[DIMENSION] - row[RAW_DIMENSION])
     closure = c.ring_doubt / (steps[-1] * span) if open_parts == 0.0 else 0.0
+    ripple = c.ripple * row[RESIDUAL] / (span * span)
     row[OWN_ERROR] = own
-    row[PROCESS_ERROR] = np.sqrt(own * own + c.bend * c.bend * bends + doubt * doubt + closure * closure)
+    row[PROCESS_ERROR] = np.sqrt(own**2 + c.bend**2 * bends + doubt**2 + closure**2 + ripple**2)
     row[VERDICT] = POWER_LAW
     compare_models(row, w, x, z, residual, xx * max(own, 0.01 * gap) ** 2, c)
     if row[DIMENSION] <= c.smooth_below and row[VERDICT] != TWO_REGIME:

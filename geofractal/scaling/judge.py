@@ -12,7 +12,8 @@ Two uncertainties
     `spread` is that of this line alone: starts, directions and where the rulers happen to lie.
     `low` and `high` are the 95 % interval for the process that made the line, the one to use when two
     different lines are compared. It is made of the line's own evidence: how much the slope differs
-    between stretches of the line, and how large the bends of the ladder are that a power law does not have.
+    between stretches of the line, how large the bends of the ladder are that a power law does not have,
+    and how far a ripple as large as the residuals may tilt a line over so short a ladder.
     Both were scaled once, by simulation; near dimension 1 the interval reaches farther upwards.
 Verdict
     A hinge, a step and a parabola are fitted beside the straight line. The straight line stands unless
