@@ -131,5 +131,7 @@ class PolygonCover:
             self.geometries, crs=self.crs, cover=self.classes, neighbours=neighbours, perimeter=perimeter
         )
         names = self.covers or tuple(table["cover"].cat.categories)
-        table["cover"] = table["cover"].astype(str).astype(pd.CategoricalDtype(pd.Index(names, dtype=str)))
-        yield CoverPatches(table[table["cover"].notna()].reset_index(drop=True), ())
+        table = table[table["cover"].isin(names)].reset_index(drop=True)
+        yield CoverPatches(
+            table.assign(cover=table["cover"].cat.set_categories(pd.Index(names, dtype=str))), ()
+        )

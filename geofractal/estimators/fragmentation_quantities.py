@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from geofractal.measure import Quantity
@@ -196,7 +197,6 @@ def coarse(size: float) -> Quantity:
 def interior(depth: float) -> tuple[Quantity, Quantity]:
     """Return interior area at a depth, and its share of the class."""
     meaning = "cells whose centre is farther than the depth from the nearest edge of another class"
-    rules = (BOUNDS, OPEN)
     return (
         Quantity(
             named("interior_area", depth, "depth"),
@@ -204,7 +204,6 @@ def interior(depth: float) -> tuple[Quantity, Quantity]:
             "interior",
             "km2",
             meaning,
-            border_rules=rules,
         ),
         Quantity(
             named("interior_share", depth, "depth"),
@@ -212,7 +211,6 @@ def interior(depth: float) -> tuple[Quantity, Quantity]:
             "interior",
             "percent",
             "interior area over the area of the class",
-            border_rules=rules,
         ),
     )
 
@@ -245,7 +243,10 @@ def quantities_of(options: FragmentationOptions) -> tuple[Quantity, ...]:
     """Return all that the table holds under some options."""
     found = list(FIXED)
     found += [coarse(size) for size in options.edge_cell_sizes_m]
-    found += [one for depth in options.interior_depths_m for one in interior(depth)]
+    rules = (BOUNDS if options.map_edge_bounds_interior else OPEN,)
+    found += [
+        replace(one, border_rules=rules) for depth in options.interior_depths_m for one in interior(depth)
+    ]
     found += NEAREST if options.distances else ()
     found += [one for size in options.lacunarity_boxes_m for one in lacunarity(size)]
     found += CONNECTED if options.dispersal_m is not None else ()
