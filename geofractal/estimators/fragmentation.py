@@ -33,7 +33,7 @@ class FragmentationOptions(Options):
     )
     smallest_patch_m2: Annotated[float, Field(ge=0)] = Field(
         0.0,
-        description="smaller patches are left out of figures of patches; one size for maps of different cells",
+        description="smaller ones are left out of figures of patches; one size for maps of different cells",
     )
     edge_cell_sizes_m: tuple[Metres, ...] = Field(
         (), description="cell sizes, coarser than the map's, at which edge density is stated"

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
+from geofractal.estimators.divider import plain_number
 from geofractal.measure import Quantity
 
 if TYPE_CHECKING:
@@ -176,14 +177,14 @@ BOXES = tuple(
 
 def named(word: str, metres: float, what: str) -> str:
     """Return the name of a quantity at a stated length, such as ``interior_area_at_100m_depth``."""
-    return f"{word}_at_{f'{metres:g}'.replace('.', '_')}m_{what}"
+    return f"{word}_at_{plain_number(metres).replace('.', '_')}m_{what}"
 
 
 def coarse(size: float) -> Quantity:
     """Return the edge density at a stated cell size."""
     return Quantity(
         named("edge_density", size, "cells"),
-        f"ed{size:g}"[:7],
+        f"ed{plain_number(size)}"[:7],
         "border",
         "km/km2",
         "edge to other classes that a map of this cell size shows, over the area with data; compares maps "
@@ -200,14 +201,14 @@ def interior(depth: float) -> tuple[Quantity, Quantity]:
     return (
         Quantity(
             named("interior_area", depth, "depth"),
-            f"in{depth:g}"[:7],
+            f"in{plain_number(depth)}"[:7],
             "interior",
             "km2",
             meaning,
         ),
         Quantity(
             named("interior_share", depth, "depth"),
-            f"is{depth:g}"[:7],
+            f"is{plain_number(depth)}"[:7],
             "interior",
             "percent",
             "interior area over the area of the class",
@@ -220,7 +221,7 @@ def lacunarity(size: float) -> tuple[Quantity, Quantity]:
     return (
         Quantity(
             named("lacunarity", size, "boxes"),
-            f"la{size:g}"[:7],
+            f"la{plain_number(size)}"[:7],
             "connectedness",
             "",
             "how unevenly the class fills boxes wholly inside the area with data; 1 where evenly",
@@ -230,7 +231,7 @@ def lacunarity(size: float) -> tuple[Quantity, Quantity]:
         ),
         Quantity(
             named("lacunarity_boxes", size, "boxes"),
-            f"ln{size:g}"[:7],
+            f"ln{plain_number(size)}"[:7],
             "connectedness",
             "",
             "number of boxes wholly inside the area with data",

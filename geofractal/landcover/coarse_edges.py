@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.kernels.lag_edges import pairs_across, pairs_down
-from geofractal.landcover.grid import Grid
+from geofractal.landcover.grid import Grid, Ints
 from geofractal.landcover.windows import Window
 
 SMOOTHED = 0.5
@@ -29,10 +29,13 @@ PLACEMENT = 1.5
 
 BENDING = 0.5
 
+NONE_SEEN = 3.0
+"""Edges of one coarser cell that may be there where none was seen: 1 - exp(-3) is 95 %."""
+
 
 @dataclass(frozen=True, slots=True)
 class CoarseEdge:
-    """Edge length at a stated cell size in metres, with interval; NaN where the class has no edge."""
+    """Edge length at a stated cell size in metres, with interval; NaN where no cells are so far apart."""
 
     length: float
     low: float
@@ -75,9 +78,10 @@ class LagSums:
         ]
         unit = self._grid.length_unit_m / 2
         length, finest = (unit * sum(part[k] for part in parts) for k in (0, 1))
-        if not length > 0:
-            empty = 0.0 if finest == 0 else math.nan
-            return CoarseEdge(empty, empty, empty)
+        if math.isnan(length):
+            return CoarseEdge(length, length, length)
+        if length == 0:
+            return CoarseEdge(0.0, 0.0, NONE_SEEN * self.size if finest > 0 else 0.0)
         ratio = self.size / math.sqrt(math.prod(self._grid.typical_cell))
         bent = min(max(-math.log(length / finest) / math.log(ratio), 0.0), BENDING)
         half = bent * (SMOOTHED / ratio + SHIFTED) + 2 * PLACEMENT / math.sqrt(length / self.size)
@@ -89,12 +93,18 @@ def _near(cells: float) -> float:
     return float(round(cells)) if abs(cells - round(cells)) < 1e-6 * cells else cells
 
 
-def _at(sums: dict[int, NDArray[np.int64]], cells: float, zone: int, cover: int) -> tuple[float, float]:
-    """Return twice the edge length at a lag of so many cells, and at a lag of one, in the grid's unit."""
+def _at(sums: dict[int, Ints], cells: float, zone: int, cover: int) -> tuple[float, float]:
+    """Return twice the edge length at a lag of so many cells, and at a lag of one, in the grid's unit.
+
+    What the map's edge cuts off of the pairs is made up for by the pairs that there are.
+    """
 
     def length(lag: int) -> float:
-        pairs = int(sums[lag][zone, -1])
-        return 0.0 if pairs == 0 else int(sums[lag][zone, cover]) / pairs * int(sums[1][zone, -1]) / lag
+        pairs, changes = int(sums[lag][zone, -1]), int(sums[lag][zone, cover])
+        beside = int(sums[1][zone, -1])
+        if not pairs:
+            return math.nan if beside else 0.0
+        return changes / pairs * beside / lag
 
     low, high = math.floor(cells), math.ceil(cells)
     first, second = length(low), length(high)

@@ -19,7 +19,7 @@ MOST_SIZES = 4_000_000
 SIZE_BITS = 12
 WAITING = 1_000_000
 
-SUMS = ("patches", "area", "edge", "border_edge", "zone_edge", "barrier_edge", "at_map_edge")
+SUMS = ("area", "edge", "border_edge", "zone_edge", "barrier_edge")
 
 
 class PatchTotals:
@@ -40,20 +40,14 @@ class PatchTotals:
         self.across = _Table(units, LIMBS)
         self.largest = _Table(units, 1)
         self.sizes = SizeCounts()
+        self._found: dict[tuple[int, int], Totals] = {}
 
     def add(self, unit: Ints, patches: PatchTable) -> None:
         """Add patches, each to its unit; negative units are left out."""
         if not len(patches):
             return
         kind, area = patches["class"], patches["area"]
-        values = np.stack(
-            [
-                np.ones(len(area), np.int64),
-                *(patches[name] for name in SUMS[1:-1]),
-                patches["border_edge"] > 0,
-            ],
-            axis=1,
-        )
+        values = np.stack([patches[name] for name in SUMS], axis=1)
         add_sums(self.sums.rows(unit, kind), values, self.sums.values)
         big = (unit >= 0) & (area >= self.smallest)
         unit, kind, area = unit[big], kind[big], area[big]
@@ -80,7 +74,12 @@ class PatchTotals:
         return self.sums.classes
 
     def of(self, unit: int, kind: int) -> Totals:
-        """Return the totals of one unit and class."""
+        """Return the totals of one unit and class; ask once all patches were added."""
+        if (unit, kind) not in self._found:
+            self._found[unit, kind] = self._totals(unit, kind)
+        return self._found[unit, kind]
+
+    def _totals(self, unit: int, kind: int) -> Totals:
         sums = dict(zip(SUMS, self.sums.get(unit, kind), strict=True))
         count, area, open_patches = self.counted.get(unit, kind)
         return Totals(
@@ -160,15 +159,14 @@ class SizeCounts:
     """How many patches of each area there are, by unit and class, for medians."""
 
     def __init__(self) -> None:
-        self._keys = np.empty((0, 3), np.int64)
-        self._counts = np.empty(0, np.int64)
-        self._waiting: list[Ints] = []
+        self._group, self._area, self._counts = (np.empty(0, np.int64) for _ in range(3))
+        self._waiting: list[tuple[Ints, Ints]] = []
         self._n_waiting = 0
         self._rounded = False
 
     def add(self, unit: Ints, kind: Ints, area: Ints) -> None:
         """Add patches."""
-        self._waiting.append(np.stack([unit, kind, area], axis=1))
+        self._waiting.append((unit * _FAR + kind, area))
         self._n_waiting += len(area)
         if self._n_waiting > WAITING:
             self._settle()
@@ -176,40 +174,40 @@ class SizeCounts:
     def _settle(self) -> None:
         if not self._n_waiting:
             return
-        keys = np.concatenate([self._keys, *self._waiting])
+        group = np.concatenate([self._group, *(group for group, _ in self._waiting)])
+        area = np.concatenate([self._area, *(area for _, area in self._waiting)])
         counts = np.concatenate([self._counts, np.ones(self._n_waiting, np.int64)])
         self._waiting, self._n_waiting = [], 0
-        self._keys, self._counts = _counted(keys, counts, rounded=self._rounded)
+        self._count(group, area, counts)
         if len(self._counts) > MOST_SIZES and not self._rounded:
             self._rounded = True
-            self._keys, self._counts = _counted(self._keys, self._counts, rounded=True)
+            self._count(self._group, self._area, self._counts)
+
+    def _count(self, group: Ints, area: Ints, counts: Ints) -> None:
+        """Keep different areas of each group in order, and how often each occurs."""
+        if self._rounded:
+            area = _round_bits(area)
+        order = np.lexsort((area, group))
+        group, area = group[order], area[order]
+        starts = np.flatnonzero(np.r_[True, (np.diff(group) != 0) | (np.diff(area) != 0)])
+        self._group, self._area = group[starts], area[starts]
+        self._counts = np.add.reduceat(counts[order], starts)
 
     def median(self, unit: int, kind: int) -> float:
         """Return the median area of a unit and class, NaN where it has no patch."""
         self._settle()
         low, high = (
-            int(np.searchsorted(self._keys[:, 0] * _FAR + self._keys[:, 1], unit * _FAR + kind, side))
-            for side in ("left", "right")
+            int(np.searchsorted(self._group, unit * _FAR + kind, side)) for side in ("left", "right")
         )
         if low == high:
             return float("nan")
-        areas, running = self._keys[low:high, 2], np.cumsum(self._counts[low:high])
+        areas, running = self._area[low:high], np.cumsum(self._counts[low:high])
         middle = [(running[-1] - 1) // 2, running[-1] // 2]
         first, second = (float(areas[np.searchsorted(running, place, "right")]) for place in middle)
         return first + (second - first) / 2
 
 
 _FAR = 1 << 32
-
-
-def _counted(keys: Ints, counts: Ints, *, rounded: bool) -> tuple[Ints, Ints]:
-    """Return different keys in order and how often each occurs."""
-    if rounded:
-        keys = np.column_stack([keys[:, :2], _round_bits(keys[:, 2])])
-    order = np.lexsort((keys[:, 2], keys[:, 1], keys[:, 0]))
-    keys, counts = keys[order], counts[order]
-    starts = np.flatnonzero(np.r_[True, (np.diff(keys, axis=0) != 0).any(axis=1)])
-    return keys[starts], np.add.reduceat(counts, starts)
 
 
 def _round_bits(area: Ints) -> Ints:
