@@ -94,8 +94,6 @@ COVERED_ELSEWHERE = {
     ("run", "workers"): "test_batch.py: results do not depend on it",
     ("request", "measure"): "it is the measure",
     ("request", "of"): "it is the layer",
-    ("request", "zones"): "for class maps",
-    ("request", "barriers"): "for class maps",
     ("sinuosity", "ruler_m"): "test_sinuosity.py",
 }
 
