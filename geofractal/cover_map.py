@@ -23,6 +23,8 @@ if TYPE_CHECKING:
     import pandas as pd
 
 OTHER = "other"
+PLACE = ("zone", "first_row", "first_column")
+HELD = ("cells", "area_m2", "perimeter_m", "touches_edge", "filled_area_m2", "holes", *PLACE)
 
 
 @dataclass(frozen=True)
@@ -46,12 +48,20 @@ class RasterCover:
     def _table(self, members: tuple[int, ...], convention: Perimeter, neighbours: int) -> pd.DataFrame:
         import pandas as pd
 
-        frames = list(self.frames(convention, neighbours, members=members))
-        names = self.covers or tuple(dict.fromkeys([*self.raster.legend.names, *self.groups]))
-        categories = pd.Index(list(names), dtype=str)
-        for i, frame in enumerate(frames):
-            frames[i] = frame.assign(cover=frame["cover"].cat.set_categories(categories))
-        return pd.concat(frames, ignore_index=True)
+        columns: dict[str, list[Any]] = {}
+        numbers: dict[str, int] = {}
+        for frame in self.frames(convention, neighbours, members=members):
+            cover = frame["cover"].cat
+            of = np.array([numbers.setdefault(name, len(numbers)) for name in cover.categories], np.int16)
+            columns.setdefault("cover", []).append(of[cover.codes])
+            for name in (name for name in HELD if name in frame):  # copies: a frame's columns share memory
+                kind = np.int32 if name in PLACE else frame[name].dtype
+                columns.setdefault(name, []).append(frame[name].to_numpy(kind, copy=True))
+        table = {name: np.concatenate(columns.pop(name)) for name in [*columns]}
+        names = list(self.covers or dict.fromkeys([*self.raster.legend.names, *self.groups]))
+        place = np.array([names.index(name) if name in names else -1 for name in numbers], np.int16)
+        cover = pd.Categorical.from_codes(place[table.pop("cover")], pd.Index(names, dtype=str))
+        return pd.DataFrame({"cover": cover, **table}, copy=False)
 
     def frames(
         self, convention: Perimeter, neighbours: int, *, members: tuple[int, ...] = ()

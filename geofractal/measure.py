@@ -209,8 +209,10 @@ class CoverPatches:
 
     Attributes
     ----------
-    table : as `geofractal.raster_patches` returns; ``zone`` is the number of a zone, -1 in none, -2 in
-        several
+    table : one row a patch: ``cover``, ``cells``, ``area_m2``, ``perimeter_m``, ``touches_edge`` and the
+        place of its first cell, ``first_row`` and ``first_column``; with outer cell edges
+        ``filled_area_m2`` and ``holes``; with zones ``zone``, the number of its zone, -1 in none, -2 in
+        several. Of polygons, ``geometry`` in place of cells
     zones : numbers of the zones told apart; zones that overlap come one after the other
     """
 

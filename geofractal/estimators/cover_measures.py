@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Collection, Iterator, Sequence
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
 from typing import TYPE_CHECKING, Annotated, Any, ClassVar, Literal, Self
 
 import numpy as np
@@ -166,22 +166,21 @@ def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[p
     first = next(found)
     whole = first.table
     wanted = cover.covers or tuple(whole["cover"].cat.remove_unused_categories().cat.categories)
-    rows = [_complete(fit(whole.assign(unit=WHOLE_MAP), ("unit", "cover")), [WHOLE_MAP], wanted)]
+    rows = [_complete(fit(whole, ("cover",)).assign(zone=-1), {-1: WHOLE_MAP}, wanted)]
     for part in (first, *found):
         if part.zones:
-            names = dict(zip(part.zones, (cover.zones.names[zone] for zone in part.zones), strict=True))
-            inside = part.table[part.table["zone"] >= 0]
-            units = inside["zone"].map(names).astype(str)
-            rows.append(_complete(fit(inside.assign(unit=units), ("unit", "cover")), names.values(), wanted))
+            names = {zone: cover.zones.names[zone] for zone in part.zones}
+            rows.append(_complete(fit(part.table, ("zone", "cover")), names, wanted))
     return pd.concat(rows, ignore_index=True), whole
 
 
-def _complete(fits: pd.DataFrame, units: Collection[str], wanted: Collection[str]) -> pd.DataFrame:
+def _complete(fits: pd.DataFrame, units: Mapping[int, str], wanted: Collection[str]) -> pd.DataFrame:
     """Return one row for each unit and class; those without a patch have no figure."""
     import pandas as pd
 
-    every = pd.MultiIndex.from_product([list(units), list(wanted)], names=["unit", "cover"])
-    return fits.astype({"cover": str}).set_index(["unit", "cover"]).reindex(every).reset_index()
+    every = pd.MultiIndex.from_product([list(units), list(wanted)], names=["zone", "cover"])
+    found = fits.astype({"zone": int, "cover": str}).set_index(["zone", "cover"]).reindex(every).reset_index()
+    return found.assign(unit=found["zone"].map(units))
 
 
 def _joined(verdict: Any, limit: Any) -> str:
