@@ -1,17 +1,31 @@
-"""For authors of measures: small specimens, and one check that a measure keeps the contract on them."""
+"""For authors of measures: small specimens, and checks that a measure keeps the contract on them."""
 
 from __future__ import annotations
 
 import copy
 import pickle
 from collections.abc import Sequence
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from geofractal.measure import PLANES, Column, Lines, Measure, Options, Values
-from geofractal.registry import check_measure_class, columns_of
+from geofractal.measure import (
+    FIGURE_COLUMNS,
+    PLANES,
+    Column,
+    CoverMap,
+    CoverMeasure,
+    Lines,
+    Measure,
+    Options,
+    Quantity,
+    Values,
+)
+from geofractal.registry import check_measure_class, columns_of, quantities_of
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 _DTYPES = {"number": np.float64, "count": np.int64, "text": object, "flag": np.int8}
 
@@ -102,6 +116,89 @@ def check_measure(measure_class: type[Measure[Any]], options: Options | None = N
         _check_same(f"{name}, pickled", values, twin.measure(lines, twin_options))
         _check_independence(name, measure, options, lines, values)
     _check_no_length(measure, options, columns[0])
+
+
+def cover_specimens(*, strip_rows: int | None = None) -> dict[str, CoverMap]:
+    """Return class maps that a measure meets: ordinary ones with zones, one cell, one class, no data at all.
+
+    Parameters
+    ----------
+    strip_rows : rows of each strip; must never change a result
+    """
+    import shapely
+
+    from geofractal.cover_map import RasterCover
+    from geofractal.landcover.zones import place_zones
+    from geofractal.reader.raster import RasterOptions, open_raster
+    from geofractal.reader.raster_source import ClassMap
+
+    rng = np.random.default_rng(7)
+    coarse = rng.integers(1, 4, (12, 16)).repeat(5, axis=0).repeat(5, axis=1)
+    ordinary = np.where(rng.random(coarse.shape) < 0.1, rng.integers(0, 4, coarse.shape), coarse)
+    maps = {
+        "ordinary": ordinary,
+        "one cell": np.ones((1, 1)),
+        "one class": np.ones((6, 7)),
+        "no data": np.zeros((5, 4)),
+        "all different": np.arange(1, 31).reshape(5, 6),
+    }
+    covers: dict[str, CoverMap] = {}
+    for name, codes in maps.items():
+        source = ClassMap(codes.astype(np.uint8), (25, 0, 499_000, 0, -25, 6_000_000), "EPSG:32631", nodata=0)
+        raster = open_raster(source, RasterOptions(strip_rows=strip_rows))
+        covers[name] = RasterCover(raster)
+        if name == "ordinary":
+            boxes = [(0, 30, 70, 60), (30, 10, 55, 50), (500, 500, 501, 501)]  # the last is off the map
+            squares = [shapely.affinity.translate(shapely.box(*b), 19_960, 239_940) for b in boxes]
+            polygons = [shapely.transform(square, lambda xy: xy * 25) for square in squares]
+            zones = place_zones(raster.grid, polygons, ["one", "two", "off"], raster.grid.crs)
+            groups: dict[str, tuple[str, ...]] = {"pair": ("1", "2")}
+            covers["zones and a group"] = RasterCover(raster, zones, None, groups, ("pair", "3", "9"))
+    return covers
+
+
+def check_cover_measure(measure_class: type[CoverMeasure[Any]], options: Options | None = None) -> None:
+    """Check that a measure of class maps keeps the contract on the specimens.
+
+    Checked are: its class and quantities, that it pickles, that it is pure, that the height of strips does
+    not change a result, that the table has its columns and only the quantities, units and border rules
+    that were announced, that an estimate lies in its interval, and that a figure that is missing has a note.
+
+    Parameters and errors as of `check_measure`.
+    """
+    check_measure_class(measure_class)
+    measure = measure_class()
+    options = measure_class.options() if options is None else options
+    quantities = {quantity.name: quantity for quantity in quantities_of(measure, options)}
+    twin, twin_options = pickle.loads(pickle.dumps((measure, options)))  # noqa: S301 - our own bytes
+    in_strips = cover_specimens(strip_rows=3)
+    for name, cover in cover_specimens().items():
+        figures = measure.measure(cover, options).figures
+        _check_figures(name, figures, quantities)
+        for how, again in {
+            "measured again": measure.measure(cover, options),
+            "pickled": twin.measure(cover, twin_options),
+            "in strips of other height": measure.measure(in_strips[name], options),
+        }.items():
+            if not figures.equals(again.figures):
+                raise AssertionError(f"{name}, {how}: the figures differ")
+
+
+def _check_figures(name: str, figures: pd.DataFrame, quantities: dict[str, Quantity]) -> None:
+    if tuple(figures) != FIGURE_COLUMNS:
+        raise AssertionError(f"{name}: the columns are {list(figures)}, not {list(FIGURE_COLUMNS)}")
+    for row in figures.itertuples(index=False):
+        where = f"{name}: {row.quantity} of {row.cover} in {row.reporting_unit}"
+        quantity = quantities.get(str(row.quantity))
+        if quantity is None:
+            raise AssertionError(f"{where}: no such quantity was announced")
+        if row.unit != quantity.unit or (row.border_rule or "") not in (quantity.border_rules or ("",)):
+            raise AssertionError(f"{where}: unit {row.unit!r} or rule {row.border_rule!r} was not announced")
+        missing = not np.isfinite(row.estimate)
+        if (missing or quantity.kind == "text") and not isinstance(row.note, str):
+            raise AssertionError(f"{where}: it is null and its note does not say why")
+        if not missing and (row.low > row.estimate or row.high < row.estimate):
+            raise AssertionError(f"{where}: {row.estimate} lies outside [{row.low}, {row.high}]")
 
 
 def _check_arrays(name: str, values: Values, columns: Sequence[Column], n: int) -> None:
