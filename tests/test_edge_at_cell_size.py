@@ -157,7 +157,9 @@ def test_compiled_kernels_equal_their_interpreted_twins(seed):
         )
         of(patch_sums, "add_sums")(group, values % 99, sums)
         of(patch_sums, "raise_largest")(group, values[:, 0].copy(), largest)
-        return shared, across, down, limbs, sums, largest
+        bucketed, offsets = np.empty(9, np.int64), np.zeros(5, np.int64)
+        of(patch_sums, "fill_buckets")(group + 1, values[:, 0].copy(), bucketed, offsets)
+        return shared, across, down, limbs, sums, largest, bucketed, offsets
 
     compiled = results(getattr)
     with pytest.MonkeyPatch.context() as patch:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import partial
 from typing import Annotated, Any, ClassVar, Literal
 
 import numpy as np
@@ -13,6 +14,7 @@ from geofractal.estimators import fragmentation_quantities as words
 from geofractal.estimators.fragmentation_cells import CellFigures
 from geofractal.estimators.fragmentation_links import link_figures
 from geofractal.estimators.fragmentation_table import Figures
+from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.covers import Pack, pack_groups
 from geofractal.landcover.edges import SharedEdges
 from geofractal.landcover.grid import Grid
@@ -145,10 +147,9 @@ def count_patches(cover: CoverMap, pack: Pack, options: FragmentationOptions) ->
     for first, members in enumerate((cover.zones.sets if cover.zones else ()) or ((),)):
         strips = _weighed(map_strips(cover, pack), area if first == 0 else np.zeros(1, np.int64))
         if members:
-            painter = ZonePainter(cover.zones, members, area)
             shared.begin()
-            strips = shared(painter(strips))
-        for found in label_patches(strips, neighbours=options.neighbours):
+            strips = shared(ZonePainter(cover.zones, members, area)(strips))
+        for found in label_patches(run_ahead(partial(iter, strips)), neighbours=options.neighbours):
             if first == 0:
                 everywhere = np.full(len(found.patches), n)
                 totals.add(everywhere, found.patches)

@@ -44,3 +44,16 @@ def raise_largest(group: Ints, values: Ints, largest: Ints) -> None:
     for i in range(len(group)):
         if group[i] >= 0 and values[i] > largest[group[i]]:
             largest[group[i]] = values[i]
+
+
+@kernel
+def fill_buckets(bucket: Ints, values: Ints, bucketed: Ints, offsets: Ints) -> None:
+    """Bring values together by bucket, in their order; bucket i owns offsets[i]:offsets[i + 1]."""
+    for i in range(len(bucket)):
+        offsets[bucket[i] + 1] += 1
+    for k in range(len(offsets) - 1):
+        offsets[k + 1] += offsets[k]
+    place = offsets[:-1].copy()
+    for i in range(len(bucket)):
+        bucketed[place[bucket[i]]] = values[i]
+        place[bucket[i]] += 1

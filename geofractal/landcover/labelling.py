@@ -272,23 +272,34 @@ def merge(lines: Ints, of: Ints, zone: Ints | None = None) -> tuple[Ints, Ints, 
     if not len(lines):
         return lines, of, of
     second = np.zeros_like(of) if zone is None else zone
-    order = np.lexsort((lines[:, _AT["first_column"]], lines[:, _AT["first_row"]], second, of))
+    order = np.argsort(of, kind="stable")
+    several = np.flatnonzero((np.bincount(of) > 1)[of[order]])  # the others, most of them, stay as they are
+    lot = order[several]
+    order[several] = lot[np.lexsort((_first_cell(lines[lot]), second[lot], of[lot]))]
     lines, of, second = lines[order], of[order], second[order]
     starts = np.flatnonzero(np.r_[True, (np.diff(of) != 0) | (np.diff(second) != 0)])
     count = np.diff(np.r_[starts, len(of)])
-    merged = lines[starts]
-    merged[:, SUMS_FROM:] = np.add.reduceat(lines[:, SUMS_FROM:], starts)
-    merged[:, _AT["last_row"]] = np.maximum.reduceat(lines[:, _AT["last_row"]], starts)
-    merged[:, _AT["left_column"]] = np.minimum.reduceat(lines[:, _AT["left_column"]], starts)
-    merged[:, _AT["right_column"]] = np.maximum.reduceat(lines[:, _AT["right_column"]], starts)
-    merged[np.ix_(count > 1, _OUTLINE)] = UNKNOWN
+    merged, joined = lines[starts], np.flatnonzero(count > 1)
+    if len(joined):
+        begins = np.cumsum(count[joined]) - count[joined]
+        lot = lines[np.repeat(count > 1, count)]
+        sums = np.add.reduceat(lot[:, SUMS_FROM:], begins)
+        sums[:, [column - SUMS_FROM for column in _OUTLINE]] = UNKNOWN
+        merged[joined, SUMS_FROM:] = sums
+        merged[joined, _AT["last_row"]] = np.maximum.reduceat(lot[:, _AT["last_row"]], begins)
+        merged[joined, _AT["left_column"]] = np.minimum.reduceat(lot[:, _AT["left_column"]], begins)
+        merged[joined, _AT["right_column"]] = np.maximum.reduceat(lot[:, _AT["right_column"]], begins)
     return merged, of[starts], count
 
 
+def _first_cell(lines: Ints) -> Ints:
+    """Return numbers in the order of first cells, row by row."""
+    number: Ints = (lines[:, _AT["first_row"]] << 31) + lines[:, _AT["first_column"]]
+    return number
+
+
 def _order(lines: Ints) -> Ints:
-    order: Ints = np.lexsort(
-        (lines[:, _AT["first_column"]], lines[:, _AT["first_row"]], lines[:, _AT["last_row"]])
-    )
+    order: Ints = np.lexsort((_first_cell(lines), lines[:, _AT["last_row"]]))
     return order
 
 

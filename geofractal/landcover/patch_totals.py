@@ -6,10 +6,11 @@ Memory grows with units and classes, and with the number of different patch area
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from itertools import pairwise
 
 import numpy as np
 
-from geofractal.kernels.patch_sums import DIGIT, LIMBS, add_products, add_sums, raise_largest
+from geofractal.kernels.patch_sums import DIGIT, LIMBS, add_products, add_sums, fill_buckets, raise_largest
 from geofractal.landcover.grid import Ints
 from geofractal.landcover.labelling import PatchTable
 
@@ -174,24 +175,28 @@ class SizeCounts:
     def _settle(self) -> None:
         if not self._n_waiting:
             return
-        group = np.concatenate([self._group, *(group for group, _ in self._waiting)])
-        area = np.concatenate([self._area, *(area for _, area in self._waiting)])
-        counts = np.concatenate([self._counts, np.ones(self._n_waiting, np.int64)])
+        group = np.concatenate([group for group, _ in self._waiting])
+        area = np.concatenate([area for _, area in self._waiting])
         self._waiting, self._n_waiting = [], 0
-        self._count(group, area, counts)
+        names, number = np.unique(group, return_inverse=True)
+        bucketed, offsets = np.empty_like(area), np.zeros(len(names) + 1, np.int64)
+        fill_buckets(number, area, bucketed, offsets)
+        for first, stop in pairwise(offsets):
+            bucketed[first:stop].sort()
+        self._merge(np.repeat(names, np.diff(offsets)), bucketed)
         if len(self._counts) > MOST_SIZES and not self._rounded:
             self._rounded = True
-            self._count(self._group, self._area, self._counts)
+            self._merge(self._group[:0], self._area[:0])
 
-    def _count(self, group: Ints, area: Ints, counts: Ints) -> None:
-        """Keep different areas of each group in order, and how often each occurs."""
+    def _merge(self, group: Ints, area: Ints) -> None:
+        """Take in areas that are in order by group: keep different ones, and how often each occurs."""
+        group, area, counts = _counted(group, area, np.ones(len(area), np.int64))
+        group, area = np.concatenate([self._group, group]), np.concatenate([self._area, area])
+        counts = np.concatenate([self._counts, counts])
         if self._rounded:
             area = _round_bits(area)
         order = np.lexsort((area, group))
-        group, area = group[order], area[order]
-        starts = np.flatnonzero(np.r_[True, (np.diff(group) != 0) | (np.diff(area) != 0)])
-        self._group, self._area = group[starts], area[starts]
-        self._counts = np.add.reduceat(counts[order], starts)
+        self._group, self._area, self._counts = _counted(group[order], area[order], counts[order])
 
     def median(self, unit: int, kind: int) -> float:
         """Return the median area of a unit and class, NaN where it has no patch."""
@@ -208,6 +213,14 @@ class SizeCounts:
 
 
 _FAR = 1 << 32
+
+
+def _counted(group: Ints, area: Ints, counts: Ints) -> tuple[Ints, Ints, Ints]:
+    """Return the different ones of areas that are in order by group, and how often each occurs."""
+    if not len(area):
+        return group, area, counts
+    starts = np.flatnonzero(np.r_[True, (np.diff(group) != 0) | (np.diff(area) != 0)])
+    return group[starts], area[starts], np.add.reduceat(counts, starts)
 
 
 def _round_bits(area: Ints) -> Ints:
