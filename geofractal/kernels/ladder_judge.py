@@ -96,7 +96,7 @@ def _interval(row: Floats, c: Constants) -> None:
     half = c.quantile * row[PROCESS_ERROR]
     reach = min(half / max(gap, 0.002), c.skew * (0.05 / max(gap, 0.007)) ** 0.37)
     tilt = min(max((gap - 0.35) / 0.3, 0.0), 1.0)
-    short = min(3.0 / (row[LAST_X] - row[FIRST_X]), 1.0) ** 3
+    short = min(3.0 / (row[LAST_X] - row[FIRST_X]), 1.0) ** 2
     row[LOW] = max(row[DIMENSION] - half * (1.0 - 0.1 * tilt), 1.0)
     row[HIGH] = max(row[DIMENSION] + half + c.tilt * tilt * short, 1.0 + gap * np.exp(reach))
     if row[VERDICT] == TWO_REGIME or row[VERDICT] == CURVED:
@@ -149,7 +149,7 @@ def _judge(
     row[OWN_ERROR] = own
     row[PROCESS_ERROR] = np.sqrt(own**2 + c.bend**2 * bends + doubt**2 + closure**2 + ripple**2)
     row[VERDICT] = POWER_LAW
-    compare_models(row, w, x, z, residual, xx * max(own, 0.01 * gap) ** 2, c)
+    compare_models(row, w, x, z, residual, xx * (max(own, 0.01 * gap) ** 2 + doubt**2), c)
     if row[DIMENSION] <= c.smooth_below and row[VERDICT] != TWO_REGIME:
         row[VERDICT] = SMOOTH
     _interval(row, c)
