@@ -36,13 +36,12 @@ DIMENSION = {"measure": "area-perimeter-dimension", "of": "cover"}
 
 
 def write_map(path, codes=CODES, crs=UTM, cell=CELL, **profile):
-    codes = np.asarray(codes)
-    given = {"driver": "GTiff", "count": 1, "dtype": codes.dtype, "crs": crs, **profile}
-    transform = given.pop("transform", Affine(cell, 0, WEST, 0, -cell, NORTH))
-    with rasterio.open(
-        path, "w", height=codes.shape[0], width=codes.shape[1], transform=transform, **given
-    ) as dataset:
-        dataset.write(codes, 1)
+    bands = np.asarray(codes).reshape(-1, *np.shape(codes)[-2:])
+    count, height, width = bands.shape
+    shape = {"driver": "GTiff", "count": count, "height": height, "width": width, "dtype": bands.dtype}
+    transform = Affine(cell, 0, WEST, 0, -cell, NORTH)
+    with rasterio.open(path, "w", **shape, crs=crs, transform=transform, **profile) as dataset:
+        dataset.write(bands)
     return path
 
 
