@@ -114,12 +114,16 @@ class PolygonCover:
     geometries : (n,) shapely geometries
     classes : (n,) class of each, None where all are one class
     crs : of the polygons
+    dissolve : whether polygons of one class that overlap or share a boundary are one patch
+    left_out : why geometries are in no patch, and how many; known once patches were asked for
     """
 
     geometries: Any
     classes: Any
     crs: Any
     covers: tuple[str, ...] = ()
+    dissolve: bool = True
+    left_out: dict[str, int] = field(default_factory=dict)
     raster: None = None
     zones: None = None
     barriers: None = None
@@ -138,8 +142,14 @@ class PolygonCover:
         if perimeter == "smoothed":
             raise LayerError("perimeter: smoothed is for class maps; polygons have no cells to smooth.")
         table = polygon_patches(
-            self.geometries, crs=self.crs, cover=self.classes, neighbours=neighbours, perimeter=perimeter
+            self.geometries,
+            crs=self.crs,
+            cover=self.classes,
+            neighbours=neighbours,
+            dissolve=self.dissolve,
+            perimeter=perimeter,
         )
+        self.left_out.update(table.attrs["left_out"])
         names = self.covers or tuple(table["cover"].cat.categories)
         table = table[table["cover"].isin(names)].reset_index(drop=True)
         yield CoverPatches(

