@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from pydantic import ValidationError
 
 from geofractal.cover_map import RasterCover
-from geofractal.errors import ConfigError
+from geofractal.errors import ConfigError, LayerError
 from geofractal.estimators.fragmentation import Fragmentation, FragmentationOptions
+from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
 from geofractal.landcover.barriers import place_barriers
 from geofractal.landcover.zones import place_zones
 from geofractal.patches import open_class_map
@@ -23,7 +25,7 @@ if TYPE_CHECKING:
 
 
 def fragmentation(
-    raster: RasterLike,
+    source: RasterLike | Any,
     *,
     zones: Any = None,
     zone_names: str | Sequence[Any] | None = None,
@@ -31,21 +33,26 @@ def fragmentation(
     groups: Mapping[str, Sequence[str]] | None = None,
     covers: Sequence[str] = (),
     reading: RasterOptions | None = None,
+    cover: str | Sequence[Any] | None = None,
+    extent: Any = None,
     **options: Any,
 ) -> pd.DataFrame:
     """Return how classes and habitat groups are broken up, for each zone and for the whole map.
 
     Parameters
     ----------
-    raster : a path, or codes with transform and CRS
+    source : a raster, as a path or as codes with transform and CRS; or a GeoDataFrame or GeoSeries of
+        polygons, of which amount and mesh size are measured
     zones : GeoDataFrame or GeoSeries of polygons in any CRS, or a sequence of shapely polygons in the
-        raster's own; cells belong to them by their centre. They may overlap
+        source's own; cells belong to them by their centre. They may overlap
     zone_names : column of a GeoDataFrame, or one name a zone; numbers from 1 where left out
     barriers : lines, given as zones are: links between neighbouring cells whose centre line they cross are
-        cut
+        cut. For rasters only
     groups : name of a group -> its classes; each is measured as one class
     covers : classes and groups wanted; all of them where left out
-    reading : how to read the raster
+    reading : how to read a raster
+    cover : of polygons, the column or the values that name the class of each; None for one class
+    extent : of polygons, the area mapped: patches that reach its boundary touch the edge of the data
     **options : of `geofractal.estimators.fragmentation.FragmentationOptions`
 
     Returns
@@ -60,36 +67,51 @@ def fragmentation(
     ConfigError
         an option is wrong, or zones share a name
     SourceError, LayerError
-        as `geofractal.raster_patches`, or there is no way from the zones' CRS to the raster's
+        as `geofractal.raster_patches`, or there is no way from the zones' CRS to the source's
 
     Examples
     --------
-    Two patches of 8 cells on 16 make meshes of 8 cells.
+    Two patches of 8 cells on 16 make meshes of 8 x 8 / 16 cells each.
 
     >>> codes = np.repeat([[1, 1, 2, 2]], 4, axis=0)
     >>> found = fragmentation((codes, (1000, 0, 0, 0, -1000, 0), 'LOCAL_CS["plane",UNIT["metre",1]]'))
     >>> found[found["quantity"] == "effective_mesh_size"]["estimate"].unique().tolist()
     [4.0]
     """
-    opened = open_class_map(raster, reading, {})
     try:
         chosen = FragmentationOptions(**{key: _frozen(value) for key, value in options.items()})
     except ValidationError as error:
         raise ConfigError(f"fragmentation: {error}") from None
-    placed = (
-        None
-        if zones is None
-        else place_zones(
-            opened.grid, _geometries(zones), _names(zones, zone_names), _crs(zones, opened.source_grid.crs)
-        )
-    )
-    lines = (
-        None
-        if barriers is None
-        else place_barriers(opened.grid, _geometries(barriers), _crs(barriers, opened.source_grid.crs))
-    )
+    names = () if zones is None else tuple(map(str, _names(zones, zone_names)))
     taken = {name: tuple(members) for name, members in (groups or {}).items()}
+    if hasattr(source, "geometry"):
+        if barriers is not None:
+            raise ConfigError("Barriers cut links between cells; give the classes as a raster.")
+        layer = _polygon_layer(source, cover, zones)
+        return polygon_fragmentation(
+            replace(layer, extent=extent, zone_names=names, groups=taken, covers=tuple(covers)), chosen
+        )
+    opened = open_class_map(source, reading, {})
+    own, grid = opened.source_grid.crs, opened.grid
+    placed = None if zones is None else place_zones(grid, _geometries(zones), names, _crs(zones, own))
+    lines = None if barriers is None else place_barriers(grid, _geometries(barriers), _crs(barriers, own))
     return Fragmentation().measure(RasterCover(opened, placed, lines, taken, tuple(covers)), chosen).figures
+
+
+def _polygon_layer(source: Any, cover: str | Sequence[Any] | None, zones: Any) -> PolygonLayer:
+    """Return polygons with their classes, and zones in their CRS."""
+    if source.crs is None:
+        raise LayerError("The polygons carry no CRS; give it with set_crs.")
+    column = ["all"] * len(source) if cover is None else source[cover] if isinstance(cover, str) else cover
+    moved = zones.to_crs(source.crs) if hasattr(zones, "to_crs") and zones.crs is not None else zones
+    geometries = np.array([*source.geometry, None], object)[:-1]
+    return PolygonLayer(
+        geometries,
+        [str(name) for name in column],
+        source.crs,
+        None,
+        () if zones is None else _geometries(moved),
+    )
 
 
 def _frozen(value: Any) -> Any:

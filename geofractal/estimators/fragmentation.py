@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import partial
@@ -13,9 +14,9 @@ from pydantic import Field
 from geofractal.estimators import fragmentation_quantities as words
 from geofractal.estimators.fragmentation_cells import CellFigures
 from geofractal.estimators.fragmentation_links import link_figures
-from geofractal.estimators.fragmentation_table import Figures
+from geofractal.estimators.fragmentation_table import Figures, Reporting
 from geofractal.landcover.ahead import run_ahead
-from geofractal.landcover.covers import Pack, pack_groups
+from geofractal.landcover.covers import Pack
 from geofractal.landcover.edges import SharedEdges
 from geofractal.landcover.grid import Grid
 from geofractal.landcover.labelling import PatchTable, label_patches
@@ -75,21 +76,37 @@ class Fragmentation(CoverMeasure[FragmentationOptions]):
 
     def measure(self, cover: CoverMap, options: FragmentationOptions) -> CoverResult:
         """Measure classes in one reading for each set of zones, then what was asked for beyond."""
-        figures = Figures(cover, options)
-        for pack in packs_of(cover):
+        figures = Figures(about(cover), options)
+        for pack in figures.about.packs():
             totals = count_patches(cover, pack, options)
-            figures.add_patches(pack, totals)
+            figures.add_totals(pack, totals)
             CellFigures(cover, pack, options, totals).add_to(figures)
             link_figures(cover, pack, options, totals, figures)
         return CoverResult(figures.table())
 
 
-def packs_of(cover: CoverMap) -> tuple[Pack, ...]:
-    """Return what covers are measured together: the classes, then groups, as far as asked for."""
-    wanted = cover.covers or tuple(cover.groups)
-    packs = pack_groups({name: cover.groups[name] for name in wanted if name in cover.groups})
-    classes = not cover.covers or any(name not in cover.groups for name in cover.covers)
-    return (Pack(), *packs) if classes else packs
+def about(cover: CoverMap) -> Reporting:
+    """Return what the rows of a class map's table are about."""
+    grid, zones = cover.raster.grid, cover.zones
+    told = (
+        {}
+        if zones is None
+        else {
+            "zones": zones.names,
+            "problems": zones.problems,
+            "overlaps": zones.overlaps,
+            "outside_m2": zones.outside_m2,
+        }
+    )
+    return Reporting(
+        cover.raster.legend.names,
+        cover.groups,
+        cover.covers,
+        math.sqrt(math.prod(grid.typical_cell)),
+        grid.area_unit_m2,
+        grid.length_unit_m,
+        **told,
+    )
 
 
 @dataclass(frozen=True)
@@ -117,16 +134,18 @@ class MapTotals:
         """Return the totals of a unit and cover."""
         return self.patches.of(unit, kind)
 
-    def edge(self, unit: int, kind: int) -> float:
-        """Return the length of class-change edges in metres."""
-        shared = 0
-        if unit < self.whole and kind < self.shared.shape[1]:
-            shared = int(self.shared[unit, kind])
-        return (2 * self.of(unit, kind).inner_edge + shared) / 2 * self.grid.length_unit_m
+    def twice_edge(self, unit: int, kind: int) -> int:
+        """Return twice the length of class-change edges, in the grid's unit."""
+        zoned = unit < self.whole and kind < self.shared.shape[1]
+        return 2 * self.of(unit, kind).inner_edge + (int(self.shared[unit, kind]) if zoned else 0)
 
     def covered(self, unit: int) -> int:
         """Return the covered area of a unit, in the grid's unit."""
         return sum(self.of(unit, kind).area for kind in range(self.patches.classes))
+
+    def uncovered(self, unit: int) -> int:
+        """Return the area of a unit's cells without data, in the grid's unit."""
+        return int(self.all_area[unit]) - self.covered(unit)
 
 
 def map_strips(cover: CoverMap, pack: Pack, members: tuple[int, ...] = ()) -> Iterator[Strip]:

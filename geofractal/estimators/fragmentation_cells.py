@@ -42,7 +42,7 @@ class CellFigures:
 
     def add_to(self, figures: Figures) -> None:
         """Add the rows of edges at stated cell sizes, interior area, lacunarity and box dimensions."""
-        wanted = figures.wanted(self.pack)
+        wanted = figures.about.wanted(self.pack)
         for turn, members in enumerate((self.map.zones.sets if self.map.zones else ()) or ((),)):
             units = [
                 unit for unit in figures.measured() if unit in members or (turn == 0 and unit == self.zones)

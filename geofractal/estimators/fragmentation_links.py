@@ -32,7 +32,7 @@ def link_figures(
         return
     from geofractal.estimators.fragmentation import map_strips
 
-    wanted, grid = figures.wanted(pack), cover.raster.grid
+    wanted, grid = figures.about.wanted(pack), cover.raster.grid
     few = [
         kind
         for kind, _ in wanted

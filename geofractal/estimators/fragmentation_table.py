@@ -3,8 +3,12 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from typing import TYPE_CHECKING, Any
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
 
 from geofractal.estimators.fragmentation_quantities import (
     ACROSS,
@@ -14,58 +18,96 @@ from geofractal.estimators.fragmentation_quantities import (
     CUT,
     quantities_of,
 )
-from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP, CoverMap
+from geofractal.landcover.covers import Pack, pack_groups
+from geofractal.landcover.patch_totals import Totals
+from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP
 
 if TYPE_CHECKING:
     import pandas as pd
 
-    from geofractal.estimators.fragmentation import FragmentationOptions, MapTotals
-    from geofractal.landcover.covers import Pack
-    from geofractal.landcover.patch_totals import Totals
+    from geofractal.estimators.fragmentation import FragmentationOptions
 
 NO_DATA = "no data in this zone"
 ABSENT = "no patch of this class"
 
 
-class Figures:
-    """Collects the rows of the table.
+@dataclass(frozen=True)
+class Reporting:
+    """What the rows of the table are about.
 
-    Parameters
+    Attributes
     ----------
-    cover : the map; zones that cannot be measured get one row that says why
-    options : decide which quantities there are
+    classes : of the map; may grow while it is read for the first time
+    groups, covers : groups of classes, and what is asked for; all of it where empty
+    cell_m : side of a cell, NaN where there are none
+    area_unit_m2, length_unit_m : units of totals
+    zones : names of the zones
+    problems : why a zone cannot be measured, empty where it can
+    overlaps : numbers of the zones that share an area with each
+    outside_m2 : area of each zone off the map
     """
 
-    def __init__(self, cover: CoverMap, options: FragmentationOptions) -> None:
-        self.units: tuple[str, ...] = (*(cover.zones.names if cover.zones else ()), WHOLE_MAP)
-        self.problems: tuple[str, ...] = (*(cover.zones.problems if cover.zones else ()), "")
-        self._map = cover
-        self._quantities = {
-            quantity.name: (i, quantity.unit) for i, quantity in enumerate(quantities_of(options))
-        }
+    classes: Sequence[str]
+    groups: Mapping[str, tuple[str, ...]]
+    covers: tuple[str, ...]
+    cell_m: float
+    area_unit_m2: float
+    length_unit_m: float
+    zones: tuple[str, ...] = ()
+    problems: tuple[str, ...] = ()
+    overlaps: Sequence[tuple[int, ...]] = ()
+    outside_m2: Sequence[float] | NDArray[np.float64] = ()
+
+    def packs(self) -> tuple[Pack, ...]:
+        """Return what is measured together: classes, then groups, as far as asked for."""
+        wanted = self.covers or tuple(self.groups)
+        packs = pack_groups({name: self.groups[name] for name in wanted if name in self.groups})
+        classes = not self.covers or any(name not in self.groups for name in self.covers)
+        return (Pack(), *packs) if classes else packs
+
+    def wanted(self, pack: Pack) -> list[tuple[int, str]]:
+        """Return number and name of the covers of a pack that are asked for."""
+        names = pack.covers(self.classes)
+        found = [(k, name) for k, name in enumerate(names) if not self.covers or name in self.covers]
+        if not pack.names:
+            missing = [name for name in self.covers if name not in names and name not in self.groups]
+            found += [(len(names) + i, name) for i, name in enumerate(missing)]
+        return found
+
+
+class UnitTotals(Protocol):
+    """Totals of patches by unit and cover of a pack; the unit after the last zone is the whole map."""
+
+    def of(self, unit: int, kind: int) -> Totals:
+        """Return the totals of a unit and cover."""
+
+    def covered(self, unit: int) -> int:
+        """Return the area of a unit with data."""
+
+    def uncovered(self, unit: int) -> int:
+        """Return the area of a unit without data, but for what lies off the map."""
+
+    def twice_edge(self, unit: int, kind: int) -> int | None:
+        """Return twice the length of class-change edges, None where edges are not measured."""
+
+
+class Figures:
+    """Collects the rows of the table; zones that cannot be measured get one that says why."""
+
+    def __init__(self, about: Reporting, options: FragmentationOptions) -> None:
+        self.about = about
+        self._units, self._problems = (*about.zones, WHOLE_MAP), (*about.problems, "")
+        self._quantities = {one.name: (i, one.unit) for i, one in enumerate(quantities_of(options))}
         self._covers: dict[str, int] = {}
         self._rows: list[tuple[tuple[int, int, int, str], tuple[Any, ...]]] = []
-        width, height = cover.raster.grid.typical_cell
-        self._cell = math.sqrt(width * height)
-        self._km2 = cover.raster.grid.area_unit_m2 / 1e6
-        for unit, problem in enumerate(self.problems):
+        self._km2, self._km = about.area_unit_m2 / 1e6, about.length_unit_m / 1e3
+        for unit, problem in enumerate(self._problems):
             if problem:
                 self.add(unit, ALL_COVERS, "area", math.nan, note=problem)
 
     def measured(self) -> list[int]:
         """Return the units that can be measured."""
-        return [unit for unit, problem in enumerate(self.problems) if not problem]
-
-    def wanted(self, pack: Pack) -> list[tuple[int, str]]:
-        """Return number and name of the covers of a pack that are asked for."""
-        asked = self._map.covers
-        names = pack.covers(self._map.raster.legend.names)
-        found = [(k, name) for k, name in enumerate(names) if not asked or name in asked]
-        if not pack.names:
-            groups = self._map.groups
-            missing = [name for name in asked if name not in names and name not in groups]
-            found += [(len(names) + i, name) for i, name in enumerate(missing)]
-        return found
+        return [unit for unit, problem in enumerate(self._problems) if not problem]
 
     def add(
         self,
@@ -84,8 +126,8 @@ class Figures:
         place, sign = self._quantities[quantity]
         values = (float(value) if math.isfinite(value) else math.nan for value in (estimate, low, high))
         order = (unit, self._covers.setdefault(cover, len(self._covers)), place, rule)
-        cell = self._cell if cell is None else cell
-        self._rows.append((order, (self.units[unit], cover, quantity, rule, cell, *values, sign, note)))
+        cell = self.about.cell_m if cell is None else cell
+        self._rows.append((order, (self._units[unit], cover, quantity, rule, cell, *values, sign, note)))
 
     def table(self) -> pd.DataFrame:
         """Return the table: by zone, the whole map last, then by cover and quantity."""
@@ -96,40 +138,34 @@ class Figures:
         texts = ("reporting_unit", "cover", "quantity", "border_rule", "unit", "note")
         return table.astype(dict.fromkeys(texts, object))
 
-    def add_patches(self, pack: Pack, totals: MapTotals) -> None:
-        """Add all that comes of the totals of patches."""
+    def add_totals(self, pack: Pack, totals: UnitTotals) -> None:
+        """Add all that comes of the totals of patches; those of all covers with the first pack."""
+        first = not any(row[2] == "area_not_covered" for _, row in self._rows)
         for unit in self.measured():
             covered = totals.covered(unit)
-            self._add_all(unit, pack, totals, covered)
-            for kind, name in self.wanted(pack):
+            if first:
+                self._add_all(unit, pack, totals, covered)
+            for kind, name in self.about.wanted(pack):
                 one = totals.of(unit, kind)
                 self._add_amount(unit, name, one, covered)
-                self._add_edges(unit, name, totals.edge(unit, kind), self._outer(totals, [one]), covered)
+                twice = totals.twice_edge(unit, kind)
+                if twice is not None:
+                    self._add_edge(unit, name, CHANGES, twice / 2, covered)
+                    self._add_edge(unit, name, ALL_EDGES, one.outer_edge, covered)
                 self._add_mesh(unit, name, one, covered)
 
-    def _outer(self, totals: MapTotals, of: Sequence[Totals]) -> float:
-        return sum(one.outer_edge for one in of) * totals.grid.length_unit_m
-
-    def _add_all(self, unit: int, pack: Pack, totals: MapTotals, covered: int) -> None:
-        """Add area with and without data and all edges, once for the map."""
-        if pack.names and ALL_COVERS in self._covers and not any(self.problems):
-            return
-        if pack.names and any(order[0] == unit and row[2] == "area_not_covered" for order, row in self._rows):
-            return
-        zones = self._map.zones
-        beyond = zones.outside_m2[unit] / 1e6 if unit < totals.whole else 0.0
-        note = None
-        if unit < totals.whole and zones.overlaps[unit]:
-            note = "overlaps " + ", ".join(self.units[other] for other in zones.overlaps[unit])
+    def _add_all(self, unit: int, pack: Pack, totals: UnitTotals, covered: int) -> None:
+        """Add area with and without data, and edges between any classes where these are told apart."""
+        is_zone = unit < len(self.about.zones)
+        others = self.about.overlaps[unit] if is_zone else ()
+        note = "overlaps " + ", ".join(self._units[other] for other in others) if others else None
         self.add(unit, ALL_COVERS, "area", covered * self._km2, note=note)
-        missing = (int(totals.all_area[unit]) - covered) * self._km2 + beyond
-        self.add(unit, ALL_COVERS, "area_not_covered", missing)
-        if pack.names:
-            return
-        kinds = range(totals.patches.classes)
-        inner = sum(totals.edge(unit, kind) for kind in kinds) / 2
-        outer = self._outer(totals, [totals.of(unit, kind) for kind in kinds])
-        self._add_edges(unit, ALL_COVERS, inner, outer - inner, covered)
+        beyond = self.about.outside_m2[unit] / 1e6 if is_zone else 0.0
+        self.add(unit, ALL_COVERS, "area_not_covered", totals.uncovered(unit) * self._km2 + beyond)
+        twice = [totals.twice_edge(unit, kind) for kind in range(len(self.about.classes))]
+        lengths = [one for one in twice if one is not None]
+        if not pack.names and len(lengths) == len(twice):
+            self._add_edge(unit, ALL_COVERS, CHANGES, sum(lengths) / 4, covered)
 
     def _add_amount(self, unit: int, name: str, one: Totals, covered: int) -> None:
         area = one.area * self._km2
@@ -146,10 +182,9 @@ class Figures:
             note = None if one.patches else ABSENT
             self.add(unit, name, quantity, value * self._km2, rule=CUT, note=note)
 
-    def _add_edges(self, unit: int, name: str, inner: float, outer: float, covered: int) -> None:
-        for rule, metres in ((CHANGES, inner), (ALL_EDGES, outer)):
-            self.add(unit, name, "edge_length", metres / 1e3, rule=rule)
-            self._ratio(unit, name, "edge_density", metres / 1e3, covered * self._km2, rule=rule)
+    def _add_edge(self, unit: int, name: str, rule: str, length: float, covered: int) -> None:
+        self.add(unit, name, "edge_length", length * self._km, rule=rule)
+        self._ratio(unit, name, "edge_density", length * self._km, covered * self._km2, rule=rule)
 
     def _add_mesh(self, unit: int, name: str, one: Totals, covered: int) -> None:
         coherence = one.squares / covered**2 if covered else math.nan

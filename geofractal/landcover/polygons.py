@@ -60,7 +60,7 @@ def find_polygon_patches(
         every part of every polygon is a patch
     """
     covers = np.asarray(cover, dtype=object)
-    reasons = np.array([_unusable(geometry) for geometry in geometries], dtype=object)
+    reasons = np.array([unusable(geometry) for geometry in geometries], dtype=object)
     good = reasons == ""
     left_out = dict(Counter(reasons[~good]))
     geometries, covers = shapely.force_2d(geometries[good]), covers[good]
@@ -93,7 +93,8 @@ def _as_array(geometries: list[Any]) -> Geometries:
     return out
 
 
-def _unusable(geometry: Any) -> str:
+def unusable(geometry: Any) -> str:
+    """Return why a geometry is no sound polygon; empty where it is one."""
     if geometry is None:
         return "missing geometry"
     if geometry.geom_type not in {"Polygon", "MultiPolygon"}:

@@ -19,7 +19,7 @@ from geofractal.errors import ConfigError, LayerError
 from geofractal.kernels.patch_tables import span
 from geofractal.kernels.zone_rows import count_crossings, find_crossings, overlapping, paint_runs
 from geofractal.landcover.grid import CellSizes, Floats, Grid, Ints, is_engineering
-from geofractal.landcover.polygons import ring_size
+from geofractal.landcover.polygons import ring_size, unusable
 from geofractal.landcover.strips import OUTSIDE, Strip
 
 if TYPE_CHECKING:
@@ -156,14 +156,8 @@ class Placer:
 
 def _placed(placer: Placer, geometry: Any) -> tuple[str, Any]:
     """Return why a zone cannot be measured, or it in columns and rows."""
-    if geometry is None:
-        return "missing geometry", None
-    if geometry.geom_type not in {"Polygon", "MultiPolygon"}:
-        return f"{geometry.geom_type}, not a polygon", None
-    if geometry.is_empty:
-        return "empty geometry", None
-    if not geometry.is_valid:
-        return f"invalid: {shapely.is_valid_reason(geometry).split('[')[0].strip()}", None
+    if reason := unusable(geometry):
+        return reason, None
     placed = placer(shapely.force_2d(geometry))
     if not np.isfinite(shapely.get_coordinates(placed)).all():
         return "reaches where the raster's CRS is not defined", None
