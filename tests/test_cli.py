@@ -340,7 +340,7 @@ def test_a_starter_never_replaces_a_file(call, folder, layers):
     ("name", "words"),
     [
         ("nowhere.gpkg", "nowhere.gpkg: no such file or folder"),
-        ("empty", "empty: holds no vector file; known endings: .gpkg"),
+        ("empty", "empty: holds no vector or raster file; known endings: .gpkg"),
         ("shore.gpkg", "shore.gpkg"),
     ],
 )

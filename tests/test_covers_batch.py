@@ -20,6 +20,7 @@ from pyproj import CRS
 from scipy import ndimage
 
 from geofractal.batch.check import check_batch
+from geofractal.batch.inspect import inspect_path
 from geofractal.batch.run import run_batch
 from geofractal.config import load_config
 from geofractal.errors import ConfigError
@@ -247,6 +248,19 @@ def test_check_tells_grid_classes_zones_and_columns_beforehand(site):
     assert "each of the 2 rows of zones" in told
     assert "habitat_effective_mesh_size_cut_at_the_border_km2 [km2]" in told
     assert not (site / "out").exists()
+
+
+def test_inspect_tells_rasters_from_their_headers(site):
+    _floats(site / "floats.tif")
+    found = inspect_path(site)
+    (raster,) = found.rasters
+    assert (raster.rows, raster.columns, raster.crs) == (4, 4, "WGS 84 / UTM zone 31N")
+    assert raster.cell_width_m == pytest.approx(CELL / 0.9996, rel=1e-6)
+    assert "set whole-numbers: true" in found.unread[str(site / "floats.tif")]
+    assert "raster, 4 rows and 4 columns" in "\n".join(found.lines())
+    shipped = inspect_path(ROOT / "sample_layers" / "land_cover_2006.tif").as_dict()["rasters"][0]
+    assert shipped["classes"][1] == "open water"
+    assert shipped["nodata"] == (0,)
 
 
 # Zones that are odd

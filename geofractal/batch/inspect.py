@@ -11,6 +11,8 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
+from geofractal.batch.inspect_rasters import RasterReport, inspect_raster
+from geofractal.config.models import RASTER_ENDINGS
 from geofractal.errors import GeofractalError, SourceError
 from geofractal.measure import Floats, Lines
 from geofractal.progress import Progress
@@ -73,24 +75,27 @@ class Inspection:
     """What a file or folder holds; `unread` says why some of it could not be read."""
 
     layers: tuple[LayerReport, ...]
+    rasters: tuple[RasterReport, ...]
     unread: dict[str, str]
 
     def as_dict(self) -> dict[str, Any]:
         """Return all of it as plain data for JSON."""
         return {
             "layers": [asdict(layer) | {"path": str(layer.path)} for layer in self.layers],
+            "rasters": [asdict(raster) | {"path": str(raster.path)} for raster in self.rasters],
             "unread": self.unread,
         }
 
     def lines(self) -> list[str]:
         """Return all of it as text."""
         text = [line for layer in self.layers for line in (*_layer_lines(layer), "")]
+        text += [line for raster in self.rasters for line in (*raster.lines(), "")]
         text += [f"{path}: cannot be read: {reason}" for path, reason in self.unread.items()]
         return text or ["nothing to measure here"]
 
 
 def inspect_path(path: Path, *, progress: Progress | None = None) -> Inspection:
-    """Read every layer of a file, or of all vector files of a folder, in bounded memory.
+    """Read every layer of a file, or of all vector files of a folder, and the headers of its rasters.
 
     Raises
     ------
@@ -100,12 +105,20 @@ def inspect_path(path: Path, *, progress: Progress | None = None) -> Inspection:
     progress = progress or Progress()
     if not path.exists():
         raise SourceError(f"{path}: no such file or folder")
-    files = sorted(file for file in path.iterdir() if driver_of(file)) if path.is_dir() else [path]
+    files = sorted(file for file in path.iterdir() if _known(file)) if path.is_dir() else [path]
     if not files:
-        raise SourceError(f"{path}: holds no vector file; known endings: {', '.join(SUFFIXES)}")
+        endings = ", ".join((*SUFFIXES, *RASTER_ENDINGS))
+        raise SourceError(f"{path}: holds no vector or raster file; known endings: {endings}")
     reports: list[LayerReport] = []
+    rasters: list[RasterReport] = []
     unread: dict[str, str] = {}
     for file in files:
+        if file.suffix.lower() in RASTER_ENDINGS:
+            try:
+                rasters.append(inspect_raster(file))
+            except GeofractalError as error:
+                unread[str(file)] = str(error)
+            continue
         try:
             names = list_layers(file)
         except SourceError as error:
@@ -118,7 +131,11 @@ def inspect_path(path: Path, *, progress: Progress | None = None) -> Inspection:
                 reports.append(_inspect_layer(file, name, progress))
             except GeofractalError as error:
                 unread[f"{file}, layer {name}"] = str(error)
-    return Inspection(tuple(reports), unread)
+    return Inspection(tuple(reports), tuple(rasters), unread)
+
+
+def _known(file: Path) -> bool:
+    return driver_of(file) is not None or file.suffix.lower() in RASTER_ENDINGS
 
 
 class _LogHistogram:
