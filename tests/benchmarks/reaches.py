@@ -27,6 +27,7 @@ BAD, MULTI, LONG = 0.02, 0.05, 0.01
 LONG_VERTICES = 300
 REACHES = 20
 DRIFT = (9.0, 0.0)
+LADDER = {"ruler-min-m": 50, "ruler-max-m": 160}  # stated, since by itself a reach this short gets no ladder
 HEAD = (
     f"{'what':34} {'features':>10} {'rungs':>5} {'s':>7} {'features/s':>11} {'peak MB':>8} "
     f"{'answered':>10} {'told':>8}"
@@ -194,7 +195,7 @@ def main():
             measured(folder, source, {}, chosen.workers, chosen.groups)
             write_source(source, features, draw)
             for rungs in chosen.rungs:
-                options = {"rungs": rungs, "starts": 1} if rungs else {}
+                options = {"rungs": rungs, "starts": 1, **LADDER} if rungs else {}
                 seconds, peak, _, copy = measured(folder, source, options, chosen.workers, chosen.groups)
                 answered, told = account(copy, features)
                 what = f"batch, {chosen.workers} workers" + (", rivers" if chosen.groups else "")
