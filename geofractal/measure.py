@@ -162,7 +162,8 @@ FIGURE_COLUMNS = (
     "unit",
     "note",
 )
-"""Columns of the table of figures: one row a reporting unit (zone or whole map), class and quantity."""
+"""Columns of the table of figures: one row a reporting unit (zone or, last, the whole map), class, quantity
+and border rule; ``border_rule`` is empty where no border matters."""
 
 WHOLE_MAP = "whole map"
 """Reporting unit of figures that are not those of a zone."""

@@ -27,7 +27,7 @@ from geofractal.reader.vector import stream
 from geofractal.registry import load_cover_measure
 from geofractal.versions import code_digest
 from geofractal.writer.commit import in_plain_words
-from geofractal.writer.sources import Fingerprint
+from geofractal.writer.sources import Fingerprint, check_unchanged
 from geofractal.writer.tables import GEOMETRY
 
 if TYPE_CHECKING:
@@ -111,7 +111,7 @@ def cover_part(plan: CoverPlan, work: CoverWork, prints: Prints, folder: Path, s
     key = part_key(plan, work, prints)
     kept, patches = folder / f"{key}.figures.parquet", folder / f"{key}.patches.parquet"
     if not kept.exists():
-        _measure(plan, work, stage, kept, patches)
+        _measure(plan, work, prints, stage, kept, patches)
     table = pq.read_table(kept)
     told = json.loads(table.schema.metadata[b"geofractal"])
     return CoverPart(
@@ -134,13 +134,22 @@ def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
     return hashlib.blake2b("\x00".join(said).encode(), digest_size=16).hexdigest()
 
 
-def _measure(plan: CoverPlan, work: CoverWork, stage: Stage, kept: Path, patches: Path) -> None:
+def confirm(prints: Prints) -> None:
+    """Raise `SourceChangedError` if a file that was read is not what it was."""
+    for path, before in prints.items():
+        check_unchanged(path, before)
+
+
+def _measure(
+    plan: CoverPlan, work: CoverWork, prints: Prints, stage: Stage, kept: Path, patches: Path
+) -> None:
     """Measure, and keep the results: the figures last, since they tell that the part is whole."""
     begun = time.monotonic()
     census = Census(stage)
     cover = open_cover(plan, work, census)
     measure = load_cover_measure(work.request.measure)
     result = measure.measure(cover, work.request.options)
+    confirm(prints)  # else the key would be that of other bytes
     if result.patches is not None:
         keep(_patch_table(result.patches), patches)
     names = plan.raster.legend.names if plan.raster else []

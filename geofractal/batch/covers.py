@@ -13,14 +13,14 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
-from geofractal.batch.cover_parts import CoverPart, cover_part, keep, open_cover, part_key
+from geofractal.batch.cover_parts import CoverPart, confirm, cover_part, keep, open_cover, part_key
 from geofractal.batch.cover_plan import CoverPlan, CoverWork
 from geofractal.config.models import Batch
 from geofractal.cover_map import RasterCover
 from geofractal.measure import Column
 from geofractal.patches import warping_effect
 from geofractal.progress import Progress
-from geofractal.writer.sources import Fingerprint, check_unchanged, fingerprint
+from geofractal.writer.sources import Fingerprint, fingerprint
 from geofractal.writer.tables import GEOMETRY, write_patch_layer, write_table
 
 PLACE = ["cover", "first_row", "first_column"]
@@ -73,11 +73,6 @@ class MeasuredCover:
             for q in work.request.quantities()
         )
 
-    def confirm(self) -> None:
-        """Raise `SourceChangedError` if a file that was read is not what it was."""
-        for path, before in self.prints.items():
-            check_unchanged(path, before)
-
 
 def measure_cover(plan: CoverPlan, folder: Path, progress: Progress) -> MeasuredCover:
     """Measure a class map; what is kept in `folder` is not measured again.
@@ -95,9 +90,8 @@ def measure_cover(plan: CoverPlan, folder: Path, progress: Progress) -> Measured
         with progress.stage(plan.name, work.request.measure, None, "rows") as stage:
             parts.append(cover_part(plan, work, prints, folder, stage))
     warping = _warping(plan, folder, prints, progress) if plan.warped else None
-    found = MeasuredCover(plan, tuple(parts), prints, warping, time.monotonic() - begun)
-    found.confirm()
-    return found
+    confirm(prints)
+    return MeasuredCover(plan, tuple(parts), prints, warping, time.monotonic() - begun)
 
 
 def _warping(plan: CoverPlan, folder: Path, prints: dict[Path, Fingerprint], progress: Progress) -> pa.Table:

@@ -160,18 +160,20 @@ Fit = Callable[["pd.DataFrame", Sequence[str]], "pd.DataFrame"]
 
 
 def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Return the fits of the whole map and of every zone, one row a unit and class, and the patches."""
+    """Return the fits of every zone and, last, the whole map, one row a unit and class; and the patches."""
     import pandas as pd
 
     first = next(found)
     whole = first.table
     wanted = cover.covers or tuple(whole["cover"].cat.remove_unused_categories().cat.categories)
-    rows = [_complete(fit(whole, ("cover",)).assign(zone=-1), {-1: WHOLE_MAP}, wanted)]
+    rows = []
     for part in (first, *found):
         if part.zones:
             names = {zone: cover.zones.names[zone] for zone in part.zones}
             rows.append(_complete(fit(part.table, ("zone", "cover")), names, wanted))
-    return pd.concat(rows, ignore_index=True), whole
+    last = 0 if cover.zones is None else len(cover.zones)
+    rows.append(_complete(fit(whole, ("cover",)).assign(zone=last), {last: WHOLE_MAP}, wanted))
+    return pd.concat(rows, ignore_index=True).sort_values("zone", kind="stable", ignore_index=True), whole
 
 
 def _complete(fits: pd.DataFrame, units: Mapping[int, str], wanted: Collection[str]) -> pd.DataFrame:
@@ -212,7 +214,7 @@ def _figures(
             "reporting_unit": fits["unit"],
             "cover": fits["cover"],
             "quantity": figure.quantity.name,
-            "border_rule": None,
+            "border_rule": "",
             "cell_size_m": size,
             "estimate": np.nan if text else estimate,
             "low": _numbers(fits, figure.low),
