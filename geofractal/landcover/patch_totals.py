@@ -14,11 +14,11 @@ from geofractal.kernels.patch_sums import DIGIT, LIMBS, add_products, add_sums, 
 from geofractal.landcover.grid import Ints
 from geofractal.landcover.labelling import PatchTable
 
-MOST_SIZES = 4_000_000
+MOST_SIZES = 1_000_000
 """Different areas that are kept as they are; above it, medians are right to 0.013 % only."""
 
 SIZE_BITS = 12
-WAITING = 1_000_000
+WAITING = 500_000
 
 SUMS = ("area", "edge", "border_edge", "zone_edge", "barrier_edge")
 
