@@ -119,6 +119,8 @@ class Measure(ABC, Generic[O]):
     title, formula, sources : text for the tables, the report and ``geofractal measures``
     stem : prefix of the note column, ``<stem>_note``
     version : part of the content key; raise it whenever results change
+    one_path : whether lines that meet are joined before, and a group must form one path; a measure of
+        sets, such as of a whole network, takes all lines as they are
     holds_gil : True (the safe default) sends the work to processes instead of threads
     """
 
@@ -129,6 +131,7 @@ class Measure(ABC, Generic[O]):
     stem: ClassVar[str]
     needs: ClassVar[Literal["lines"]] = "lines"
     version: ClassVar[int] = 1
+    one_path: ClassVar[bool] = True
     holds_gil: ClassVar[bool] = True
     options: ClassVar[type[Options]]
 

@@ -12,6 +12,7 @@ import pytest
 import shapely
 from batches import UTM, run, run_rivers, wiggle, write_batch, write_gpkg
 
+import geofractal
 from geofractal.batch import parts
 from geofractal.batch.parts import part_key
 from geofractal.batch.plan import parts_of, plan_batch
@@ -304,3 +305,17 @@ def test_a_key_changes_with_rows_options_and_nothing_else(tmp_path):
     first, other_rows = keys()
     assert keys() == (first, other_rows)
     assert len({first, other_rows, *keys(rungs=9), *keys(prefix="new")}) == 6
+
+
+def test_a_network_is_counted_whole_and_walked_as_one_path_only(tmp_path):
+    trunk = wiggle(3, vertices=900)
+    branch = shapely.LineString([trunk.coords[450], *shapely.affinity.rotate(trunk, 90).coords])
+    columns = {"river": ["a", "a"]}
+    write_gpkg(tmp_path / "in.gpkg", [trunk, branch], **columns)
+    box = {"measure": "box-dimension", "of": "rivers"}
+    run(tmp_path, {"rivers": {"source": "in.gpkg", "group-by": "river"}}, [DIVIDER, box])
+    copy = gpd.read_file(tmp_path / "out" / "in.gpkg")
+    assert copy["divider_dim"].isna().all()
+    assert copy["divider_note"].str.contains("do not form one path").all()
+    (whole,) = geofractal.box_dimension([shapely.MultiLineString([trunk, branch])], crs=UTM)["box_dim"]
+    assert copy["box_dim"].tolist() == pytest.approx([whole, whole], rel=1e-9)

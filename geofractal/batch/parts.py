@@ -235,7 +235,7 @@ def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:
 
 
 def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDArray[np.object_]]:
-    """Return every column's value for each feature, and what kept a feature from being measured at all."""
+    """Return every column's value for each feature, and why a feature lies on no plane."""
     n = len(lines)
     values: Values = {column.name: _nulls(column, n) for column in work.columns}
     problems = np.full(n, None, dtype=object)
@@ -244,25 +244,28 @@ def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDAr
     chunks, refused = work.projector.lines(
         np.arange(n), lines.xy, lines.part_offsets, lines.feature_offsets, lines.closed
     )
+    problems[list(refused)] = list(refused.values())
     for chunk in chunks:
         joined, unjoined, left_out_m = work.joined(chunk)
-        refused |= unjoined
         if work.leaves_out:
             values[LEFT_OUT.name][joined.rows] = left_out_m / 1000.0
-        _measure_lines(work, joined, values)
-    problems[list(refused)] = list(refused.values())
+        for request in work.requests:
+            if load_measure(request.measure).one_path:
+                values[note_name(request)][list(unjoined)] = list(unjoined.values())
+                _measure_lines(request, joined, values)
+            else:
+                _measure_lines(request, chunk, values)
     return values, problems
 
 
-def _measure_lines(work: LayerWork, lines: Lines, values: Values) -> None:
-    """Fill the columns of the features in `lines`."""
+def _measure_lines(request: MeasureRequest, lines: Lines, values: Values) -> None:
+    """Fill a request's columns for the features in `lines`."""
     if not len(lines):
         return
-    for request in work.requests:
-        measure = load_measure(request.measure)
-        found = measure.measure(lines, request.options)
-        for own, column in zip(columns_of(measure, request.options), request.columns(), strict=True):
-            values[column.name][lines.rows] = found[own.name]
+    measure = load_measure(request.measure)
+    found = measure.measure(lines, request.options)
+    for own, column in zip(columns_of(measure, request.options), request.columns(), strict=True):
+        values[column.name][lines.rows] = found[own.name]
 
 
 def _nulls(column: Column, n: int) -> NDArray[Any]:

@@ -12,7 +12,6 @@ from typing import Annotated, Any, Literal
 from pydantic import (
     AfterValidator,
     BaseModel,
-    ConfigDict,
     Discriminator,
     Field,
     PrivateAttr,
@@ -111,15 +110,7 @@ Prefix = Annotated[
 class Section(BaseModel):
     """Base of all sections: frozen, strict, no free keys; YAML spells the keys with hyphens."""
 
-    model_config = ConfigDict(
-        frozen=True,
-        strict=True,
-        extra="forbid",
-        allow_inf_nan=False,
-        alias_generator=lambda name: name.replace("_", "-"),
-        validate_by_name=True,
-        validate_by_alias=True,
-    )
+    model_config = Options.model_config
 
 
 class Prepare(Section):
@@ -137,7 +128,8 @@ class Prepare(Section):
     )
     branches: Literal["refuse", "main-path"] = Field(
         "refuse",
-        description="a group or joined line that forms no single path: refuse it, or keep its main path",
+        description="a group that forms no single path, for measures that need one: refuse it, or keep its "
+        "main path",
     )
 
 

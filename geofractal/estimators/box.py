@@ -197,6 +197,7 @@ class BoxDimension(Measure[BoxOptions]):
     formula: ClassVar[str] = "D = -slope of ln N(s) on ln s"
     sources: ClassVar[tuple[str, ...]] = ("common practice", HENTSCHEL_PROCACCIA)
     stem: ClassVar[str] = "box"
+    one_path: ClassVar[bool] = False
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = BoxOptions
 
