@@ -54,6 +54,17 @@ class TestByHand:
         edges = 2 * 12 * 11 / 3
         assert coarse(codes, 30)[0] == pytest.approx(edges * 10 / 14400 * 1000)
 
+    def test_cells_that_differ_in_size_are_told(self):
+        """Degree cells are half as wide at 60 N as at the equator."""
+        codes = np.indices((60, 4)).sum(axis=0) % 2 + 1
+        found = fragmentation(
+            (codes.astype(np.uint8), (1, 0, 0, 0, -1, 60), 4326),
+            reading=RasterOptions(grid="source"),
+            edge_cell_sizes_m=[300_000.0],
+        )
+        note = figure(found, "edge_density_at_300000m_cells", column="note")
+        assert note == "cells differ in size over the map; metres are those of typical cells"
+
     def test_a_map_smaller_than_the_cell_size(self):
         assert np.isnan(coarse([[1, 2]], 50)).all()
 

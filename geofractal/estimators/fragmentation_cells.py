@@ -19,12 +19,14 @@ if TYPE_CHECKING:
     from geofractal.estimators.fragmentation import FragmentationOptions, MapTotals
     from geofractal.estimators.fragmentation_table import Figures
     from geofractal.landcover.covers import Pack
+    from geofractal.landcover.grid import Grid
     from geofractal.measure import CoverMap
 
 TOO_FINE = "not coarser than the map's own cells"
 TOO_LARGE = f"boxes of more than {MOST_CELLS} cells a side"
 NO_BOX = "no box lies wholly inside the area with data"
 ABSENT = "the class is absent"
+UNEVEN = 1.05  # ratio of cell sizes over a map from which sizes in cells need a word
 
 
 class CellFigures:
@@ -39,6 +41,7 @@ class CellFigures:
         self.map, self.pack, self.options, self.totals = cover, pack, options, totals
         self.grid, self.classes = cover.raster.grid, tuple(cover.raster.legend.names)
         self.zones = totals.whole
+        self._uneven = uneven_cells(self.grid)
 
     def add_to(self, figures: Figures) -> None:
         """Add the rows of edges at stated cell sizes, interior area, lacunarity and box dimensions."""
@@ -135,13 +138,8 @@ class CellFigures:
         values = [
             metres / 1e3 / covered if covered else math.nan for metres in (edge.length, edge.low, edge.high)
         ]
-        note = (
-            None
-            if math.isfinite(values[0])
-            else "no pair of cells this far apart"
-            if covered
-            else "no data in this zone"
-        )
+        missing = "no pair of cells this far apart" if covered else "no data in this zone"
+        note = self._uneven if math.isfinite(values[0]) else missing
         figures.add(
             unit,
             name,
@@ -157,8 +155,8 @@ class CellFigures:
     def _add_interior(
         self, figures: Figures, unit: int, kind: int, name: str, metres: float, sums: InteriorSums
     ) -> None:
-        rule = words.BOUNDS if self.options.map_edge_bounds_interior else words.OPEN
-        area, share = words.interior(metres)
+        area, share = words.interior(metres, map_edge=self.options.map_edge_bounds_interior)
+        (rule,) = area.border_rules
         inside = int(sums.area[unit, kind]) if kind < sums.covers else 0
         figures.add(unit, name, area.name, inside * self.grid.area_unit_m2 / 1e6, rule=rule)
         whole = self.totals.of(unit, kind).area
@@ -173,7 +171,9 @@ class CellFigures:
             figures.add(unit, name, value.name, math.nan, rule=words.CUT, note=TOO_LARGE)
             return
         found, boxes = sums.lacunarity(-1 if unit == self.zones else unit)
-        note = f"boxes of {sums.boxes.rows} by {sums.boxes.columns} cells"
+        note = "; ".join(
+            filter(None, (f"boxes of {sums.boxes.rows} by {sums.boxes.columns} cells", self._uneven))
+        )
         note = note if math.isfinite(found) else NO_BOX if boxes == 0 else ABSENT
         figures.add(unit, name, value.name, found, rule=words.CUT, note=note)
         figures.add(unit, name, count.name, boxes, rule=words.CUT)
@@ -190,7 +190,18 @@ class CellFigures:
         for quantity, edge in (("box_dim", False), ("edge_box_dim", True)):
             dimension, first, last = counters[unit, kind, edge].dimension()
             sizes = f"boxes of {first * cell:g} to {last * cell:g} m, no interval calibrated for cells"
+            sizes = "; ".join(filter(None, (sizes, self._uneven)))
             note = (
                 sizes if math.isfinite(dimension) else f"too few box sizes, or the class is absent ({sizes})"
             )
             figures.add(unit, name, quantity, dimension, note=note)
+
+
+def uneven_cells(grid: Grid) -> str | None:
+    """Return a word on a map whose cells differ in size; None where they hardly do."""
+    ratio = 1.0
+    for vectors in grid.lattice:
+        sides = np.hypot(*vectors.T)
+        sides = sides[np.isfinite(sides) & (sides > 0)]
+        ratio = max(ratio, float(sides.max() / sides.min()))
+    return None if ratio < UNEVEN else "cells differ in size over the map; metres are those of typical cells"

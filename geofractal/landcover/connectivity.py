@@ -11,7 +11,7 @@ from geofractal.kernels.patch_gaps import all_gaps, cheapest_paths, nearest_gaps
 from geofractal.landcover.grid import Floats, Ints
 from geofractal.landcover.patch_runs import PatchRuns
 
-FAINTEST = 1e-6
+FAINTEST = 1e-4
 """Probability below which a direct link is taken for none; what that may hide is in the interval."""
 
 
@@ -71,6 +71,9 @@ def connected_area(areas: Floats, costs: Floats, *, faintest: float = 0.0) -> Co
 class Distances:
     """Where the patches of a cover lie on the ground.
 
+    Distances are those of rows and columns by the true sizes of their cells; they do not go around a globe
+    past the sides of the map.
+
     Attributes
     ----------
     found : the patches
@@ -98,7 +101,9 @@ class Distances:
         down = np.maximum(
             self.top[boxes[:, 0]] - self.top[high_row + 1], self.top[low_row] - self.top[boxes[:, 1] + 1]
         )
-        across = np.maximum(boxes[:, 2] - right - 1, left - boxes[:, 3] - 1) * float(self.width.min())
+        narrow = np.minimum(self.width[boxes[:, 0]], self.width[boxes[:, 1]])
+        narrow = np.minimum(narrow, min(self.width[low_row], self.width[high_row]))
+        across = np.maximum(boxes[:, 2] - right - 1, left - boxes[:, 3] - 1) * narrow
         return np.flatnonzero((down <= most) & (across <= most))
 
     def costs(self, chosen: Ints, dispersal_m: float) -> Floats:
