@@ -155,8 +155,8 @@ class CellFigures:
     def _add_interior(
         self, figures: Figures, unit: int, kind: int, name: str, metres: float, sums: InteriorSums
     ) -> None:
-        area, share = words.interior(metres, map_edge=self.options.map_edge_bounds_interior)
-        (rule,) = area.border_rules
+        rule = words.BOUNDS if self.options.map_edge_bounds_interior else words.OPEN
+        area, share = words.interior(metres)
         inside = int(sums.area[unit, kind]) if kind < sums.covers else 0
         figures.add(unit, name, area.name, inside * self.grid.area_unit_m2 / 1e6, rule=rule)
         whole = self.totals.of(unit, kind).area

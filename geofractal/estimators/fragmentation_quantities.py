@@ -195,8 +195,8 @@ def coarse(size: float) -> Quantity:
     )
 
 
-def interior(depth: float, *, map_edge: bool) -> tuple[Quantity, Quantity]:
-    """Return interior area at a depth, and its share of the class; `map_edge` says whether that bounds."""
+def interior(depth: float) -> tuple[Quantity, Quantity]:
+    """Return interior area at a depth, and its share of the class."""
     meaning = "cells whose centre is farther than the depth from the nearest edge of another class"
     return (
         Quantity(
