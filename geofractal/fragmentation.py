@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
     from geofractal.patches import RasterLike
     from geofractal.reader.raster import RasterOptions
+    from geofractal.reader.raster_classes import Legend
 
 
 def fragmentation(
@@ -92,10 +93,31 @@ def fragmentation(
             replace(layer, extent=extent, zone_names=names, groups=taken, covers=tuple(covers)), chosen
         )
     opened = open_class_map(source, reading, {})
+    _check_names(opened.legend, taken, covers, chosen.depth_by_neighbour_m)
     own, grid = opened.source_grid.crs, opened.grid
     placed = None if zones is None else place_zones(grid, _geometries(zones), names, _crs(zones, own))
     lines = None if barriers is None else place_barriers(grid, _geometries(barriers), _crs(barriers, own))
     return Fragmentation().measure(RasterCover(opened, placed, lines, taken, tuple(covers)), chosen).figures
+
+
+def _check_names(
+    legend: Legend, groups: Mapping[str, Sequence[str]], covers: Iterable[str], neighbours: Iterable[str]
+) -> None:
+    """Refuse names of classes that the raster cannot have, and groups named as classes."""
+    known = list(legend.names if legend.closed else dict.fromkeys(legend.own_names.values()))
+    free = not legend.closed and not known  # names are the codes that will be met
+    asked = {"groups": [name for members in groups.values() for name in members]}
+    asked |= {
+        "covers": [name for name in covers if name not in groups],
+        "depth_by_neighbour_m": [*neighbours],
+    }
+    for key, names in asked.items():
+        for name in names:
+            if name not in known and not (free and name.lstrip("-").isdigit()):
+                there = ", ".join(known) or "codes as text, such as '1'"
+                raise ConfigError(f"{key}: the raster has no class {name!r}; there are {there}.")
+    if both := sorted(set(groups).intersection(known)):
+        raise ConfigError(f"groups: {both[0]!r} is the name of a class already; choose another one.")
 
 
 def _polygon_layer(source: Any, cover: str | Sequence[Any] | None, zones: Any) -> PolygonLayer:

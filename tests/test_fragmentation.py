@@ -370,3 +370,21 @@ class TestTable:
     def test_groups_without_classes(self):
         with pytest.raises(ConfigError, match="The group 'wet' has no classes"):
             measured([[1]], groups={"wet": []})
+
+    @pytest.mark.parametrize(
+        ("given", "message"),
+        [
+            ({"covers": ["reeds"]}, "covers: the raster has no class 'reeds'; there are reed, carr"),
+            ({"groups": {"wet": ["reed", "bog"]}}, "groups: the raster has no class 'bog'"),
+            ({"groups": {"reed": ["carr"]}}, "groups: 'reed' is the name of a class already"),
+            ({"depth_by_neighbour_m": {"road": 9.0}}, "depth_by_neighbour_m: the raster has no class 'road'"),
+        ],
+    )
+    def test_names_that_are_not_there(self, given, message):
+        reading = RasterOptions(classes={"reed": 1, "carr": 2})
+        with pytest.raises(ConfigError, match=message):
+            fragmentation((np.ones((2, 2), np.uint8), KM, PLANE), reading=reading, **given)
+
+    def test_codes_stand_for_names_where_there_are_none(self):
+        with pytest.raises(ConfigError, match="there are codes as text, such as '1'"):
+            measured([[1]], covers=["reed"])
