@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from geofractal.api import box_dimension, divider_dimension, divider_ladder, run, sinuosity
+    from geofractal.cover_api import fragmentation
     from geofractal.estimators.area_perimeter import area_perimeter_dimension, area_perimeter_residual
     from geofractal.estimators.number_area import number_area_exponent
     from geofractal.patches import polygon_patches, raster_patches, warping_effect
@@ -21,6 +22,7 @@ __all__ = [
     "box_dimension",
     "divider_dimension",
     "divider_ladder",
+    "fragmentation",
     "number_area_exponent",
     "polygon_patches",
     "raster_patches",
@@ -36,6 +38,7 @@ _HOMES = {
     "box_dimension": "geofractal.api",
     "divider_dimension": "geofractal.api",
     "divider_ladder": "geofractal.api",
+    "fragmentation": "geofractal.cover_api",
     "number_area_exponent": "geofractal.estimators.number_area",
     "polygon_patches": "geofractal.patches",
     "raster_patches": "geofractal.patches",

@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from test_fragmentation import PLANE, cells, figure, measured
 
-from geofractal.fragmentation import fragmentation
+from geofractal.cover_api import fragmentation
 from geofractal.kernels import cell_edges, lag_edges, patch_sums
 from geofractal.reader.raster import RasterOptions
 

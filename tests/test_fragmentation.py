@@ -11,10 +11,10 @@ from class_maps import components
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from geofractal.cover_api import fragmentation
 from geofractal.errors import ConfigError
 from geofractal.estimators.fragmentation import FragmentationOptions
 from geofractal.estimators.fragmentation_quantities import quantities_of
-from geofractal.fragmentation import fragmentation
 from geofractal.landcover import patch_totals
 from geofractal.measure import FIGURE_COLUMNS, GROUPS
 from geofractal.reader.raster import RasterOptions

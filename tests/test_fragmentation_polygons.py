@@ -9,8 +9,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from test_fragmentation import ACROSS, CUT, PLANE, cells, figure, measured
 
+from geofractal.cover_api import fragmentation
 from geofractal.errors import ConfigError, LayerError
-from geofractal.fragmentation import fragmentation
 
 SHARED = ("area", "share", "patches", "patch_density", "mean_patch", "median_patch", "weighted_mean_patch")
 SHARED += ("largest_patch", "coherence", "division", "splitting", "effective_mesh_size")

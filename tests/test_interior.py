@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from scipy import ndimage
 from test_fragmentation import PLANE, cells, figure, measured
 
-from geofractal.fragmentation import fragmentation
+from geofractal.cover_api import fragmentation
 from geofractal.kernels import interior
 from geofractal.reader.raster import RasterOptions
 

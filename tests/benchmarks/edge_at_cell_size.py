@@ -14,7 +14,7 @@ import math
 import numpy as np
 from raster import mosaic_of_classes
 
-from geofractal.fragmentation import fragmentation
+from geofractal.cover_api import fragmentation
 
 PLANE = 'LOCAL_CS["plane",UNIT["metre",1]]'
 SIDE = 1024

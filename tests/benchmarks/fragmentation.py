@@ -57,7 +57,7 @@ def _wave(xy: np.ndarray) -> np.ndarray:
 
 def work(path: str, side: int, case: dict, results: multiprocessing.Queue) -> None:
     """Measure one case after a warm-up on a small map."""
-    from geofractal.fragmentation import fragmentation
+    from geofractal.cover_api import fragmentation
     from geofractal.reader.raster import RasterOptions
 
     given = {name: value for name, value in case.items() if name not in {"zones", "shift"}}
