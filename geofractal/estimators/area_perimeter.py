@@ -7,7 +7,7 @@ least squares of ln P on ln A, and the reduced major axis (Warton et al. 2006, B
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -110,28 +110,38 @@ def area_perimeter_dimension(
         raise ConfigError(
             f"The patches lack the columns {', '.join(missing)}; they have {', '.join(patches)}."
         )
+    small = (patches[area] < smallest_area_m2) | (patches["perimeter_m"] == 0)
+    if "cells" in patches:
+        small |= patches["cells"] < smallest_cells
     rows = []
-    for key, group in _groups(patches, by):
-        small = (group[area] < smallest_area_m2) | (group["perimeter_m"] == 0)
-        if "cells" in group:
-            small |= group["cells"] < smallest_cells
-        edge = group["touches_edge"] & ~small & (not edge_patches)
-        astray = group["perimeter_m"].isna() | ("zone" in by and group["zone"] < 0)
-        astray &= ~small & ~edge
-        used = group[~(small | edge | astray)]
+    for key, group, too_small in _groups(patches, by, small):
+        edge = group["touches_edge"] & (not edge_patches)
+        astray = (group["perimeter_m"].isna() | ("zone" in by and group["zone"] < 0)) & ~edge
+        used = group[~(edge | astray)]
         cells = int(used["cells"].min()) if "cells" in used and len(used) else None
         figures = fit_patches(used[area].to_numpy(float), used["perimeter_m"].to_numpy(float), cells)
-        counts = {"small": int(small.sum()), "edge": int(edge.sum()), "zone": int(astray.sum())}
+        counts = {"small": too_small, "edge": int(edge.sum()), "zone": int(astray.sum())}
         left_out = {f"patches_left_out_{why}": number for why, number in counts.items()}
         note = figures.pop("area_perimeter_note")
         rows.append(dict(zip(by, key, strict=True)) | figures | left_out | {"area_perimeter_note": note})
     return pd.DataFrame(rows, columns=None if rows else [*by, *fit_patches(np.empty(0), np.empty(0), None)])
 
 
-def _groups(patches: pd.DataFrame, by: Sequence[str]) -> Any:
-    if not by:
-        return [((), patches)]
-    return patches.groupby(list(by), observed=True, sort=True)
+def _groups(
+    patches: pd.DataFrame, by: Sequence[str], small: pd.Series[bool]
+) -> Iterator[tuple[tuple[Any, ...], pd.DataFrame, int]]:
+    """Yield each group's key, its patches that are large enough, and the number of those that are not.
+
+    Most patches of a large map are small: they are counted, and only the rest is sorted into groups.
+    """
+    large, keys = patches[~small], list(by)
+    if not keys:
+        yield (), large, int(small.sum())
+        return
+    counts = patches.loc[small, keys].value_counts()
+    groups = dict(iter(large.groupby(keys, observed=True)))
+    for key in patches[keys].drop_duplicates().sort_values(keys).itertuples(index=False, name=None):
+        yield key, groups.get(key, large[:0]), int(counts.get(key, 0))
 
 
 def area_perimeter_residual(
