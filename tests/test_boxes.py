@@ -8,11 +8,18 @@ import pytest
 import shapely
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
+from scipy import ndimage
 
 import geofractal
 from geofractal import synthetic
 from geofractal.estimators import box
-from geofractal.estimators.box_cells import CellBoxCounter, cell_dimensions, cell_sizes, count_cells
+from geofractal.estimators.box_cells import (
+    CellBoxCounter,
+    cell_dimensions,
+    cell_interval,
+    cell_sizes,
+    count_cells,
+)
 from geofractal.kernels import boxes as kernels
 from geofractal.kernels.cell_boxes import count_rows
 from geofractal.kernels.ladder_judge import STRETCHES
@@ -440,3 +447,33 @@ class TestCells:
             results.append(found)
         assert np.array_equal(*results)
         assert results[0][0, 0] > 0
+
+
+class TestCellInterval:
+    """The interval holds the truth on maps of exactly known dimension, in draws that set nothing."""
+
+    @pytest.mark.parametrize("dimension", [1.1, 1.3, 1.5, 1.7])
+    def test_traced_trails(self, dimension):
+        inside = []
+        for seed in range(5000, 5012):
+            xy = synthetic.fractional_trail(dimension, vertices=50_000, seed=seed).xy
+            places = ((xy - xy.min(axis=0)) / np.ptp(xy, axis=0).max() * 398).astype(int)
+            cells = np.zeros((400, 400), bool)
+            cells[places[:, 1], places[:, 0]] = True
+            low, high = cell_interval(count_cells(cells))
+            inside.append(low <= dimension <= high)
+        assert np.mean(inside) >= 0.9
+
+    def test_percolation_clusters(self):
+        """Mass of critical clusters: D = 91/48 (exact; as quoted by Ziff)."""
+        for seed in range(5000, 5006):
+            open_cells = np.random.default_rng(seed).random((400, 400)) < 0.592746
+            labels, _ = ndimage.label(open_cells)
+            largest = labels == np.bincount(labels.ravel())[1:].argmax() + 1
+            low, high = cell_interval(count_cells(largest))
+            assert low <= 91 / 48 <= high
+
+    def test_a_filled_map_may_have_dimension_two_and_a_missing_class_has_none(self):
+        low, high = cell_interval(count_cells(np.ones((100, 100), bool)))
+        assert low < 2 == high
+        assert np.isnan(cell_interval(count_cells(np.zeros((100, 100), bool)))).all()

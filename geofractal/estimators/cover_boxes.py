@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from geofractal.estimators.box_cells import CellBoxCounter, cell_dimensions
+from geofractal.estimators.box_cells import CellBoxCounter, cell_dimensions, cell_interval
 from geofractal.landcover.windows import Window
 
 
@@ -44,10 +44,11 @@ class CoverBoxes:
             cells &= window.strip.zones == self.part.zone
         self._counter.add(np.ascontiguousarray(cells[first:stop, self.part.columns]))
 
-    def dimension(self) -> tuple[float, int, int]:
-        """Return the dimension, NaN where there is none, and first and last box size in cells."""
+    def dimension(self) -> tuple[float, tuple[float, float], tuple[int, int]]:
+        """Return dimension and interval, NaN where there is none, and first and last box size in cells."""
         counts = self._counter.counts()
-        return cell_dimensions(counts)[0], int(counts.sizes[0]), int(counts.sizes[-1])
+        sizes = int(counts.sizes[0]), int(counts.sizes[-1])
+        return cell_dimensions(counts)[0], cell_interval(counts), sizes
 
 
 def _changes(codes: NDArray[np.int16]) -> NDArray[np.bool_]:

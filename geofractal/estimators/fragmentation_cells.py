@@ -188,13 +188,13 @@ class CellFigures:
     ) -> None:
         cell = math.sqrt(math.prod(self.grid.typical_cell))
         for quantity, edge in (("box_dim", False), ("edge_box_dim", True)):
-            dimension, first, last = counters[unit, kind, edge].dimension()
-            sizes = f"boxes of {first * cell:g} to {last * cell:g} m, no interval calibrated for cells"
+            dimension, (low, high), (first, last) = counters[unit, kind, edge].dimension()
+            sizes = f"boxes of {first * cell:g} to {last * cell:g} m"
             sizes = "; ".join(filter(None, (sizes, self._uneven)))
             note = (
                 sizes if math.isfinite(dimension) else f"too few box sizes, or the class is absent ({sizes})"
             )
-            figures.add(unit, name, quantity, dimension, note=note)
+            figures.add(unit, name, quantity, dimension, low=low, high=high, note=note)
 
 
 def uneven_cells(grid: Grid) -> str | None:

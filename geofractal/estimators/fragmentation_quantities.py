@@ -165,7 +165,7 @@ BOXES = tuple(
         short,
         "scaling",
         "",
-        f"box dimension of {what}; the note has the box sizes. No interval has been calibrated for cells",
+        f"box dimension of {what}; the note has the box sizes. No verdict has been calibrated for cells",
         "D = -slope of ln N(s) on ln s",
     )
     for name, short, what in (
