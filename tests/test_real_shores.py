@@ -63,6 +63,18 @@ def test_editions_agree_at_a_ruler_above_their_detail(shores, place, ruler_km):
     assert low == pytest.approx(intermediate, rel=0.025)
 
 
+def test_two_editions_agree_within_the_intervals_of_their_fits(shores):
+    """And with the independent walk of 16 starts: 3,675 and 3,600 km at a 50 km ruler."""
+    intervals = [
+        shores[edition].loc["Great Britain", [f"length_at_50000m_ruler_{end}_km" for end in ("low", "high")]]
+        for edition in ("low", "intermediate")
+    ]
+    for low, high in intervals:
+        for edition, expected in (("low", 3675), ("intermediate", 3600)):
+            assert low <= shores[edition].loc["Great Britain", "length_at_50000m_ruler_km"] <= high
+            assert low <= expected <= high
+
+
 @pytest.mark.parametrize("place", PLACES)
 def test_the_crude_edition_refuses_rulers_below_its_segments(shores, place):
     row = shores["crude"].loc[place]
