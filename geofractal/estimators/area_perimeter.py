@@ -134,14 +134,30 @@ def _groups(
 
     Most patches of a large map are small: they are counted, and only the rest is sorted into groups.
     """
-    large, keys = patches[~small], list(by)
-    if not keys:
-        yield (), large, int(small.sum())
-        return
-    counts = patches.loc[small, keys].value_counts()
-    groups = dict(iter(large.groupby(keys, observed=True)))
-    for key in patches[keys].drop_duplicates().sort_values(keys).itertuples(index=False, name=None):
-        yield key, groups.get(key, large[:0]), int(counts.get(key, 0))
+    large = patches[~small]
+    number, levels = _numbered(patches, by)
+    counts = np.bincount(number[small], minlength=1)
+    of_large = number[~small]
+    by_group = np.argsort(of_large, kind="stable")
+    bounds = np.searchsorted(of_large[by_group], np.arange(number.max(initial=-1) + 2))
+    for group in np.flatnonzero(np.bincount(number)):
+        place = np.unravel_index(group, [len(values) for values in levels]) if levels else ()
+        key = tuple(values[at] for values, at in zip(levels, place, strict=True))
+        rows = by_group[bounds[group] : bounds[group + 1]]
+        yield key, large.iloc[rows], int(counts[group]) if group < len(counts) else 0
+
+
+def _numbered(patches: pd.DataFrame, by: Sequence[str]) -> tuple[NDArray[np.int64], list[Any]]:
+    """Return the number of each patch's group, in the order of the keys, and the values of each key."""
+    import pandas as pd
+
+    number, levels = np.zeros(len(patches), np.int64), []
+    for name in by:
+        codes, values = pd.factorize(patches[name], sort=True)
+        number *= len(values)
+        number += codes
+        levels.append(values)
+    return number, levels
 
 
 def area_perimeter_residual(
