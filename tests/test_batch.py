@@ -293,6 +293,20 @@ def test_a_stopped_run_keeps_its_parts_and_the_next_goes_on_from_them(tmp_path, 
     assert not (tmp_path / "out" / ".geofractal-parts").exists()
 
 
+@pytest.mark.parametrize("left", [b"", b"not whole", None])
+def test_a_kept_part_that_a_power_cut_spoilt_is_measured_anew(tmp_path, left):
+    write_gpkg(tmp_path / "in.gpkg", [wiggle(1), wiggle(2)])
+    (layer,) = plan_batch(
+        load_config(write_batch(tmp_path, {"rivers": {"source": "in.gpkg"}}, [DIVIDER]))
+    ).layers
+    (part,) = parts_of(layer, tmp_path)
+    whole = parts.measured_part(layer.work, part, tmp_path)
+    (kept,) = tmp_path.glob("*.arrow")
+    kept.write_bytes(kept.read_bytes()[:-400] if left is None else left)
+    assert parts.measured_part(layer.work, part, tmp_path).equals(whole)
+    assert parts.measured_part(layer.work, part, tmp_path).equals(whole)
+
+
 def test_a_key_changes_with_rows_options_and_nothing_else(tmp_path):
     write_gpkg(tmp_path / "in.gpkg", [wiggle(1), wiggle(2)])
 

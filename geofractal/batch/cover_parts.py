@@ -26,7 +26,7 @@ from geofractal.reader.raster import Raster
 from geofractal.reader.vector import stream
 from geofractal.registry import load_cover_measure
 from geofractal.versions import code_digest
-from geofractal.writer.commit import in_plain_words
+from geofractal.writer.commit import flush, in_plain_words
 from geofractal.writer.sources import Fingerprint, check_unchanged
 from geofractal.writer.tables import GEOMETRY
 
@@ -220,4 +220,5 @@ def keep(table: pa.Table, kept: Path) -> None:
     unfinished = kept.with_suffix(f".{os.getpid()}.part")
     with in_plain_words(kept):
         pq.write_table(table, unfinished)
+        flush(unfinished)
         unfinished.replace(kept)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+from contextlib import suppress
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -136,11 +137,7 @@ class LayerWork:
     @cached_property
     def note_names(self) -> frozenset[str]:
         """Names of the measures' note columns."""
-        notes = (
-            prefixed([load_measure(request.measure).note_column()], request.prefix)
-            for request in self.requests
-        )
-        return frozenset(column.name for (column,) in notes)
+        return frozenset(note_name(request) for request in self.requests)
 
     @property
     def leaves_out(self) -> bool:
@@ -196,11 +193,13 @@ def part_key(work: LayerWork, part: PartInput) -> str:
 def measured_part(work: LayerWork, part: PartInput, folder: Path) -> pa.RecordBatch:
     """Return the results of a part, one row for each of its rows, columns as in `LayerWork.columns`.
 
-    Results that an earlier run left in `folder` are taken, and new ones are kept there.
+    Results that an earlier run left in `folder` are taken, and new ones are kept there. A file that a
+    power cut left unreadable counts as none.
     """
     kept = folder / f"{part_key(work, part)}.arrow"
     if kept.exists():
-        with pa.OSFile(str(kept)) as source, pa.ipc.open_stream(source) as stream:
+        broken = suppress(pa.ArrowException, OSError, StopIteration)
+        with broken, pa.OSFile(str(kept)) as source, pa.ipc.open_stream(source) as stream:
             return stream.read_next_batch()
     results = measure_part(work, part)
     _keep(results, kept)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections import defaultdict
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
@@ -187,7 +188,7 @@ def parts_of(layer: LayerPlan, folder: Path) -> Iterator[PartInput]:
         for batch in stream(layer.info, columns=sorted(columns))
     )
     if key:
-        for bucket in bucket_rows(batches, key, layer.info, folder / f"{layer.name}.groups"):
+        for bucket in bucket_rows(batches, key, layer.info, folder / f"{layer.name}.{os.getpid()}.groups"):
             yield GroupsPart(bucket)
     else:
         for batch, wanted in batches:

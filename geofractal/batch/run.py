@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import shutil
 import time
 from collections.abc import Sequence
@@ -155,7 +156,7 @@ def _measure_rows(
 ) -> RowSpool:
     """Measure a layer part by part into a spool, in the order of the parts whatever the workers."""
     columns, rows = layer.work.columns, layer.info.features
-    spool = stack.enter_context(RowSpool(folder / f"{layer.name}.rows", columns, rows))
+    spool = stack.enter_context(RowSpool(folder / f"{layer.name}.{os.getpid()}.rows", columns, rows))
     workers = available_workers() if batch.run.workers == "auto" else batch.run.workers
     words = " and ".join(request.measure for request in layer.work.requests)
     with (

@@ -96,7 +96,7 @@ def _rename(part: Path, target: Path, stem: str) -> None:
     wanted = SHAPEFILE_PARTS if target.suffix.lower() == ".shp" else ()
     moves = [(beside[suffix], target.with_suffix(suffix)) for suffix in wanted if suffix in beside]
     for path in (part, *(source for source, _ in moves)):
-        _flush(path)
+        flush(path)
     with interrupt.shielded():
         if wanted:
             outdated = {*SHAPEFILE_PARTS, *_SHAPEFILE_INDEXES} - set(beside)
@@ -107,7 +107,8 @@ def _rename(part: Path, target: Path, stem: str) -> None:
     _flush_folder(target.parent)
 
 
-def _flush(path: Path) -> None:
+def flush(path: Path) -> None:
+    """Have the system write a file to its disk, so that a rename after it never names half a file."""
     with path.open("rb+") as file:
         os.fsync(file.fileno())
 
