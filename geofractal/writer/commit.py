@@ -47,8 +47,7 @@ def publish(target: Path) -> Iterator[Path]:
             part.touch()
             part.unlink()  # GDAL's own words for a folder that cannot be written to are obscure
             yield part
-            with interrupt.shielded():
-                _rename(part, target, stem)
+            _rename(part, target, stem)
         finally:
             _remove(_starting(target.parent, stem))
             interrupt.unregister(target.with_name(stem))
