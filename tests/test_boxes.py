@@ -281,7 +281,7 @@ class TestDimensions:
             (synthetic.koch(1.1, level=8), 0.02),
             (synthetic.gosper_island(level=8), 0.025),
             (synthetic.koch(level=8), 0.025),
-            (synthetic.minkowski_island(level=8), 0.04),
+            (synthetic.minkowski_island(level=8), 0.05),
             (synthetic.koch(1.4, level=8), 0.04),
             (synthetic.quadratic_koch(2, level=5), 0.05),
             (synthetic.dragon_boundary(level=16), 0.08),

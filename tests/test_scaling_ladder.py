@@ -1,11 +1,14 @@
 """Ladders start above what the mapping resolved, and fits are plain least squares."""
 
 import math
+from itertools import product
 
 import numpy as np
 import pytest
+import shapely
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from pyproj import Transformer
 
 from geofractal import synthetic
 from geofractal.calibration import lines_of
@@ -108,19 +111,24 @@ def test_lines_traced_from_cells_are_found_out_however_they_are_turned(dimension
     trail = synthetic.fractional_trail(dimension, vertices=20_000, seed=1)
     stretched = Curve(trail.xy * [1, 1 / aspect], False, (), "")
     traced = synthetic.traced(stretched, 4.0, diagonal=diagonal).xy * [1, aspect]
-    for angle in (0.0, 0.3, 1.9):
-        feature = lines(turned(traced, angle))
-        assert scales(feature)[3] == pytest.approx(4.0 * aspect, rel=0.01)
-        assert divider_ladders(feature).rulers[0] >= FIRST_RUNG_CELLS * 4.0 * aspect * 0.99
+    merged = shapely.get_coordinates(shapely.simplify(shapely.LineString(traced), 1e-9))
+    for angle, xy in product((0.0, 0.3, 1.9), (traced, merged)):
+        feature = lines(turned(xy, angle))
+        assert scales(feature)[3] == pytest.approx(4.0, rel=0.01)
+        assert divider_ladders(feature).rulers[0] >= FIRST_RUNG_CELLS * 4.0 * 0.99
 
 
 @pytest.mark.parametrize(
     "curve",
     [
         synthetic.line(vertices=500, angle=0.3),
-        synthetic.koch(level=5),
-        synthetic.random_koch(1.4, level=5, seed=1),
+        *(synthetic.koch(d, level=5) for d in (1.05, math.log(4) / math.log(3), 1.5, 1.9)),
+        *(synthetic.random_koch(d, level=5, seed=1) for d in (1.05, 1.4, 1.5, 1.75, 1.9)),
+        *(synthetic.random_midpoint(d, level=10, seed=1) for d in (1.05, 1.5, 1.9)),
+        synthetic.two_regimes(1.0, 1.5, fine_level=3, coarse_level=3, seed=1),
         synthetic.gosper_island(level=5),
+        synthetic.gasket(level=7),
+        synthetic.percolation_border(vertices=2000, seed=1),
         synthetic.meander(1.0, bends=20),
         synthetic.fractional_trail(1.3, vertices=2000, seed=1),
         synthetic.generalised(synthetic.fractional_trail(1.3, vertices=20_000, seed=1), 5.0),
@@ -128,12 +136,49 @@ def test_lines_traced_from_cells_are_found_out_however_they_are_turned(dimension
     ids=lambda curve: curve.source[:20],
 )
 def test_other_lines_are_no_staircases(curve):
-    assert scales(lines(curve.xy))[3] == 0
+    for angle in (0.0, 0.4):
+        assert scales(lines(turned(curve.xy, angle)))[3] == 0
 
 
-def test_an_outline_along_cell_edges_without_its_collinear_vertices_is_a_staircase():
-    ring = synthetic.polygonised(synthetic.circle(vertices=400).scaled(100), 1.0).xy
-    assert scales(lines(ring, closed=True))[3] == pytest.approx(1)
+@pytest.mark.parametrize("coarse", [0.0, 0.5, 0.75], ids=lambda tolerance: f"simplified by {tolerance}")
+@pytest.mark.parametrize(
+    "ring",
+    [
+        synthetic.circle(vertices=400).scaled(300),
+        synthetic.random_koch(1.1, level=5, seed=1, island=True).scaled(500),
+    ],
+    ids=["circle", "Koch island"],
+)
+def test_an_outline_along_cell_edges_is_a_staircase_without_its_collinear_vertices(ring, coarse):
+    outline = synthetic.generalised(synthetic.polygonised(ring, 1.0), coarse).xy
+    assert scales(lines(turned(outline, 0.7), closed=True))[3] == pytest.approx(1, rel=0.03)
+
+
+@pytest.mark.parametrize("solid", [False, True], ids=["on a plane", "on the ellipsoid"])
+def test_cells_of_geographic_rasters_are_found_after_projection(solid):
+    """Cells of 1/120 degree, 90 degrees of a meridian being 10,002 km: at 60 degrees half as wide as high."""
+    traced = synthetic.traced(synthetic.fractional_trail(1.2, vertices=3000, seed=1), 4.0).xy / 4 / 120
+    lonlat = traced - traced.mean(axis=0) + [20, 60]
+    target = "EPSG:4978" if solid else "+proj=aeqd +lat_0=60 +lon_0=20 +ellps=WGS84"
+    project = Transformer.from_crs("EPSG:4979" if solid else "EPSG:4326", target, always_xy=True)
+    xyz = project.transform(*lonlat.T, 0 * lonlat[:, 0])[: 3 if solid else 2]
+    assert scales(lines(np.column_stack(xyz)))[3] == pytest.approx(1e7 / 90 / 120, rel=0.03)
+
+
+@pytest.mark.parametrize(
+    ("curve", "step"),
+    [
+        (synthetic.quadratic_koch(2, level=4), 4.0**-4),
+        (synthetic.minkowski_island(level=5), 5.0**-2.5),
+        (synthetic.dragon_boundary(level=10), 2.0**-5),
+        (synthetic.loop_erased_walk(200, seed=1), 1.0),
+        (synthetic.snapped(synthetic.fractional_trail(1.2, vertices=3000, seed=1), 1.5), 1.5),
+    ],
+    ids=lambda value: value.source[:20] if isinstance(value, Curve) else "",
+)
+def test_curves_on_a_square_lattice_lie_on_cells_of_its_step(curve, step):
+    """No line tells whether it was drawn along cells or was made of such steps itself."""
+    assert scales(lines(turned(curve.xy, 0.4)))[3] == pytest.approx(step)
 
 
 def test_fit_is_least_squares_with_gaps_left_out():
@@ -168,6 +213,8 @@ def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
     features = [lines_of([synthetic.traced(synthetic.fractional_trail(1.3, vertices=400, seed=1), 2.0)])]
     features += [lines(rng.normal(size=(n, 2)).cumsum(axis=0)) for n in (2, 40, 400)]
     features += [lines(rng.normal(size=(50, 3)), rng.normal(size=(9, 3)))]
+    features += [lines(synthetic.koch(level=3).xy, source=np.arange(65) % 2 == 0)]
+    features += [lines(synthetic.dragon_boundary(level=6).xy)]
     compiled = [scales(feature) for feature in features]
     offsets, x, y = np.array([0, 5, 5, 9]), rng.normal(size=9), rng.normal(size=9)
     fitted = ladder_fit.fit_lines(offsets, x, y)

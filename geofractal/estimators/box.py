@@ -63,6 +63,7 @@ def box_ladders(
     size_min_m: float | None = None,
     size_max_m: float | None = None,
     rungs: int | None = None,
+    scales: Floats | None = None,
 ) -> Ladders:
     """Choose each feature's box sizes from its own vertex spacing and extent.
 
@@ -70,7 +71,8 @@ def box_ladders(
     the first ruler there; the extent is the longest side of the bounds of the whole feature, so that a
     network counts as one.
     """
-    finest, extents = finest_rulers(scales_of(lines)), _sides(lines).max(axis=1)
+    finest = finest_rulers(scales_of(lines) if scales is None else scales)
+    extents = _sides(lines).max(axis=1)
     n = len(lines)
     lowest = np.full(n, float(size_min_m)) if size_min_m is not None else finest
     highest = np.full(n, float(size_max_m)) if size_max_m is not None else LAST_BOX_EXTENT * extents
@@ -198,6 +200,7 @@ class BoxDimension(Measure[BoxOptions]):
     sources: ClassVar[tuple[str, ...]] = ("common practice", HENTSCHEL_PROCACCIA)
     stem: ClassVar[str] = "box"
     one_path: ClassVar[bool] = False
+    version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = BoxOptions
 
@@ -211,7 +214,11 @@ class BoxDimension(Measure[BoxOptions]):
         notes = Notes(finest_rulers(scales))
         notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
         ladders = box_ladders(
-            lines, size_min_m=options.size_min_m, size_max_m=options.size_max_m, rungs=options.rungs
+            lines,
+            size_min_m=options.size_min_m,
+            size_max_m=options.size_max_m,
+            rungs=options.rungs,
+            scales=scales,
         )
         counts = count(lines, ladders, shifts=GRID_SHIFTS[: options.grids])
         values = _judged(lines, scales, ladders, counts, notes)

@@ -193,6 +193,7 @@ class DividerDimension(Measure[DividerOptions]):
     formula: ClassVar[str] = "L(r) = r n + d; D = 1 - slope of ln L on ln r"
     sources: ClassVar[tuple[str, ...]] = (MANDELBROT,)
     stem: ClassVar[str] = "divider"
+    version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = DividerOptions
 

@@ -68,6 +68,7 @@ class Sinuosity(Measure[SinuosityOptions]):
         "Leopold & Wolman 1957, US Geological Survey Professional Paper 282-B",
     )
     stem: ClassVar[str] = "sinuosity"
+    version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
     options: ClassVar[type[Options]] = SinuosityOptions
 

@@ -23,9 +23,9 @@ FIRST_RUNG_LONG_SEGMENTS = 2.0
 line is drawn in long segments."""
 
 FIRST_RUNG_CELLS = 6.0
-"""First rung of a staircase, in cells. Tracing through cells, or snapping to a grid as coarse as the
-vertices are dense, adds 4 to 25 % to the length at two cells (the more the higher the dimension), 1 to 9 %
-at four and 0 to 4 % at eight."""
+"""First rung of a staircase, in the longer sides of its cells. Tracing through cells, or snapping to a grid
+as coarse as the vertices are dense, adds 4 to 25 % to the length at two cells (the more the higher the
+dimension), 1 to 9 % at four and 0 to 4 % at eight."""
 
 LAST_RUNG_EXTENT = 1.0 / 3.0
 """Last rung as a share of the extent; rungs on which too few steps were taken are then left out."""
