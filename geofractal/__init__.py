@@ -9,7 +9,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from geofractal.api import box_dimension, divider_dimension, divider_ladder, run, sinuosity
+    from geofractal.api import box_dimension, box_ladder, divider_dimension, divider_ladder, run, sinuosity
     from geofractal.cover_api import fragmentation
     from geofractal.estimators.area_perimeter import area_perimeter_dimension, area_perimeter_residual
     from geofractal.estimators.number_area import number_area_exponent
@@ -20,6 +20,7 @@ __all__ = [
     "area_perimeter_dimension",
     "area_perimeter_residual",
     "box_dimension",
+    "box_ladder",
     "divider_dimension",
     "divider_ladder",
     "fragmentation",
@@ -36,6 +37,7 @@ _HOMES = {
     "area_perimeter_dimension": "geofractal.estimators.area_perimeter",
     "area_perimeter_residual": "geofractal.estimators.area_perimeter",
     "box_dimension": "geofractal.api",
+    "box_ladder": "geofractal.api",
     "divider_dimension": "geofractal.api",
     "divider_ladder": "geofractal.api",
     "fragmentation": "geofractal.cover_api",

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Iterator, Sequence
 from functools import partial
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any, Literal, NamedTuple
 
 import numpy as np
 import pyarrow as pa
@@ -18,11 +18,8 @@ from geofractal.batch.spool import FID, ROW
 from geofractal.config.load import load_config
 from geofractal.config.models import MeasureRequest, Prepare
 from geofractal.errors import ConfigError
-from geofractal.estimators.divider import walk
 from geofractal.reader.planes import Projector
 from geofractal.registry import load_measure
-from geofractal.scaling.fit import local_dimensions
-from geofractal.scaling.ladder import divider_ladders
 
 if TYPE_CHECKING:
     from typing import TypeAlias
@@ -115,9 +112,8 @@ def divider_dimension(
         "starts": starts,
         "extrapolate": extrapolate,
     }
-    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
-    prepare = Prepare(boundaries=boundaries, repair=repair)
-    return _measured("divider-dimension", options, geometries, crs, prepare, plane)
+    prepare, plane = _prepared(boundaries, repair), _plane(edges, budget_percent, three_dimensions)
+    return _measured(_asked("divider-dimension", options, geometries, crs, prepare, plane))
 
 
 def box_dimension(
@@ -160,11 +156,9 @@ def box_dimension(
     >>> box_dimension([straight, None], crs="EPSG:32631")["box_verdict"][0]
     'smooth'
     """
-    options = {"size_min_m": size_min_m, "size_max_m": size_max_m, "rungs": rungs}
-    options |= {} if grids is None else {"grids": grids}
-    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
-    prepare = Prepare(boundaries=boundaries, repair=repair)
-    return _measured("box-dimension", options, geometries, crs, prepare, plane)
+    options = _box_options(size_min_m, size_max_m, rungs, grids)
+    prepare, plane = _prepared(boundaries, repair), _plane(edges, budget_percent, three_dimensions)
+    return _measured(_asked("box-dimension", options, geometries, crs, prepare, plane))
 
 
 def divider_ladder(
@@ -174,7 +168,9 @@ def divider_ladder(
     ruler_min_m: float | None = None,
     ruler_max_m: float | None = None,
     rungs: int | None = None,
+    starts: int | None = None,
     boundaries: Literal["all", "outer"] = "all",
+    repair: bool = False,
     edges: Edges = "straight",
     budget_percent: float = 0.5,
     three_dimensions: bool = True,
@@ -188,35 +184,62 @@ def divider_ladder(
     Returns
     -------
     pandas.DataFrame
-        one row per input and ruler, with the input's index: ``ruler_m``, ``length_km``, ``steps`` (whole
-        ones, mean over the starts) and ``local_dim``, the dimension over the ruler and two on either side.
-        Inputs that cannot be walked have no rows.
+        one row per input and ruler, with the input's index: ``ruler_m``, ``length_km`` with
+        ``length_spread_km``, ``steps`` (whole ones, mean of the walks), ``used`` (whether the dimension
+        rests on it), ``local_dim`` (over the ruler and two on either side) with ``local_dim_spread``, and
+        ``length_fit_km``, as ``geofractal measures`` tells. Inputs that cannot be walked have no rows.
 
     Raises
     ------
     ConfigError, LayerError
         as `divider_dimension`
     """
-    import pandas as pd
+    options = {
+        "ruler_min_m": ruler_min_m,
+        "ruler_max_m": ruler_max_m,
+        "rungs": rungs,
+        "starts": starts,
+        "ladder_table": True,
+    }
+    prepare, plane = _prepared(boundaries, repair), _plane(edges, budget_percent, three_dimensions)
+    return _ladder(_asked("divider-dimension", options, geometries, crs, prepare, plane))
 
-    values, index, wkt = _taken(geometries, crs)
-    projector = Projector(wkt, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
-    tables = [pd.DataFrame({"ruler_m": [], "length_km": [], "steps": [], "local_dim": []}, index=index[:0])]
-    for part in _parts(values):
-        found = part.features(Prepare(boundaries=boundaries)).lines
-        rows = part.rows[found.rows]
-        chunks, _ = projector.lines(rows, found.xy, found.part_offsets, found.feature_offsets, found.closed)
-        for lines in chunks:
-            ladders = divider_ladders(lines, ruler_min_m=ruler_min_m, ruler_max_m=ruler_max_m, rungs=rungs)
-            walks = walk(lines, ladders)
-            figures = {
-                "ruler_m": ladders.rulers,
-                "length_km": walks.length / 1000,
-                "steps": walks.steps,
-                "local_dim": local_dimensions(ladders, walks.length),
-            }
-            tables.append(pd.DataFrame(figures, index=index[np.repeat(lines.rows, np.diff(ladders.offsets))]))
-    return pd.concat(tables)
+
+def box_ladder(
+    geometries: Geometries,
+    *,
+    crs: Any = None,
+    size_min_m: float | None = None,
+    size_max_m: float | None = None,
+    rungs: int | None = None,
+    grids: int | None = None,
+    boundaries: Literal["all", "outer"] = "all",
+    repair: bool = False,
+    edges: Edges = "straight",
+    budget_percent: float = 0.5,
+    three_dimensions: bool = True,
+) -> pd.DataFrame:
+    """Return what is counted at every box size of each input's ladder: the table behind its box dimension.
+
+    Parameters
+    ----------
+    geometries, crs, size_min_m, ... : as in `box_dimension`
+
+    Returns
+    -------
+    pandas.DataFrame
+        one row per input and box size, with the input's index: ``box_size_m``, ``boxes`` with
+        ``boxes_spread``, ``used``, ``local_dim`` with ``local_dim_spread``, and ``boxes_fit``, as in
+        `divider_ladder`. Inputs that cannot be counted have no rows.
+
+    Raises
+    ------
+    ConfigError, LayerError
+        as `divider_dimension`
+    """
+    options = _box_options(size_min_m, size_max_m, rungs, grids) | {"ladder_table": True}
+    prepare, plane = _prepared(boundaries, repair), _plane(edges, budget_percent, three_dimensions)
+    return _ladder(_asked("box-dimension", options, geometries, crs, prepare, plane))
 
 
 def sinuosity(
@@ -245,32 +268,62 @@ def sinuosity(
     ConfigError, LayerError
         as `divider_dimension`
     """
-    options = {"ruler_m": ruler_m}
-    plane = partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
-    return _measured("sinuosity", options, geometries, crs, Prepare(), plane)
+    plane = _plane(edges, budget_percent, three_dimensions)
+    return _measured(_asked("sinuosity", {"ruler_m": ruler_m}, geometries, crs, Prepare(), plane))
 
 
-def _measured(
+def _prepared(boundaries: Literal["all", "outer"], repair: bool) -> Prepare:  # noqa: FBT001 - one call
+    return Prepare(boundaries=boundaries, repair=repair)
+
+
+def _plane(edges: Edges, budget_percent: float, three_dimensions: bool) -> Callable[[str], Projector]:  # noqa: FBT001 - as above
+    return partial(Projector, edges=edges, budget=budget_percent / 100, three_dimensions=three_dimensions)
+
+
+def _box_options(
+    size_min_m: float | None, size_max_m: float | None, rungs: int | None, grids: int | None
+) -> dict[str, Any]:
+    chosen = {"size_min_m": size_min_m, "size_max_m": size_max_m, "rungs": rungs}
+    return chosen if grids is None else chosen | {"grids": grids}
+
+
+class _Asked(NamedTuple):
+    """Geometries, their index, and what they are measured with."""
+
+    work: LayerWork
+    values: NDArray[np.object_]
+    index: Any
+
+
+def _measured(asked: _Asked) -> pd.DataFrame:
+    """Measure geometries as the batch measures a layer's rows."""
+    results = [measure_part(asked.work, part).results for part in _parts(asked.values)]
+    return pa.Table.from_batches(results).drop_columns([ROW, FID]).to_pandas().set_axis(asked.index)
+
+
+def _ladder(asked: _Asked) -> pd.DataFrame:
+    """Return the ladder table of geometries as the batch writes it for a layer's rows."""
+    ladders = [measure_part(asked.work, part).ladders[0] for part in _parts(asked.values)]
+    found = pa.Table.from_batches(ladders).to_pandas()
+    return found.set_axis(asked.index[found.pop("row") - 1])
+
+
+def _asked(
     word: str,
     options: dict[str, Any],
     geometries: Geometries,
     crs: Any,
     prepare: Prepare,
     plane: Callable[[str], Projector],
-) -> pd.DataFrame:
-    """Measure geometries as the batch measures a layer's rows."""
-    import pandas as pd
-
+) -> _Asked:
+    """Return geometries with the measure, its options checked."""
     try:
         chosen = load_measure(word).options(**options)
     except ValidationError as error:
         raise ConfigError(f"{word}: {error}") from None
     request = MeasureRequest(measure=word, of="geometries", options=chosen)
     values, index, wkt = _taken(geometries, crs)
-    work = LayerWork((request,), plane(wkt), prepare)
-    results = [measure_part(work, part) for part in _parts(values)]
-    found = pa.Table.from_batches(results).drop_columns([ROW, FID]).to_pandas()
-    return pd.DataFrame(found).set_axis(index)
+    return _Asked(LayerWork((request,), plane(wkt), prepare), values, index)
 
 
 def _taken(geometries: Geometries, crs: Any) -> tuple[NDArray[np.object_], Any, str]:

@@ -6,7 +6,7 @@ import json
 from dataclasses import asdict
 from typing import Any
 
-from geofractal.measure import CoverMeasure
+from geofractal.measure import CoverMeasure, LadderMeasure
 from geofractal.registry import AnyMeasure
 
 
@@ -14,10 +14,10 @@ def as_dict(measure: AnyMeasure) -> dict[str, Any]:
     """Return a measure's word, title, formula, sources, options and columns as plain data.
 
     The columns (of a measure of class maps: the quantities) are those under default options, None where an
-    option has no default.
+    option has no default. Columns of a ladder table are those that follow the row and its name.
     """
     held = "quantities" if isinstance(measure, CoverMeasure) else "columns"
-    return {
+    told = {
         "measure": measure.name,
         "title": measure.title,
         "formula": measure.formula,
@@ -27,6 +27,9 @@ def as_dict(measure: AnyMeasure) -> dict[str, Any]:
         "options": _options(measure),
         held: _by_default(measure),
     }
+    if isinstance(measure, LadderMeasure):
+        told["ladder_columns"] = [asdict(column) for column in measure.ladder_columns]
+    return told
 
 
 def as_lines(measure: AnyMeasure) -> list[str]:
@@ -42,10 +45,16 @@ def as_lines(measure: AnyMeasure) -> list[str]:
         text.append("    none")
     held = "quantities" if "quantities" in told else "columns"
     text.append(f"  {held}, under default options:")
-    for column in told[held] or ():
-        unit = f", {column['unit']}" if column["unit"] else ""
-        text.append(f"    {column['name']} ({column['short']}; {column['kind']}{unit}): {column['meaning']}")
+    text += [_column_line(column) for column in told[held] or ()]
+    if "ladder_columns" in told:
+        text.append("  columns of its table with ladder-table, one row a feature and rung:")
+        text += [_column_line(column) for column in told["ladder_columns"]]
     return [*text, ""]
+
+
+def _column_line(column: dict[str, Any]) -> str:
+    unit = f", {column['unit']}" if column["unit"] else ""
+    return f"    {column['name']} ({column['short']}; {column['kind']}{unit}): {column['meaning']}"
 
 
 def _options(measure: AnyMeasure) -> list[dict[str, Any]]:

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any, ClassVar, Generic, Literal, Protocol, Typ
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import BaseModel, ConfigDict
+from pydantic import BaseModel, ConfigDict, Field
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -151,6 +151,47 @@ class Measure(ABC, Generic[O]):
         """Return the text column that says why a figure is missing or limited."""
         meaning = "why a figure is missing or limited; null where nothing is to be said"
         return Column(f"{self.stem}_note", f"{self.stem[:5]}_note", "text", "", meaning)
+
+
+class LadderOptions(Options):
+    """Base of the options of a `LadderMeasure`."""
+
+    ladder_table: bool = Field(
+        False, description="also write a table of what was found at every rung of each feature's ladder"
+    )
+
+
+L = TypeVar("L", bound=LadderOptions)
+
+
+@dataclass(frozen=True, slots=True)
+class LadderRows:
+    """What was found at the rungs of a chunk's features, feature after feature, from fine to coarse.
+
+    Attributes
+    ----------
+    features : (q,) number of each rung's feature in the chunk, never decreasing; a feature may have none
+    figures : one array of q values for each of `LadderMeasure.ladder_columns`
+    """
+
+    features: Ints
+    figures: Values
+
+
+class LadderMeasure(Measure[L]):
+    """A measure of lines that can also tell what it found at every rung of a feature's ladder.
+
+    Class attributes are those of `Measure`, and
+
+    ladder_columns : the columns of the ladder table; the batch puts the feature's row and name before them
+    """
+
+    ladder_columns: ClassVar[tuple[Column, ...]]
+    options: ClassVar[type[LadderOptions]]
+
+    @abstractmethod
+    def measure_with_ladder(self, lines: Lines, options: L) -> tuple[Values, LadderRows]:
+        """Return what `measure` returns, and the rungs that it rests on; called where a table is asked."""
 
 
 FIGURE_COLUMNS = (

@@ -13,7 +13,16 @@ from importlib.metadata import EntryPoint, entry_points
 from typing import Any, get_args
 
 from geofractal.errors import GeofractalWarning, MeasureError
-from geofractal.measure import GROUPS, Column, CoverMeasure, Measure, Options, Quantity
+from geofractal.measure import (
+    GROUPS,
+    Column,
+    CoverMeasure,
+    LadderMeasure,
+    LadderOptions,
+    Measure,
+    Options,
+    Quantity,
+)
 
 GROUP = "geofractal.measures"
 
@@ -33,6 +42,9 @@ UNITS = (
     "1/1000km2",
 )
 """Units that a column may have; a plain word among them also ends the column's name."""
+
+NAME_COLUMNS = ("row", "id", "group")
+"""Columns that the batch puts before those of a ladder table."""
 
 REQUEST_KEYS = ("measure", "of", "prefix")
 """Keys of a measure's entry in a batch file that are not its own options."""
@@ -230,7 +242,22 @@ def _class_faults(measure_class: type[AnyMeasure], name: str | None) -> list[str
     if not (isinstance(measure_class.version, int) and measure_class.version >= 1):
         faults.append(f"version is {measure_class.version!r}; allowed: a whole number from 1")
     taken = REQUEST_KEYS if allowed == "lines" else COVER_KEYS
-    return faults + _options_faults(getattr(measure_class, "options", None), taken)
+    faults += _options_faults(getattr(measure_class, "options", None), taken)
+    return faults or _ladder_faults(measure_class)
+
+
+def _ladder_faults(measure_class: type[AnyMeasure]) -> list[str]:
+    """Return what is wrong with a ladder table, and with options that ask for one in vain."""
+    asked = issubclass(measure_class.options, LadderOptions)
+    if not issubclass(measure_class, LadderMeasure):
+        return ["its options are LadderOptions, but it is no LadderMeasure"] if asked else []
+    if not asked:
+        return ["it is a LadderMeasure, but its options are no LadderOptions"]
+    columns = getattr(measure_class, "ladder_columns", ())
+    faults = [fault for column in columns for fault in _one_column_faults(column)]
+    names = Counter([*NAME_COLUMNS, *(column.name for column in columns)])
+    faults += [f"column {name!r} of the ladder table stands twice" for name, n in names.items() if n > 1]
+    return faults if columns else ["its ladder table has no columns"]
 
 
 def _options_faults(options: Any, taken: Sequence[str]) -> list[str]:

@@ -16,6 +16,7 @@ from geofractal.measure import (
     Column,
     CoverMap,
     CoverMeasure,
+    LadderMeasure,
     Lines,
     Measure,
     Options,
@@ -87,7 +88,8 @@ def check_measure(measure_class: type[Measure[Any]], options: Options | None = N
 
     Checked are: its class and columns, that it pickles, that it is pure and leaves its input alone, that
     a feature's values depend neither on its neighbours nor on their order, that each value is an array
-    of the type its column says, and that what deserves no figure is null and has a note.
+    of the type its column says, that what deserves no figure is null and has a note, and that a ladder
+    table keeps all of this, too.
 
     Parameters
     ----------
@@ -115,6 +117,8 @@ def check_measure(measure_class: type[Measure[Any]], options: Options | None = N
         _check_same(f"{name}, measured again", values, measure.measure(lines, options))
         _check_same(f"{name}, pickled", values, twin.measure(lines, twin_options))
         _check_independence(name, measure, options, lines, values)
+        if isinstance(measure, LadderMeasure):
+            _check_ladder(name, measure, options, lines, values)
     _check_no_length(measure, options, columns[0])
 
 
@@ -237,6 +241,27 @@ def _check_independence(
     for feature in range(len(lines)):
         alone = measure.measure(take(lines, [feature]), options)
         _check_same(f"{name}, feature {feature} alone", {k: v[[feature]] for k, v in values.items()}, alone)
+
+
+def _check_ladder(
+    name: str, measure: LadderMeasure[Any], options: Options, lines: Lines, values: Values
+) -> None:
+    found, rungs = measure.measure_with_ladder(lines, options)
+    _check_same(f"{name}, with its ladder", values, found)
+    name = f"{name}, ladder table"
+    features = rungs.features
+    if len(features) and (
+        np.diff(features).min(initial=0) < 0 or not 0 <= features[0] <= features[-1] < len(lines)
+    ):
+        raise AssertionError(f"{name}: features {features.tolist()} are not rising numbers of the chunk's")
+    _check_arrays(name, rungs.figures, measure.ladder_columns, len(features))
+    _check_same(
+        f"{name}, measured again", rungs.figures, measure.measure_with_ladder(lines, options)[1].figures
+    )
+    for feature in range(len(lines)):
+        alone = measure.measure_with_ladder(take(lines, [feature]), options)[1].figures
+        of_it = {key: array[features == feature] for key, array in rungs.figures.items()}
+        _check_same(f"{name}, feature {feature} alone", of_it, alone)
 
 
 def _check_no_length(measure: Measure[Any], options: Options, first: Column) -> None:

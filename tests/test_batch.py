@@ -300,11 +300,11 @@ def test_a_kept_part_that_a_power_cut_spoilt_is_measured_anew(tmp_path, left):
         load_config(write_batch(tmp_path, {"rivers": {"source": "in.gpkg"}}, [DIVIDER]))
     ).layers
     (part,) = parts_of(layer, tmp_path)
-    whole = parts.measured_part(layer.work, part, tmp_path)
+    whole = parts.measured_part(layer.work, part, tmp_path).results
     (kept,) = tmp_path.glob("*.arrow")
     kept.write_bytes(kept.read_bytes()[:-400] if left is None else left)
-    assert parts.measured_part(layer.work, part, tmp_path).equals(whole)
-    assert parts.measured_part(layer.work, part, tmp_path).equals(whole)
+    assert parts.measured_part(layer.work, part, tmp_path).results.equals(whole)
+    assert parts.measured_part(layer.work, part, tmp_path).results.equals(whole)
 
 
 def test_a_key_changes_with_rows_options_and_nothing_else(tmp_path):

@@ -26,7 +26,7 @@ def test_a_measure_is_described_by_its_own_metadata():
 def test_text_and_data_agree():
     measure = load_measure("divider-dimension")
     told, text = as_dict(measure), "\n".join(as_lines(measure))
-    for column in told["columns"]:
+    for column in (*told["columns"], *told["ladder_columns"]):
         assert f"{column['name']} ({column['short']}; " in text
         assert column["meaning"] in text
     for option in told["options"]:

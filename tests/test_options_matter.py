@@ -76,6 +76,7 @@ CASES = {
     ("divider-dimension", "rungs"): case(options={"rungs": 9}),
     ("divider-dimension", "starts"): case(options={"starts": 1}),
     ("divider-dimension", "lengths_at_m"): case(options={"lengths-at-m": [100]}),
+    ("divider-dimension", "ladder_table"): case(options={"ladder-table": True}),
     ("divider-dimension", "extrapolate"): case(
         base=dict(options={"lengths-at-m": [20_000]}),
         options={"lengths-at-m": [20_000], "extrapolate": True},
@@ -90,7 +91,7 @@ COVERED_ELSEWHERE = {
     ("layer", "id"): "test_refused_rows_are_listed_by_their_id",
     ("layer", "encoding"): "test_a_stated_encoding_reads_the_text_right",
     ("outputs", "folder"): "test_the_folder_is_where_results_go",
-    ("outputs", "tables"): "long tables belong to class maps",
+    ("outputs", "tables"): "test_ladder_tables.py, test_covers_batch.py",
     ("run", "workers"): "test_batch.py: results do not depend on it",
     ("request", "measure"): "it is the measure",
     ("request", "of"): "it is the layer",

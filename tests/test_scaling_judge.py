@@ -198,6 +198,7 @@ def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
             if hasattr(function, "py_func"):
                 monkeypatch.setattr(module, name, function.py_func)
     monkeypatch.setattr("geofractal.scaling.judge.judge_ladders", ladder_judge.judge_ladders)
+    monkeypatch.setattr("geofractal.scaling.judge.used_rungs", ladder_judge.used_rungs)
     interpreted = judge(ladders, rungs)
     for field in fields(compiled):
         one, other = getattr(compiled, field.name), getattr(interpreted, field.name)

@@ -201,11 +201,26 @@ def test_local_dimension_tells_where_a_hinge_is():
     rulers = np.geomspace(1, 100, 25)
     lengths = rulers**-0.1 * np.maximum(rulers / 10, 1) ** -0.3
     lengths[5] = np.nan
-    found = local_dimensions(Ladders(np.array([0, 25]), rulers), lengths)
+    found = local_dimensions(Ladders(np.array([0, 25]), rulers), lengths, np.zeros(25)).dimension
     assert found[:5] == pytest.approx(np.full(5, 1.1))
     assert np.isnan(found[5])
     assert found[15:] == pytest.approx(np.full(10, 1.4))
-    assert np.isnan(local_dimensions(Ladders(np.array([0, 2]), rulers[:2]), lengths[:2])).all()
+    two = local_dimensions(Ladders(np.array([0, 2]), rulers[:2]), lengths[:2], np.zeros(2))
+    assert np.isnan(two).all()
+
+
+def test_local_dimension_has_the_error_of_its_line_or_of_its_rungs_whichever_is_more():
+    """Scatter as numpy.polyfit has it; where there is none, noise s gives s / sqrt(sum (x - mean)^2)."""
+    rng = np.random.default_rng(4)
+    rulers = np.geomspace(1, 30, 9)
+    x = np.log(rulers)
+    lengths = rulers**-0.2 * rng.lognormal(0, 0.01, 9)
+    ladders = Ladders(np.array([0, 9]), rulers)
+    found = local_dimensions(ladders, lengths, np.full(9, np.nan))
+    slope, covariance = np.polyfit(x[2:7], np.log(lengths[2:7]), 1, cov=True)
+    assert [found.dimension[4], found.spread[4]] == pytest.approx([1 - slope[0], np.sqrt(covariance[0, 0])])
+    noisy = local_dimensions(ladders, rulers**-0.2, 0.03 * rulers**-0.2)
+    assert noisy.spread[4] == pytest.approx(0.03 / np.sqrt(((x[2:7] - x[4]) ** 2).sum()))
 
 
 def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
@@ -219,8 +234,9 @@ def test_compiled_kernels_agree_with_their_interpreted_twins(monkeypatch):
     offsets, x, y = np.array([0, 5, 5, 9]), rng.normal(size=9), rng.normal(size=9)
     fitted = ladder_fit.fit_lines(offsets, x, y)
     assert ladder_fit.fit_lines.py_func(offsets, x, y) == pytest.approx(fitted, nan_ok=True)
-    slopes = ladder_fit.local_slopes(offsets, x, y, 1)
-    assert ladder_fit.local_slopes.py_func(offsets, x, y, 1) == pytest.approx(slopes, nan_ok=True)
+    noise = np.where(rng.random(9) < 0.3, np.nan, 0.5)
+    slopes = ladder_fit.local_slopes(offsets, x, y, noise, 1)
+    assert ladder_fit.local_slopes.py_func(offsets, x, y, noise, 1) == pytest.approx(slopes, nan_ok=True)
     for name, function in list(vars(line_scales).items()):
         if hasattr(function, "py_func"):
             monkeypatch.setattr(line_scales, name, function.py_func)

@@ -50,7 +50,7 @@ def test_its_parts_are_the_same_in_this_process(tmp_path):
     (layer,) = plan_batch(load_config(tmp_path / "batch.yaml")).layers
     frame = gpd.read_file(tmp_path / "in.gpkg").to_crs(UTM)
     wkb = shapely.to_wkb(frame.geometry.to_numpy())
-    here = measure_part(layer.work, RowsPart(np.arange(10), pa.array(wkb, pa.binary())))
+    here = measure_part(layer.work, RowsPart(np.arange(10), pa.array(wkb, pa.binary()))).results
     for column in layer.columns:
         written = copy[column.name]
         assert here.column(column.name).to_pylist() == written.where(written.notna(), None).tolist()

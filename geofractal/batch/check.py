@@ -10,6 +10,7 @@ from geofractal.batch.cover_plan import CoverPlan, CoverWork
 from geofractal.batch.plan import LayerPlan, Plan, plan_batch
 from geofractal.config.models import Batch
 from geofractal.errors import LayerError
+from geofractal.measure import Column, Quantity
 from geofractal.reader.crs import crs_doubt
 from geofractal.reader.planes import layer_distortion
 
@@ -65,9 +66,11 @@ def _layer_lines(plan: Plan, layer: LayerPlan) -> Iterator[str]:
         yield f"  work: {parts}, {_count(len(layer.work.requests), 'measure')}"
         yield from (f"  {line}" for line in _plane_lines(layer))
     yield f"  {len(layer.columns)} new columns:"
-    for column in layer.columns:
-        unit = f" [{column.unit}]" if column.unit else ""
-        yield f"    {column.name}{unit}: {column.meaning}"
+    yield from map(_column_line, layer.columns)
+    for table in layer.work.ladders:
+        files = " and ".join(str(path) for path in table.targets(plan.batch))
+        yield f"  ladder table of {table.request.measure}, one row a feature and rung: {files}"
+        yield from map(_column_line, table.columns)
     for word in plan.batch.outputs.formats:
         yield f"  {word}: {plan.targets[layer.name, word]}"
         yield from (f"    not held: {loss}" for loss in plan.losses[layer.name, word])
@@ -100,9 +103,12 @@ def _work_lines(work: CoverWork) -> Iterator[str]:
     barriers = f", cut by {' and '.join(request.barriers)}" if request.barriers else ""
     covers = ", ".join(request.covers) or "every class and group"
     yield f"  {request.measure} of {covers}, for the whole map{zones}{barriers}:"
-    for quantity in request.quantities():
-        unit = f" [{quantity.unit}]" if quantity.unit else ""
-        yield f"    {quantity.name}{unit}: {quantity.meaning}"
+    yield from map(_column_line, request.quantities())
+
+
+def _column_line(column: Column | Quantity) -> str:
+    unit = f" [{column.unit}]" if column.unit else ""
+    return f"    {column.name}{unit}: {column.meaning}"
 
 
 def _plane_lines(layer: LayerPlan) -> Iterator[str]:

@@ -8,17 +8,18 @@ from contextlib import suppress
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from geofractal.batch.ladders import LadderTable, ladder_file
 from geofractal.batch.spool import FID, ROW
 from geofractal.config.columns import prefixed
 from geofractal.config.models import MeasureRequest, Prepare
-from geofractal.measure import Column, Ints, Lines, Values
+from geofractal.measure import Column, Ints, LadderMeasure, LadderRows, Lines, Values
 from geofractal.reader.geometry import PROBLEMS, SourceLines, read_lines
 from geofractal.reader.groups import Bucket, group_lines
 from geofractal.reader.joining import join_parts
@@ -44,7 +45,8 @@ _DTYPES = {"number": np.float64, "count": np.int64, "text": object, "flag": np.i
 class Features:
     """Rows of a layer and their features, in the layer's own coordinates.
 
-    `feature` gives each row's feature, -1 where it has none and `notes` says why.
+    `feature` gives each row's feature, -1 where it has none and `notes` says why; `names` are those of the
+    features, None where nothing names them.
     """
 
     rows: Ints
@@ -52,6 +54,13 @@ class Features:
     feature: Ints
     notes: NDArray[np.object_]
     lines: SourceLines
+    names: pa.Array | None
+
+    @property
+    def first_rows(self) -> Ints:
+        """The row of each feature, of a group its first."""
+        numbers, firsts = np.unique(self.feature, return_index=True)
+        return self.rows[firsts[numbers >= 0]]
 
 
 class PartInput(Protocol):
@@ -66,16 +75,26 @@ class PartInput(Protocol):
 
 @dataclass(frozen=True)
 class RowsPart:
-    """Consecutive rows, each a feature of its own; `wanted` is the layer's ``where``, None for all."""
+    """Consecutive rows, each a feature of its own.
+
+    `wanted` is the layer's ``where``, None for all; `ids` name the rows where a table is to name them.
+    """
 
     rows: Ints
     wkb: pa.Array
     fids: Ints | None = None
     wanted: NDArray[np.bool_] | None = None
+    ids: pa.Array | None = None
 
     def content(self) -> pa.RecordBatch:
         """Return the rows with their ids, geometry and choice."""
-        held = {"row": self.rows, "fid": self.fids, "wanted": self.wanted, "wkb": self.wkb}
+        held = {
+            "row": self.rows,
+            "fid": self.fids,
+            "wanted": self.wanted,
+            "id": self.ids,
+            "wkb": self.wkb,
+        }
         return pa.RecordBatch.from_pydict(
             {name: pa.array(values) for name, values in held.items() if values is not None}
         )
@@ -91,7 +110,8 @@ class RowsPart:
             notes[~self.wanted] = NOT_WANTED
         feature = np.full(len(self.rows), -1, np.int64)
         feature[lines.rows] = np.arange(len(lines))
-        return Features(self.rows, self.fids, feature, notes, lines)
+        names = None if self.ids is None else self.ids.take(pa.array(lines.rows))
+        return Features(self.rows, self.fids, feature, notes, lines, names)
 
 
 @dataclass(frozen=True)
@@ -108,7 +128,8 @@ class GroupsPart:
         """Return one feature for each group whose rows can all be read."""
         groups = group_lines(self.bucket.read(), **_reading(prepare))
         notes = np.where(groups.wanted, groups.notes, NOT_WANTED)
-        return Features(groups.rows, groups.fids, groups.feature, notes, groups.lines)
+        names = pa.array(groups.keys, pa.string())
+        return Features(groups.rows, groups.fids, groups.feature, notes, groups.lines, names)
 
 
 _TEXTS = np.array([text or None for text in PROBLEMS], dtype=object)
@@ -121,18 +142,29 @@ def _reading(prepare: Prepare) -> dict[str, Any]:
 
 @dataclass(frozen=True)
 class LayerWork:
-    """What every part of a layer is measured with; picklable, so that processes can share it."""
+    """What every part of a layer is measured with; picklable, so that processes can share it.
+
+    `named` is the column that names features in ladder tables, None where nothing does.
+    """
 
     requests: tuple[MeasureRequest, ...]
     projector: Projector
     prepare: Prepare
     grouped: bool = False
+    named: Column | None = None
 
     @cached_property
     def columns(self) -> tuple[Column, ...]:
         """All result columns of the layer, in output order."""
         measured = tuple(column for request in self.requests for column in request.columns())
         return (*measured, LEFT_OUT) if self.leaves_out else measured
+
+    @cached_property
+    def ladders(self) -> tuple[LadderTable, ...]:
+        """The ladder tables that are asked for."""
+        return tuple(
+            LadderTable(request, self.named) for request in self.requests if request.ladder_columns()
+        )
 
     @cached_property
     def note_names(self) -> frozenset[str]:
@@ -158,7 +190,7 @@ class LayerWork:
     @cached_property
     def digest(self) -> bytes:
         """Hash of options, measures' versions and code."""
-        said = [code_digest(), repr(self.projector), repr(self.prepare), repr(self.grouped)]
+        said = [code_digest(), *map(repr, (self.projector, self.prepare, self.grouped, self.named))]
         for request in self.requests:
             measure = load_measure(request.measure)
             said += [
@@ -190,35 +222,75 @@ def part_key(work: LayerWork, part: PartInput) -> str:
     return hashlib.blake2b(sink.getvalue(), key=work.digest, digest_size=16).hexdigest()
 
 
-def measured_part(work: LayerWork, part: PartInput, folder: Path) -> pa.RecordBatch:
-    """Return the results of a part, one row for each of its rows, columns as in `LayerWork.columns`.
+class MeasuredPart(NamedTuple):
+    """What a run needs of a part that was measured.
+
+    Attributes
+    ----------
+    results : one row for each of its rows, columns as in `LayerWork.columns`
+    key : its content key, by which `ladder_file` finds the rows of ladder tables
+    """
+
+    results: pa.RecordBatch
+    key: str
+
+
+class PartResults(NamedTuple):
+    """All that was found in a part.
+
+    Attributes
+    ----------
+    results : as in `MeasuredPart`
+    ladders : the rows of each of `LayerWork.ladders`
+    """
+
+    results: pa.RecordBatch
+    ladders: tuple[pa.RecordBatch, ...]
+
+
+def measured_part(work: LayerWork, part: PartInput, folder: Path) -> MeasuredPart:
+    """Return the results of a part; rows of ladder tables stay in `folder`, where memory need not hold them.
 
     Results that an earlier run left in `folder` are taken, and new ones are kept there. A file that a
     power cut left unreadable counts as none.
     """
-    kept = folder / f"{part_key(work, part)}.arrow"
-    if kept.exists():
-        broken = suppress(pa.ArrowException, OSError, StopIteration)
-        with broken, pa.OSFile(str(kept)) as source, pa.ipc.open_stream(source) as stream:
-            return stream.read_next_batch()
-    results = measure_part(work, part)
-    _keep(results, kept)
-    return results
+    key = part_key(work, part)
+    kept = folder / f"{key}.arrow"
+    ladders = [ladder_file(folder, key, place) for place in range(len(work.ladders))]
+    known = [_kept(path) for path in (kept, *ladders)]
+    if None not in known:
+        return MeasuredPart(known[0], key)
+    found = measure_part(work, part)
+    for path, rows in zip(ladders, found.ladders, strict=True):
+        _keep(rows, path)
+    _keep(found.results, kept)
+    return MeasuredPart(found.results, key)
 
 
-def _keep(results: pa.RecordBatch, kept: Path) -> None:
-    """Write a part's results beside their place and rename them into it when whole."""
+def _kept(path: Path) -> pa.RecordBatch | None:
+    """Return what an earlier run kept, None where that is nothing or cannot be read."""
+    with (
+        suppress(pa.ArrowException, OSError, StopIteration),
+        pa.OSFile(str(path)) as source,
+        pa.ipc.open_stream(source) as stream,
+    ):
+        return stream.read_next_batch()
+    return None
+
+
+def _keep(rows: pa.RecordBatch, kept: Path) -> None:
+    """Write what a part found beside its place and rename it into it when whole."""
     unfinished = kept.with_suffix(f".{os.getpid()}.part")
     with in_plain_words(kept):
-        with pa.OSFile(str(unfinished), "wb") as sink, pa.ipc.new_stream(sink, results.schema) as stream:
-            stream.write_batch(results)
+        with pa.OSFile(str(unfinished), "wb") as sink, pa.ipc.new_stream(sink, rows.schema) as stream:
+            stream.write_batch(rows)
         unfinished.replace(kept)
 
 
-def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:
+def measure_part(work: LayerWork, part: PartInput) -> PartResults:
     """Measure a part: pure, and with no regard to what other parts hold."""
     features = part.features(work.prepare)
-    values, problems = _measure_features(work, features.lines)
+    values, problems, rungs = _measure_features(work, features.lines)
     has = features.feature >= 0
     notes = features.notes.copy()
     notes[has] = problems[features.feature[has]]
@@ -230,16 +302,23 @@ def measure_part(work: LayerWork, part: PartInput) -> pa.RecordBatch:
         if column.name in work.note_names:
             rows = np.where(notes == None, rows, notes)  # noqa: E711 - elementwise
         arrays.append(_arrow(column, rows))
-    return pa.RecordBatch.from_arrays(arrays, names=[ROW, FID, *(column.name for column in work.columns)])
+    names = [ROW, FID, *(column.name for column in work.columns)]
+    ladders = (_ladder_batch(table, features, rungs[note_name(table.request)]) for table in work.ladders)
+    return PartResults(pa.RecordBatch.from_arrays(arrays, names=names), tuple(ladders))
 
 
-def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDArray[np.object_]]:
-    """Return every column's value for each feature, and why a feature lies on no plane."""
+Rungs = dict[str, list[LadderRows]]
+"""Rows of ladder tables, by the note column of their request."""
+
+
+def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDArray[np.object_], Rungs]:
+    """Return every column's value for each feature, why a feature lies on no plane, and what was at rungs."""
     n = len(lines)
     values: Values = {column.name: _nulls(column, n) for column in work.columns}
     problems = np.full(n, None, dtype=object)
+    rungs: Rungs = {note_name(table.request): [] for table in work.ladders}
     if not n:
-        return values, problems
+        return values, problems, rungs
     chunks, refused = work.projector.lines(
         np.arange(n), lines.xy, lines.part_offsets, lines.feature_offsets, lines.closed
     )
@@ -251,20 +330,37 @@ def _measure_features(work: LayerWork, lines: SourceLines) -> tuple[Values, NDAr
         for request in work.requests:
             if load_measure(request.measure).one_path:
                 values[note_name(request)][list(unjoined)] = list(unjoined.values())
-                _measure_lines(request, joined, values)
+                _measure_lines(request, joined, values, rungs)
             else:
-                _measure_lines(request, chunk, values)
-    return values, problems
+                _measure_lines(request, chunk, values, rungs)
+    return values, problems, rungs
 
 
-def _measure_lines(request: MeasureRequest, lines: Lines, values: Values) -> None:
-    """Fill a request's columns for the features in `lines`."""
+def _measure_lines(request: MeasureRequest, lines: Lines, values: Values, rungs: Rungs) -> None:
+    """Fill a request's columns for the features in `lines`, and add their rungs where a table is asked."""
     if not len(lines):
         return
     measure = load_measure(request.measure)
-    found = measure.measure(lines, request.options)
+    if isinstance(measure, LadderMeasure) and request.ladder_columns():
+        found, ladder = measure.measure_with_ladder(lines, request.options)
+        rungs[note_name(request)].append(LadderRows(lines.rows[ladder.features], ladder.figures))
+    else:
+        found = measure.measure(lines, request.options)
     for own, column in zip(columns_of(measure, request.options), request.columns(), strict=True):
         values[column.name][lines.rows] = found[own.name]
+
+
+def _ladder_batch(table: LadderTable, features: Features, chunks: list[LadderRows]) -> pa.RecordBatch:
+    """Return a part's rows of a ladder table, feature after feature whatever chunk each was measured in."""
+    owners = np.concatenate([np.empty(0, np.int64), *(chunk.features for chunk in chunks)])
+    order = np.argsort(owners, kind="stable")
+    arrays = [pa.array(features.first_rows[owners[order]] + 1)]
+    if features.names is not None:
+        arrays.append(features.names.take(pa.array(owners[order])))
+    for column in table.request.ladder_columns():
+        found = np.concatenate([_nulls(column, 0), *(chunk.figures[column.name] for chunk in chunks)])
+        arrays.append(_arrow(column, found[order]))
+    return pa.RecordBatch.from_arrays(arrays, schema=table.schema)
 
 
 def _nulls(column: Column, n: int) -> NDArray[Any]:

@@ -9,7 +9,10 @@ from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 
+import pyarrow as pa
+
 from geofractal.batch.cover_plan import CoverPlan, plan_covers
+from geofractal.batch.ladders import naming_column
 from geofractal.batch.parts import GroupsPart, LayerWork, PartInput, RowsPart
 from geofractal.config.load import wrong_kinds
 from geofractal.config.models import Batch, VectorLayer
@@ -19,6 +22,7 @@ from geofractal.measure import Column
 from geofractal.reader.groups import bucket_rows
 from geofractal.reader.layers import allowed
 from geofractal.reader.planes import Projector
+from geofractal.reader.vector import Batch as Rows
 from geofractal.reader.vector import LayerInfo, layer_info, stream
 from geofractal.reader.where import Where
 from geofractal.writer.attach import can_attach
@@ -142,7 +146,10 @@ def _plan_layer(batch: Batch, name: str, layer: VectorLayer, problems: list[Prob
         edges=layer.edges,
         bounds=info.bounds,
     )
-    work = LayerWork(batch.requests_of(name), projector, layer.prepare, grouped=layer.group_by is not None)
+    requests = batch.requests_of(name)
+    tables = any(request.ladder_columns() for request in requests)
+    named = naming_column(layer.id, layer.group_by, info) if tables else None
+    work = LayerWork(requests, projector, layer.prepare, layer.group_by is not None, named)
     return LayerPlan(name, layer, info, where, work, batch.zone_columns_of(name))
 
 
@@ -155,11 +162,13 @@ def _column_problems(batch: Batch, name: str, layer: VectorLayer, info: LayerInf
 
 def _refuse_outputs(plan: Plan) -> None:
     """Refuse targets that are sources or one another's, and columns whose names are taken."""
-    tables = {target: cover.name for cover in plan.covers for target in cover.targets(plan.batch)}
-    targets = [*plan.targets.values(), *tables]
+    tables = [(target, cover.name) for cover in plan.covers for target in cover.targets(plan.batch)]
+    ladders = [table for layer in plan.layers for table in layer.work.ladders]
+    tables += [(target, f"ladders of {t.request.of}") for t in ladders for target in t.targets(plan.batch)]
+    targets = [*plan.targets.values(), *(target for target, _ in tables)]
     refuse_sources(targets, [layer.source for layer in plan.batch.layers.values()])
     origins: dict[str, set[str]] = defaultdict(set)
-    for target, name in tables.items():
+    for target, name in tables:
         origins[str(target).casefold()].add(name)
     attached: dict[tuple[Path, str], tuple[Column, ...]] = defaultdict(tuple)
     for layer in plan.layers:
@@ -182,7 +191,8 @@ def _refuse_outputs(plan: Plan) -> None:
 def parts_of(layer: LayerPlan, folder: Path) -> Iterator[PartInput]:
     """Yield a layer's parts, cut by the source alone; groups are first spooled in `folder`."""
     key = layer.layer.group_by
-    columns = {*(layer.where.columns if layer.where else ()), *([key] if key else ())}
+    ids = layer.layer.id if layer.work.named and not key else None
+    columns = {*(layer.where.columns if layer.where else ()), *filter(None, (key, ids))}
     batches = (
         (batch, layer.where.mask(batch.attributes) if layer.where else None)
         for batch in stream(layer.info, columns=sorted(columns))
@@ -192,4 +202,18 @@ def parts_of(layer: LayerPlan, folder: Path) -> Iterator[PartInput]:
             yield GroupsPart(bucket)
     else:
         for batch, wanted in batches:
-            yield RowsPart(batch.rows, batch.wkb, batch.fids, wanted)
+            yield RowsPart(
+                batch.rows, batch.wkb, batch.fids, wanted, _ids(batch, ids, layer) if ids else None
+            )
+
+
+def _ids(batch: Rows, column: str, layer: LayerPlan) -> pa.Array:
+    """Return the values that name a batch's rows in ladder tables."""
+    values = batch.attributes.column(column)
+    try:
+        return values.cast(layer.work.ladders[0].schema.field("id").type)
+    except pa.ArrowException:
+        raise LayerError(
+            f"{layer.info.path}: layer {layer.info.layer!r}: column {column!r} of type {values.type} cannot "
+            "name rows in a table; id takes text or numbers"
+        ) from None

@@ -139,14 +139,14 @@ def run_record(
             {"path": str(path), "size_bytes": before.size, "sha256": before.sha256}
             for path, before in sorted(inputs.items())
         ],
-        "layers": {found.plan.name: layer_record(found) for found in measured} | maps,
+        "layers": {found.plan.name: layer_record(found, batch) for found in measured} | maps,
         "failed_layers": {name: str(error) for name, error in failed.items()},
         "versions": show_versions(),
         "cautions": CAUTIONS,
     }
 
 
-def layer_record(found: Measured) -> dict[str, Any]:
+def layer_record(found: Measured, batch: Batch) -> dict[str, Any]:
     """Return what the record says of a measured layer."""
     from pyproj import CRS
 
@@ -167,6 +167,14 @@ def layer_record(found: Measured) -> dict[str, Any]:
             "edges": work.projector.edges,
         },
         "measures": [tally.summary() for tally in found.tallies],
+        "ladder_tables": [
+            {
+                "measure": table.request.measure,
+                "files": [str(path) for path in table.targets(batch)],
+                "rows": found.ladder_rows[table.name],
+            }
+            for table in work.ladders
+        ],
         "copies": {
             word: {
                 "files": [str(path) for path in written.paths],

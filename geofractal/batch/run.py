@@ -17,6 +17,7 @@ from typing import Any
 from geofractal import interrupt
 from geofractal.batch.covers import MeasuredCover, measure_cover, write_cover
 from geofractal.batch.executor import available_workers, in_order, make_executor
+from geofractal.batch.ladders import ladder_file, write_ladder_table
 from geofractal.batch.parts import measured_part
 from geofractal.batch.plan import LayerPlan, Plan, parts_of, plan_batch
 from geofractal.batch.record import MeasureTally, run_record
@@ -39,14 +40,20 @@ RECORD = "run_record.json"
 
 @dataclass
 class Measured:
-    """A layer whose results are in its spool."""
+    """A layer whose results are in its spool.
+
+    `parts` are the keys of its parts with their numbers of rows, in the order of the parts, where ladder
+    tables are asked for, and `ladder_rows` the rows of those tables that were written.
+    """
 
     plan: LayerPlan
     spool: Results
     tallies: list[MeasureTally]
+    parts: list[tuple[str, int]]
     before: Fingerprint
     seconds: float
     written: dict[str, Written] = field(default_factory=dict)
+    ladder_rows: dict[str, int] = field(default_factory=dict)
     writing_s: float = 0.0
 
 
@@ -105,7 +112,10 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
             except SourceError as error:
                 failed |= dict.fromkeys((found.plan.name for found in layers), error)
         whole = [found for found in measured if found.plan.name not in failed]
+        for done in whole:
+            _write_ladders(done, batch, folder, progress)
         columns = {found.plan.name: found.plan.columns for found in whole}
+        columns |= {table.name: table.columns for found in whole for table in found.plan.work.ladders}
         columns |= {f"{found.plan.name}_figures": found.quantities for found in covers}
         write_data_dictionary(batch.outputs.folder, columns)
         write_refused_rows(batch.outputs.folder, whole)
@@ -138,23 +148,28 @@ def _measure_layer(
     ) or fingerprint(layer.info.path)
     tallies = [MeasureTally.of(request) for request in layer.work.requests]
     spools: list[Results] = []
+    parts: list[tuple[str, int]] = []
     if tallies:
-        spools.append(_measure_rows(layer, batch, tallies, folder, stack, progress))
+        spools.append(_measure_rows(layer, batch, tallies, parts, folder, stack, progress))
     if layer.zone_columns:
         spools.append(stack.enter_context(zone_spool(layer, covers, folder)))
     spool = spools[0] if len(spools) == 1 else SideBySide(spools)
-    return Measured(layer, spool, tallies, before, time.monotonic() - begun)
+    return Measured(layer, spool, tallies, parts, before, time.monotonic() - begun)
 
 
 def _measure_rows(
     layer: LayerPlan,
     batch: Batch,
     tallies: Sequence[MeasureTally],
+    parts: list[tuple[str, int]],
     folder: Path,
     stack: ExitStack,
     progress: Progress,
 ) -> RowSpool:
-    """Measure a layer part by part into a spool, in the order of the parts whatever the workers."""
+    """Measure a layer part by part into a spool, in the order of the parts whatever the workers.
+
+    Where ladder tables are asked for, `parts` is told of each part.
+    """
     columns, rows = layer.work.columns, layer.info.features
     spool = stack.enter_context(RowSpool(folder / f"{layer.name}.{os.getpid()}.rows", columns, rows))
     workers = available_workers() if batch.run.workers == "auto" else batch.run.workers
@@ -164,8 +179,10 @@ def _measure_rows(
         progress.stage(layer.name, words, layer.info.features) as stage,
     ):
         inputs = ((layer.work, part, folder) for part in parts_of(layer, folder))
-        for results in in_order(executor, measured_part, inputs, ahead=2 * workers):
+        for results, key in in_order(executor, measured_part, inputs, ahead=2 * workers):
             spool.write(results)
+            if layer.work.ladders:
+                parts.append((key, results.num_rows))
             for tally in tallies:
                 tally.add(results)
             stage.advance(results.num_rows)
@@ -192,3 +209,13 @@ def _write_copy(target: Path, word: str, layers: Sequence[Measured], progress: P
     for found in layers:
         found.written[word] = written
         found.writing_s += time.monotonic() - begun
+
+
+def _write_ladders(found: Measured, batch: Batch, folder: Path, progress: Progress) -> None:
+    """Write a layer's ladder tables from what its parts kept."""
+    begun = time.monotonic()
+    for place, table in enumerate(found.plan.work.ladders):
+        files = [(ladder_file(folder, key, place), rows) for key, rows in found.parts]
+        for target in table.targets(batch):
+            found.ladder_rows[table.name] = write_ladder_table(table, target, files, progress)
+    found.writing_s += time.monotonic() - begun

@@ -26,7 +26,7 @@ from pydantic_core import PydanticCustomError
 from geofractal.config.columns import ZoneColumn, prefixed, zone_columns
 from geofractal.config.yaml_tree import KeyPath, YamlTree
 from geofractal.errors import LayerError, Problem
-from geofractal.measure import Column, Options, Quantity
+from geofractal.measure import Column, LadderMeasure, LadderOptions, Options, Quantity
 from geofractal.registry import columns_of, load_cover_measure, load_measure, quantities_of
 
 RASTER_ENDINGS = (".tif", ".tiff", ".vrt")
@@ -233,6 +233,14 @@ class MeasureRequest(RequestHead):
         """
         return prefixed(columns_of(load_measure(self.measure), self.options), self.prefix)
 
+    def ladder_columns(self) -> tuple[Column, ...]:
+        """Return the measure's columns of the ladder table; none where no such table is asked."""
+        if not (isinstance(self.options, LadderOptions) and self.options.ladder_table):
+            return ()
+        measure = load_measure(self.measure)
+        assert isinstance(measure, LadderMeasure)  # no other measure has such options
+        return measure.ladder_columns
+
 
 class CoverHead(RequestHead):
     """The keys that the entry of every measure of class maps has."""
@@ -305,7 +313,7 @@ class Outputs(Section):
         ("geopackage",), min_length=1, description="formats of the copied layers"
     )
     tables: tuple[Literal["csv", "parquet"], ...] = Field(
-        ("csv",), min_length=1, description="formats of the tables of figures"
+        ("csv",), min_length=1, description="formats of the tables of figures and of ladders"
     )
 
 

@@ -7,15 +7,17 @@ from typing import TYPE_CHECKING, Annotated, ClassVar, NamedTuple, Self
 import numpy as np
 from pydantic import Field, model_validator
 
-from geofractal.estimators.box_columns import BOX_COLUMNS, HENTSCHEL_PROCACCIA
+from geofractal.estimators.box_columns import BOX_COLUMNS, HENTSCHEL_PROCACCIA, LADDER_COLUMNS
 from geofractal.estimators.divider import FEWEST_RUNGS, Metres, Notes, plain_number
+from geofractal.estimators.ladder_table import ladder_rows
 from geofractal.kernels.boxes import TILE, Tables, count_ladders
-from geofractal.measure import PLANES, Column, Measure, Options
+from geofractal.measure import PLANES, Column, LadderMeasure, LadderOptions
 from geofractal.scaling.judge import VERDICTS, Rungs, judge
 from geofractal.scaling.ladder import Ladders, finest_rulers, geometric_ladders, scales_of
 
 if TYPE_CHECKING:
-    from geofractal.measure import Floats, Lines, Values
+    from geofractal.measure import Floats, LadderRows, Lines, Values
+    from geofractal.scaling.judge import Judgement
 
 GRIDS = 4
 """Shifted grids of which the one with the fewest boxes counts. More of them find fewer boxes at coarse sizes
@@ -164,7 +166,7 @@ def _tiles(lines: Lines, ladders: Ladders) -> Floats:
     return most
 
 
-class BoxOptions(Options):
+class BoxOptions(LadderOptions):
     """Options of `BoxDimension`."""
 
     size_min_m: Metres | None = Field(
@@ -191,7 +193,7 @@ class BoxOptions(Options):
         return self
 
 
-class BoxDimension(Measure[BoxOptions]):
+class BoxDimension(LadderMeasure[BoxOptions]):
     """Box dimension of lines, multi-part lines, networks and boundaries, with interval and verdict."""
 
     name: ClassVar[str] = "box-dimension"
@@ -202,7 +204,8 @@ class BoxDimension(Measure[BoxOptions]):
     one_path: ClassVar[bool] = False
     version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
-    options: ClassVar[type[Options]] = BoxOptions
+    options: ClassVar[type[LadderOptions]] = BoxOptions
+    ladder_columns: ClassVar[tuple[Column, ...]] = LADDER_COLUMNS
 
     def columns(self, options: BoxOptions) -> tuple[Column, ...]:  # noqa: ARG002 - the same whatever is asked
         """Return the columns of dimensions and verdict, of the plane, and the note."""
@@ -210,22 +213,18 @@ class BoxDimension(Measure[BoxOptions]):
 
     def measure(self, lines: Lines, options: BoxOptions) -> Values:
         """Count every feature's boxes over its ladder, and judge what was found."""
-        scales = scales_of(lines)
-        notes = Notes(finest_rulers(scales))
-        notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
-        ladders = box_ladders(
-            lines,
-            size_min_m=options.size_min_m,
-            size_max_m=options.size_max_m,
-            rungs=options.rungs,
-            scales=scales,
-        )
-        counts = count(lines, ladders, shifts=GRID_SHIFTS[: options.grids])
-        values = _judged(lines, scales, ladders, counts, notes)
-        values["box_distortion_percent"] = 100 * lines.distortion
-        values["box_plane"] = np.array(PLANES, dtype=object)[lines.plane]
-        values["box_note"] = notes.texts
-        return values
+        return _counted(lines, options)[0]
+
+    def measure_with_ladder(self, lines: Lines, options: BoxOptions) -> tuple[Values, LadderRows]:
+        """Return the same, and what was counted at every rung."""
+        values, ladders, rungs, found = _counted(lines, options)
+        own: Values = {
+            "box_size_m": ladders.rulers,
+            "boxes": np.where(np.isnan(rungs.steps), -1, rungs.steps).astype(np.int64),
+            "boxes_spread": rungs.noise / ladders.rulers,
+            "boxes_fit": found.lengths_at_rungs(ladders) / ladders.rulers,
+        }
+        return values, ladder_rows(own, ladders, rungs, found)
 
 
 def box_rungs(lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, effective: Floats) -> Rungs:
@@ -247,16 +246,38 @@ def box_rungs(lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, ef
     )
 
 
-def _judged(lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, notes: Notes) -> Values:
-    """Return the columns of dimensions and verdict."""
-    found, even, paired = (
-        judge(ladders, box_rungs(lines, scales, ladders, counts, effective), estimator="box")
+def _counted(lines: Lines, options: BoxOptions) -> tuple[Values, Ladders, Rungs, Judgement]:
+    """Return a chunk's columns, and the rungs that its box dimensions rest on."""
+    scales = scales_of(lines)
+    notes = Notes(finest_rulers(scales))
+    notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
+    ladders = box_ladders(
+        lines,
+        size_min_m=options.size_min_m,
+        size_max_m=options.size_max_m,
+        rungs=options.rungs,
+        scales=scales,
+    )
+    counts = count(lines, ladders, shifts=GRID_SHIFTS[: options.grids])
+    rungs, even, paired = (
+        box_rungs(lines, scales, ladders, counts, effective)
         for effective in (counts.boxes, counts.even, counts.paired)
     )
-    owners = np.repeat(np.arange(len(lines)), np.diff(ladders.offsets))
-    lost = np.bincount(owners[np.isnan(counts.boxes)], minlength=len(lines)) > 0
+    found = judge(ladders, rungs, estimator="box")
+    lost = np.bincount(ladders.owners[np.isnan(counts.boxes)], minlength=len(lines)) > 0
     notes.add(lost, "the smallest boxes are too many to count and are left out; raise size-min-m")
     notes.add(np.isnan(found.dimension), "no dimension: too few box sizes between its detail and its extent")
+    values = _dimensions(found)
+    values["box_information_dim"] = judge(ladders, even, estimator="box").dimension
+    values["box_correlation_dim"] = judge(ladders, paired, estimator="box").dimension
+    values["box_distortion_percent"] = 100 * lines.distortion
+    values["box_plane"] = np.array(PLANES, dtype=object)[lines.plane]
+    values["box_note"] = notes.texts
+    return values, ladders, rungs, found
+
+
+def _dimensions(found: Judgement) -> Values:
+    """Return the columns of the box dimension and its verdict."""
     return {
         "box_dim": found.dimension,
         "box_dim_low": found.low,
@@ -272,6 +293,4 @@ def _judged(lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, note
         "box_break_high_m": found.break_high,
         "box_fine_dim": found.fine_dimension,
         "box_coarse_dim": found.coarse_dimension,
-        "box_information_dim": even.dimension,
-        "box_correlation_dim": paired.dimension,
     }

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from geofractal.estimators.ladder_table import ladder_columns
 from geofractal.measure import PLANES, Column
 
 HENTSCHEL_PROCACCIA = "Hentschel & Procaccia 1983, Physica D 8:435-444"
@@ -106,5 +107,33 @@ BOX_COLUMNS = (
         "text",
         "",
         "on what the feature was counted (in three dimensions the boxes are cubes): " + ", ".join(PLANES),
+    ),
+)
+
+LADDER_COLUMNS = ladder_columns(
+    Column("box_size_m", "boxsize_m", "number", "m", "side of the boxes"),
+    Column(
+        "boxes",
+        "boxes",
+        "count",
+        "",
+        "boxes that hold a length of the line, the fewest over the shifted grids; null where they are too"
+        " many to count",
+    ),
+    Column(
+        "boxes_spread",
+        "boxesprd",
+        "number",
+        "",
+        "standard deviation of the number of boxes over the shifted grids; null where one grid was enough",
+        "standard deviation of ln N x N",
+    ),
+    fitted=Column(
+        "boxes_fit",
+        "boxes_fit",
+        "number",
+        "",
+        "boxes that the fitted line gives at the size, effects of the ladder's ends taken out; null at rungs"
+        " that were not used",
     ),
 )

@@ -10,13 +10,15 @@ from pydantic import Field, field_validator, model_validator
 
 from geofractal.estimators.divider_columns import (
     DIMENSION_COLUMNS,
+    LADDER_COLUMNS,
     MANDELBROT,
     PLANE_COLUMNS,
     length_columns,
 )
+from geofractal.estimators.ladder_table import ladder_rows
 from geofractal.kernels.ladder_judge import STRETCHES
 from geofractal.kernels.walk import walk_ladders
-from geofractal.measure import PLANES, Column, Measure, Options
+from geofractal.measure import PLANES, Column, LadderMeasure, LadderOptions
 from geofractal.scaling import ladder
 from geofractal.scaling.judge import VERDICTS, divider_rungs, judge
 from geofractal.scaling.ladder import Ladders, divider_ladders, scales_of
@@ -24,8 +26,8 @@ from geofractal.scaling.ladder import Ladders, divider_ladders, scales_of
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from geofractal.measure import Bools, Floats, Lines, Values
-    from geofractal.scaling.judge import Judgement
+    from geofractal.measure import Bools, Floats, LadderRows, Lines, Values
+    from geofractal.scaling.judge import Judgement, Rungs
 
 RING_STARTS = 16
 """Evenly spaced starts of a ring, each walked both ways: single walks of real shores scatter by 2 %."""
@@ -144,7 +146,7 @@ class Notes:
             self.texts[row] = f"{self.texts[row]}; {text}" if self.texts[row] else text
 
 
-class DividerOptions(Options):
+class DividerOptions(LadderOptions):
     """Options of `DividerDimension`."""
 
     ruler_min_m: Metres | None = Field(
@@ -185,7 +187,7 @@ class DividerOptions(Options):
         return self
 
 
-class DividerDimension(Measure[DividerOptions]):
+class DividerDimension(LadderMeasure[DividerOptions]):
     """Divider (Richardson) dimension of lines with interval and verdict, and lengths at stated rulers."""
 
     name: ClassVar[str] = "divider-dimension"
@@ -195,7 +197,8 @@ class DividerDimension(Measure[DividerOptions]):
     stem: ClassVar[str] = "divider"
     version: ClassVar[int] = 2
     holds_gil: ClassVar[bool] = False
-    options: ClassVar[type[Options]] = DividerOptions
+    options: ClassVar[type[LadderOptions]] = DividerOptions
+    ladder_columns: ClassVar[tuple[Column, ...]] = LADDER_COLUMNS
 
     def columns(self, options: DividerOptions) -> tuple[Column, ...]:
         """Return the columns of dimension and verdict, of each stated ruler, of the plane, and the note."""
@@ -208,28 +211,46 @@ class DividerDimension(Measure[DividerOptions]):
 
     def measure(self, lines: Lines, options: DividerOptions) -> Values:
         """Walk every feature with its ladder and with the stated rulers, and judge what was found."""
-        scales = scales_of(lines)
-        finest = ladder.finest_rulers(scales)
-        notes = Notes(finest)
-        if options.ruler_min_m is None:
-            notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
-        else:
-            notes.add(too_coarse(options.ruler_min_m, finest), "its ladder starts below the source's detail")
-        ladders = divider_ladders(
-            lines,
-            ruler_min_m=options.ruler_min_m,
-            ruler_max_m=options.ruler_max_m,
-            rungs=options.rungs,
-            scales=scales,
-        )
-        walks = walk(lines, ladders, starts=options.starts)
-        found = judge(ladders, divider_rungs(lines, **walks._asdict(), scales=scales))
-        values = _dimension(ladders, walks, found, notes)
-        values |= _lengths(lines, options, finest, found, notes)
-        values["divider_distortion_percent"] = 100 * lines.distortion
-        values["divider_plane"] = np.array(PLANES, dtype=object)[lines.plane]
-        values["divider_note"] = notes.texts
-        return values
+        return _walked(lines, options)[0]
+
+    def measure_with_ladder(self, lines: Lines, options: DividerOptions) -> tuple[Values, LadderRows]:
+        """Return the same, and what was walked at every rung."""
+        values, ladders, rungs, found = _walked(lines, options)
+        own: Values = {
+            "ruler_m": ladders.rulers,
+            "length_km": rungs.lengths / 1000,
+            "length_spread_km": rungs.noise / 1000,
+            "steps": rungs.steps,
+            "length_fit_km": found.lengths_at_rungs(ladders) / 1000,
+        }
+        return values, ladder_rows(own, ladders, rungs, found)
+
+
+def _walked(lines: Lines, options: DividerOptions) -> tuple[Values, Ladders, Rungs, Judgement]:
+    """Return a chunk's columns, and the rungs that they rest on."""
+    scales = scales_of(lines)
+    finest = ladder.finest_rulers(scales)
+    notes = Notes(finest)
+    if options.ruler_min_m is None:
+        notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
+    else:
+        notes.add(too_coarse(options.ruler_min_m, finest), "its ladder starts below the source's detail")
+    ladders = divider_ladders(
+        lines,
+        ruler_min_m=options.ruler_min_m,
+        ruler_max_m=options.ruler_max_m,
+        rungs=options.rungs,
+        scales=scales,
+    )
+    walks = walk(lines, ladders, starts=options.starts)
+    rungs = divider_rungs(lines, **walks._asdict(), scales=scales)
+    found = judge(ladders, rungs)
+    values = _dimension(ladders, walks, found, notes)
+    values |= _lengths(lines, options, finest, found, notes)
+    values["divider_distortion_percent"] = 100 * lines.distortion
+    values["divider_plane"] = np.array(PLANES, dtype=object)[lines.plane]
+    values["divider_note"] = notes.texts
+    return values, ladders, rungs, found
 
 
 def _dimension(ladders: Ladders, walks: Walks, found: Judgement, notes: Notes) -> Values:

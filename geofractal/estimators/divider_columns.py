@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from geofractal.estimators.ladder_table import ladder_columns
 from geofractal.measure import PLANES, Column
 
 MANDELBROT = "Mandelbrot 1967, Science 156:636-638"
@@ -109,6 +110,38 @@ PLANE_COLUMNS = (
         "worst relative distance error of the plane on which the feature was walked",
     ),
     Column("divider_plane", "div_plane", "text", "", "on what the feature was walked: " + ", ".join(PLANES)),
+)
+
+
+LADDER_COLUMNS = ladder_columns(
+    Column("ruler_m", "ruler_m", "number", "m", "the ruler"),
+    Column(
+        "length_km",
+        "length_km",
+        "number",
+        "km",
+        "length walked with the ruler; null where no part of the line is long enough for it",
+        "L(r) = r n + d: n whole steps of r, last straight distance d; mean of the walks",
+        MANDELBROT,
+    ),
+    Column(
+        "length_spread_km",
+        "lensprd_km",
+        "number",
+        "km",
+        "standard error of length_km from starts and directions, as of two walks; other lines of the same"
+        " kind differ by more",
+    ),
+    Column("steps", "steps", "number", "", "whole steps, mean of the walks"),
+    fitted=Column(
+        "length_fit_km",
+        "lenfit_km",
+        "number",
+        "km",
+        "length that the fitted line gives at the ruler, effects of the ladder's ends taken out; null at"
+        " rungs that were not used",
+        "content x r^(1 - D)",
+    ),
 )
 
 

@@ -49,18 +49,43 @@ def fit_lines(
 
 
 @kernel
-def local_slopes(
-    offsets: NDArray[np.int64], x: NDArray[np.float64], y: NDArray[np.float64], reach: int
-) -> NDArray[np.float64]:
-    """Return at each point the slope over it and its neighbours, up to `reach` on either side, (q,).
+def _slope_error(
+    x: NDArray[np.float64], y: NDArray[np.float64], noise: NDArray[np.float64], line: NDArray[np.float64]
+) -> float:
+    """Return the standard error of a fitted slope: by the noise of y or by its scatter, whichever is more."""
+    slope, intercept, used = line[0], line[1], line[3]
+    mean_x, xx, rest, noisy = 0.0, 0.0, 0.0, 0.0
+    for k in range(len(x)):
+        if not np.isnan(y[k]):
+            mean_x += x[k] / used
+    for k in range(len(x)):
+        if not np.isnan(y[k]):
+            xx += (x[k] - mean_x) ** 2
+            rest += (y[k] - intercept - slope * x[k]) ** 2
+            if not np.isnan(noise[k]):
+                noisy += ((x[k] - mean_x) * noise[k]) ** 2
+    return float(np.sqrt(max(rest / (used - 2.0) * xx, noisy)) / xx)
 
-    NaN where the point's own y is NaN, or fewer than three of them have one.
+
+@kernel
+def local_slopes(
+    offsets: NDArray[np.int64],
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    noise: NDArray[np.float64],
+    reach: int,
+) -> NDArray[np.float64]:
+    """Return at each point the slope over it and its neighbours, up to `reach` on either side, and its error.
+
+    (q, 2); `noise` is each y's standard error, NaN where unknown. NaN where the point's own y is NaN, or
+    fewer than three of them have one.
     """
-    out = np.full(len(x), np.nan)
+    out = np.full((len(x), 2), np.nan)
     for i in range(len(offsets) - 1):
         for k in range(offsets[i], offsets[i + 1]):
-            some = np.array([max(k - reach, offsets[i]), min(k + reach + 1, offsets[i + 1])])
-            line = fit_lines(some, x, y)
-            if line[0, 3] >= 3 and not np.isnan(y[k]):
-                out[k] = line[0, 0]
+            first, last = max(k - reach, offsets[i]), min(k + reach + 1, offsets[i + 1])
+            line = fit_lines(np.array([first, last]), x, y)[0]
+            if line[3] >= 3 and not np.isnan(y[k]):
+                out[k, 0] = line[0]
+                out[k, 1] = _slope_error(x[first:last], y[first:last], noise[first:last], line)
     return out

@@ -156,6 +156,35 @@ def _judge(
 
 
 @kernel
+def used_rungs(
+    offsets: NDArray[np.int64],
+    x: Floats,
+    y: Floats,
+    steps: Floats,
+    usable: NDArray[np.bool_],
+    open_parts: Floats,
+    c: Constants,
+) -> NDArray[np.bool_]:
+    """Return which rungs a feature is judged by, (q,): those with a length and enough steps.
+
+    Parameters as in `judge_ladders`, and `usable`, (q,): the rungs that may be used at all.
+    """
+    used = np.zeros(len(x), np.bool_)
+    for i in range(len(offsets) - 1):
+        ring = open_parts[i] == 0.0
+        first = np.inf
+        for q in range(offsets[i], offsets[i + 1]):
+            fewest = c.fewest_steps
+            if ring:
+                far = x[q] > first + np.log(10.0)
+                fewest = c.sure_ring_steps if far else c.fewest_ring_steps
+            if usable[q] and steps[q] >= fewest and np.isfinite(y[q]):
+                used[q] = True
+                first = min(first, x[q])
+    return used
+
+
+@kernel
 def judge_ladders(
     offsets: NDArray[np.int64],
     x: Floats,
@@ -163,7 +192,7 @@ def judge_ladders(
     steps: Floats,
     noise: Floats,
     tallies: Floats,
-    usable: NDArray[np.bool_],
+    used: NDArray[np.bool_],
     detail: Floats,
     open_parts: Floats,
     c: Constants,
@@ -177,7 +206,7 @@ def judge_ladders(
     steps : (q,) whole steps
     noise : (q,) standard error of y from starts and directions; NaN where unknown
     tallies : (q, STRETCHES) steps by stretch of the line, or (q, 0) where they were not counted
-    usable : (q,) rungs that may be used
+    used : (q,) the rungs to judge by, see `used_rungs`
     detail : (n,) ln of the finest detail of the source, in the unit of the rulers
     open_parts : (n,) number of open lines; 0 where a feature is made of rings alone
 
@@ -188,25 +217,20 @@ def judge_ladders(
     n = len(offsets) - 1
     out = np.full((n, len(FIELDS)), np.nan)
     for i in range(n):
-        ring = open_parts[i] == 0.0
         most = offsets[i + 1] - offsets[i]
         rx, ry, rsteps, rnoise = np.empty(most), np.empty(most), np.empty(most), np.empty(most)
         rtallies = np.empty((most, tallies.shape[1]))
-        used = 0
+        n_used = 0
         for q in range(offsets[i], offsets[i + 1]):
-            fewest = c.fewest_steps
-            if ring:
-                far = used > 0 and x[q] > rx[0] + np.log(10.0)
-                fewest = c.sure_ring_steps if far else c.fewest_ring_steps
-            if usable[q] and steps[q] >= fewest and np.isfinite(y[q]):
-                rx[used], ry[used], rsteps[used], rnoise[used] = x[q], y[q], steps[q], noise[q]
+            if used[q]:
+                rx[n_used], ry[n_used], rsteps[n_used], rnoise[n_used] = x[q], y[q], steps[q], noise[q]
                 for b in range(tallies.shape[1]):
-                    rtallies[used, b] = tallies[q, b]
-                used += 1
-        out[i, RUNGS], out[i, VERDICT] = used, TOO_FEW
-        if used > 0:
+                    rtallies[n_used, b] = tallies[q, b]
+                n_used += 1
+        out[i, RUNGS], out[i, VERDICT] = n_used, TOO_FEW
+        if n_used > 0:
             _judge(
-                out[i], rx[:used], ry[:used], rsteps[:used], rnoise[:used], rtallies[:used], detail[i],
-                open_parts[i], c,
+                out[i], rx[:n_used], ry[:n_used], rsteps[:n_used], rnoise[:n_used], rtallies[:n_used],
+                detail[i], open_parts[i], c,
             )  # fmt: skip
     return out

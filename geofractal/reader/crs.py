@@ -184,9 +184,7 @@ def _outside_area(crs: pyproj.CRS, source: SourceCrs, lonlat: Floats, box: str) 
     inside = (east <= width + 2.0) & (degrees[:, 1] >= area.south - 1.0) & (degrees[:, 1] <= area.north + 1.0)
     if inside.any():
         return None
-    return (
-        f"bounds {box} lie outside the area of use of {source.name} ({area.name}); is the CRS (.prj) wrong?"
-    )
+    return f"bounds {box} lie outside the area of use of {source.name}; is the CRS (.prj) wrong?"
 
 
 def _horizontal(crs: pyproj.CRS) -> pyproj.CRS:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 
@@ -52,28 +52,46 @@ def fit_power_law(ladders: Ladders, values: Floats) -> Fit:
     return Fit(table[:, 0].copy(), table[:, 1].copy(), table[:, 2].copy(), table[:, 3].astype(np.int64))
 
 
-def local_dimensions(ladders: Ladders, lengths: Floats, *, reach: int = 2) -> Floats:
+class LocalDimensions(NamedTuple):
+    """The dimension around each of q rungs.
+
+    Attributes
+    ----------
+    dimension : (q,)
+    spread : (q,) its standard error for this line alone: what the walks' scatter makes of it, or how far
+        the rungs lie off their straight line, whichever is more. Values of neighbours share rungs
+    """
+
+    dimension: Floats
+    spread: Floats
+
+
+def local_dimensions(ladders: Ladders, lengths: Floats, noise: Floats, *, reach: int = 2) -> LocalDimensions:
     """Return the dimension around each rung, 1 - slope of ln L over it and `reach` rungs on either side.
 
     Parameters
     ----------
     ladders : of n features, q rungs in all
     lengths : (q,) L(r); a NaN leaves its rung out
+    noise : (q,) standard error of L(r) in the unit of `lengths`; NaN where unknown
     reach : 2 takes five rungs, a third of a decade of the default ladder
 
     Returns
     -------
-    (q,) NaN where fewer than three of those rungs have a length
+    LocalDimensions
+        NaN where fewer than three of those rungs have a length
 
     Examples
     --------
     >>> import numpy as np
     >>> from geofractal.scaling.ladder import Ladders
     >>> ladders = Ladders(np.array([0, 4]), np.array([1.0, 2.0, 4.0, 8.0]))
-    >>> local_dimensions(ladders, np.array([8.0, 4.0, 2.0, np.nan]))
+    >>> local_dimensions(ladders, np.array([8.0, 4.0, 2.0, np.nan]), np.zeros(4)).dimension
     array([ 2.,  2.,  2., nan])
     """
-    return 1.0 - local_slopes(ladders.offsets, np.log(ladders.rulers), _logs(lengths), reach)
+    x, y = np.log(ladders.rulers), _logs(lengths)
+    slopes, spreads = local_slopes(ladders.offsets, x, y, noise / lengths, reach).T
+    return LocalDimensions(1.0 - slopes, spreads.copy())
 
 
 def _logs(values: Floats) -> Floats:

@@ -29,7 +29,7 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from geofractal.kernels.ladder_fields import FIELDS
-from geofractal.kernels.ladder_judge import judge_ladders
+from geofractal.kernels.ladder_judge import judge_ladders, used_rungs
 from geofractal.scaling.calibrated import BOX, DIVIDER
 from geofractal.scaling.ladder import scales_of
 
@@ -92,6 +92,7 @@ class Judgement:
     evidence : (n,) how much better the best alternative is than a power law, in thresholds: 1 decides
     content : (n,) prefactor of L(r) = content r^(1 - D), in m^D
     log10_content : (n,)
+    used : (q,) whether a rung is one of those used; none is where there is no dimension
     """
 
     dimension: Floats
@@ -113,6 +114,7 @@ class Judgement:
     evidence: Floats
     content: Floats
     log10_content: Floats
+    used: Bools
     _mean_x: Floats
     _mean_y: Floats
     _residual: Floats
@@ -150,6 +152,13 @@ class Judgement:
             middle = np.where(beyond > 1e-9, np.nan, middle)
         return np.exp(middle), np.exp(middle - 2 * error), np.exp(middle + 2 * error)
 
+    def lengths_at_rungs(self, ladders: Ladders) -> Floats:
+        """Return the length that the fit gives at each rung used, metres, (q,); NaN at the others."""
+        owners = ladders.owners
+        x = np.log(ladders.rulers) - self._mean_x[owners]
+        fitted: Floats = np.exp(self._mean_y[owners] + (1 - self.dimension[owners]) * x)
+        return np.where(self.used, fitted, np.nan)
+
 
 def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"] = "divider") -> Judgement:
     """Judge every feature's ladder: dimension, uncertainties, verdict and content.
@@ -174,19 +183,22 @@ def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"
     """
     logs = np.full(len(rungs.lengths), np.nan)
     np.log(rungs.lengths, out=logs, where=rungs.lengths > 0)
+    x, constants = np.log(ladders.rulers), _CONSTANTS[estimator]
+    whole = _whole_enough(ladders, rungs)
+    used = used_rungs(ladders.offsets, x, logs, rungs.steps, whole, rungs.open_parts, constants)
     table = judge_ladders(
         ladders.offsets,
-        np.log(ladders.rulers),
+        x,
         logs,
         rungs.steps,
         rungs.noise / rungs.lengths,
         rungs.tallies,
-        _whole_enough(ladders, rungs),
+        used,
         np.log(rungs.detail, where=rungs.detail > 0, out=np.full(len(rungs.detail), -np.inf)),
         rungs.open_parts,
-        _CONSTANTS[estimator],
+        constants,
     )
-    return _judgement(table)
+    return _judgement(table, used, ladders.owners)
 
 
 def divider_rungs(
@@ -212,11 +224,11 @@ def divider_rungs(
 
 def _whole_enough(ladders: Ladders, rungs: Rungs) -> Bools:
     """Whether a rung leaves out little more of its feature than the feature's first rung does."""
-    first = np.repeat(ladders.offsets[:-1], np.diff(ladders.offsets))
+    first = ladders.offsets[ladders.owners]
     return ~(rungs.left_out - rungs.left_out[first] > LEFT_OUT * rungs.lengths[first])
 
 
-def _judgement(table: Floats) -> Judgement:
+def _judgement(table: Floats, used: Bools, owners: Ints) -> Judgement:
     def column(name: str) -> Floats:
         return table[:, _FIELD[name]].copy()
 
@@ -243,6 +255,7 @@ def _judgement(table: Floats) -> Judgement:
         evidence=column("evidence"),
         content=np.exp(ln_content),
         log10_content=ln_content / np.log(10.0),
+        used=used & some[owners],
         _mean_x=mean_x,
         _mean_y=mean_y,
         _residual=column("residual"),

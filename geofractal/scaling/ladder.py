@@ -50,6 +50,11 @@ class Ladders:
         """Return the number of features."""
         return len(self.offsets) - 1
 
+    @property
+    def owners(self) -> Ints:
+        """Return the feature that each rung belongs to, (k,)."""
+        return np.repeat(np.arange(len(self)), np.diff(self.offsets))
+
 
 def divider_ladders(
     lines: Lines,

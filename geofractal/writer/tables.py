@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 import pyarrow as pa
+import pyarrow.csv as pacsv
 import pyarrow.parquet as pq
 
 from geofractal.errors import OutputError
@@ -32,6 +33,28 @@ def write_table(table: pa.Table, target: Path) -> None:
         return
     with publish(target) as part:
         pq.write_table(table, part, compression="zstd")
+
+
+def write_batches(batches: Iterable[pa.RecordBatch], schema: pa.Schema, target: Path) -> int:
+    """Publish batches as one table, ``.csv`` (nulls empty) or ``.parquet``, and return its number of rows.
+
+    Raises
+    ------
+    OutputError
+        The file cannot be written.
+    """
+    rows = 0
+    with publish(target) as part, _table_writer(part, schema) as writer:
+        for batch in batches:
+            writer.write_batch(batch)
+            rows += batch.num_rows
+    return rows
+
+
+def _table_writer(part: Path, schema: pa.Schema) -> Any:
+    if part.suffix == ".parquet":
+        return pq.ParquetWriter(part, schema, compression="zstd")
+    return pacsv.CSVWriter(part, schema, write_options=pacsv.WriteOptions(quoting_style="needed"))
 
 
 def _text(value: Any) -> Any:

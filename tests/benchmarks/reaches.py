@@ -1,9 +1,10 @@
 """River reaches by the million, GeoPackage to GeoPackage: rate, memory, and the plain script beside it.
 
 Run ``python tests/benchmarks/reaches.py``. ``--features`` and ``--rungs`` take several numbers; 0 rungs
-stand for the default ladder and starts. ``--groups`` measures rivers of 20 reaches each, and ``--plain`` says
-on how many features the plain script is timed. A small run first compiles the kernels. It prints one table
-and asserts nothing about time; that every row is accounted for is checked.
+stand for the default ladder and starts. ``--groups`` measures rivers of 20 reaches each, ``--ladder-table``
+writes the table of all rungs, too, and ``--plain`` says on how many features the plain script is timed. A
+small run first compiles the kernels. It prints one table and asserts nothing about time; that every row is
+accounted for is checked.
 """
 
 import argparse
@@ -184,7 +185,9 @@ def main():
     arguments.add_argument("--workers", type=int, default=2)
     arguments.add_argument("--plain", type=int, default=5_000)
     arguments.add_argument("--groups", action="store_true", help="measure rivers of 20 reaches each")
+    arguments.add_argument("--ladder-table", action="store_true", help="write the table of all rungs, too")
     chosen = arguments.parse_args()
+    table = {"ladder-table": True} if chosen.ladder_table else {}
     print(HEAD)
     for features in chosen.features:
         with tempfile.TemporaryDirectory() as name:
@@ -192,10 +195,11 @@ def main():
             source = folder / "reaches.gpkg"
             draw = rivers if chosen.groups else reaches
             write_source(source, 1_000, draw)
-            measured(folder, source, {}, chosen.workers, chosen.groups)
+            measured(folder, source, table, chosen.workers, chosen.groups)
             write_source(source, features, draw)
             for rungs in chosen.rungs:
                 options = {"rungs": rungs, "starts": 1, **LADDER} if rungs else {}
+                options |= table
                 seconds, peak, _, copy = measured(folder, source, options, chosen.workers, chosen.groups)
                 answered, told = account(copy, features)
                 what = f"batch, {chosen.workers} workers" + (", rivers" if chosen.groups else "")
