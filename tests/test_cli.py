@@ -313,7 +313,7 @@ def test_inspect_tells_the_ladder_that_a_measure_would_use(call, layers):
 def test_inspect_in_text_says_the_same(call, layers):
     text = call("inspect", layers).stdout
     assert "6: 4 lines, 1 missing, 1 points" in text
-    assert "problem   no CRS; state it under crs (1 of 1 rows)" in text
+    assert "problem   no CRS; state it under crs (all rows)" in text
     assert "torn.gpkg: cannot be read: " in text
 
 

@@ -295,7 +295,7 @@ def _layer_lines(layer: LayerReport) -> list[str]:
         span = f"{layer.ruler_min_m:g} m to {layer.ruler_max_m:g} m"
         text.append(f"  ladder    {_shares(layer.decades, '')} decades; half-way feature: {span}")
     text += [
-        f"  problem   {problem} ({'all' if count == layer.rows else f'{count:,} of'} {layer.rows:,} rows)"
+        f"  problem   {problem} ({'all' if count == layer.rows else f'{count:,} of {layer.rows:,}'} rows)"
         for problem, count in layer.problems.items()
     ]
     return [*text, f"  columns   {', '.join(layer.columns) or 'none'}"]
