@@ -13,7 +13,7 @@ from geofractal.cover_map import RasterCover
 from geofractal.errors import ConfigError, LayerError
 from geofractal.estimators.fragmentation import Fragmentation, FragmentationOptions
 from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
-from geofractal.landcover.barriers import place_barriers
+from geofractal.landcover.barriers import BARRIER, place_barriers
 from geofractal.landcover.zones import place_zones
 from geofractal.patches import open_class_map
 
@@ -31,6 +31,7 @@ def fragmentation(
     zones: Any = None,
     zone_names: str | Sequence[Any] | None = None,
     barriers: Any = None,
+    barrier_width_m: float | Sequence[float | None] | None = None,
     groups: Mapping[str, Sequence[str]] | None = None,
     covers: Sequence[str] = (),
     reading: RasterOptions | None = None,
@@ -49,6 +50,11 @@ def fragmentation(
     zone_names : column of a GeoDataFrame, or one name a zone; numbers from 1 where left out
     barriers : lines, given as zones are: links between neighbouring cells whose centre line they cross are
         cut. For rasters only
+    barrier_width_m : width of the barriers, one for all or one for each (None or 0: no width). Cells whose
+        centre lies within half of it are of no class but stay in the area with data, as the cover
+        ``barrier``; they bound other classes as another class does: edges to them are class changes, and
+        interior depth counts from them. A barrier narrower than a cell takes a cell here and there, and
+        cuts all the same
     groups : name of a group -> its classes; each is measured as one class
     covers : classes and groups wanted; all of them where left out
     reading : how to read a raster
@@ -83,6 +89,8 @@ def fragmentation(
         chosen = FragmentationOptions(**{key: _frozen(value) for key, value in options.items()})
     except ValidationError as error:
         raise ConfigError(f"fragmentation: {error}") from None
+    if barriers is None and barrier_width_m is not None:
+        raise ConfigError("barrier_width_m goes with barriers, the lines whose width it is.")
     names = () if zones is None else tuple(map(str, _names(zones, zone_names)))
     taken = {name: tuple(members) for name, members in (groups or {}).items()}
     if hasattr(source, "geometry"):
@@ -93,10 +101,12 @@ def fragmentation(
             replace(layer, extent=extent, zone_names=names, groups=taken, covers=tuple(covers)), chosen
         )
     opened = open_class_map(source, reading, {})
-    _check_names(opened.legend, taken, covers, chosen.depth_by_neighbour_m)
     own, grid = opened.source_grid.crs, opened.grid
     placed = None if zones is None else place_zones(grid, _geometries(zones), names, _crs(zones, own))
-    lines = None if barriers is None else place_barriers(grid, _geometries(barriers), _crs(barriers, own))
+    lines = None
+    if barriers is not None:
+        lines = place_barriers(grid, _geometries(barriers), _crs(barriers, own), barrier_width_m)
+    _check_names(opened.legend, taken, covers, _bounding(chosen, barred=lines is not None and lines.wide))
     return Fragmentation().measure(RasterCover(opened, placed, lines, taken, tuple(covers)), chosen).figures
 
 
@@ -118,6 +128,11 @@ def _check_names(
                 raise ConfigError(f"{key}: the raster has no class {name!r}; there are {there}.")
     if both := sorted(set(groups).intersection(known)):
         raise ConfigError(f"groups: {both[0]!r} is the name of a class already; choose another one.")
+
+
+def _bounding(options: FragmentationOptions, *, barred: bool) -> list[str]:
+    """Return the classes that a depth is stated from; barriers that take cells are one."""
+    return [name for name in options.depth_by_neighbour_m if not (barred and name == BARRIER)]
 
 
 def _polygon_layer(source: Any, cover: str | Sequence[Any] | None, zones: Any) -> PolygonLayer:

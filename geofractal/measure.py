@@ -273,7 +273,8 @@ class CoverMap(Protocol):
     raster : the map itself: its ``grid``, its ``legend`` and ``strips()``, which may be read again and again;
         None for a layer of polygons
     zones : `geofractal.landcover.zones.Zones` on the map's grid, None where there are none
-    barriers : what cuts links between cells, None where there is none
+    barriers : what cuts links between cells, None where there is none. Cells that those with a width take
+        are of a class ``barrier`` of the raster
     groups : names for several classes taken together, and those classes
     covers : classes and groups that are asked for; empty for all of them
     """

@@ -632,6 +632,25 @@ def test_the_schema_takes_what_the_models_take(load):
 
 
 @pytest.mark.parametrize(
+    ("barrier", "good"),
+    [
+        ("roads", True),
+        ({"layer": "roads"}, True),
+        ({"layer": "roads", "width-m": 12}, True),
+        ({"layer": "roads", "width-m": -1}, False),
+        ({"layer": "roads", "width": 12}, False),
+        ({"width-m": 12}, False),
+        (3, False),
+    ],
+)
+def test_the_schema_takes_barriers_with_and_without_a_width(schema, barrier, good):
+    asked = {"measure": "fragmentation", "of": "cover", "barriers": [barrier]}
+    layers = {"cover": {"source": "cover.tif"}, "roads": {"source": "roads.gpkg"}}
+    batch = {"batch": "trial", "layers": layers, "measures": [asked], "outputs": {"folder": "out"}}
+    assert jsonschema.Draft7Validator(schema).is_valid(batch) == good
+
+
+@pytest.mark.parametrize(
     ("old", "new"),
     [
         ("quantile: 0.9", "quantile: 9"),

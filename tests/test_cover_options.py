@@ -8,7 +8,7 @@ import shapely
 from batches import UTM, run, write_gpkg
 from test_covers_batch import CELL, NORTH, WEST, write_map
 
-from geofractal.config.models import CoverHead, CoverRequest, RasterLayer
+from geofractal.config.models import BarrierLayer, CoverHead, CoverRequest, RasterLayer
 from geofractal.errors import ConfigError
 from geofractal.registry import load_cover_measure
 
@@ -29,6 +29,7 @@ def site(tmp_path_factory):
     write_map(folder / "two.tif", np.stack([MAP, MAP[::-1] // 2]))
     write_gpkg(folder / "zones.gpkg", [EAST], layer="zones")
     write_gpkg(folder / "roads.gpkg", [ROAD], layer="roads")
+    write_gpkg(folder / "tracks.gpkg", [ROAD.parallel_offset(3_000)], layer="tracks")
     squares = [shapely.box(x, 0, x + 10 + x / 50, 10 + x / 50) for x in range(0, 40_000, 1000)]
     squares[-1] = shapely.box(38_500, 0, 39_300, 700)  # overlaps the one before
     write_gpkg(folder / "islands.gpkg", squares, layer="islands", kind=["a", "b"] * 20)
@@ -39,6 +40,7 @@ LAYERS = {
     "cover": {"source": "cover.tif"},
     "zones": {"source": "zones.gpkg"},
     "roads": {"source": "roads.gpkg"},
+    "tracks": {"source": "tracks.gpkg"},
     "islands": {"source": "islands.gpkg"},
 }
 
@@ -46,7 +48,8 @@ LAYERS = {
 def outcome(site, asked, layer=None):
     """Return all that a batch wrote of figures, zones and patches, or the fault that it was refused for."""
     out = site / "out"
-    used = {asked.get("of", "cover"), asked.get("zones"), *asked.get("barriers", ())}
+    barriers = [one if isinstance(one, str) else one["layer"] for one in asked.get("barriers", ())]
+    used = {asked.get("of", "cover"), asked.get("zones"), *barriers}
     layers = {name: said for name, said in LAYERS.items() if name in used}
     if "cover" in layers:
         layers["cover"] = {**LAYERS["cover"], **(layer or {})}
@@ -68,6 +71,7 @@ AREA = {"measure": "area-perimeter-dimension", "smallest-cells": 4, "covers": ["
 OUTER = {**AREA, "perimeter": "outer-cell-edges"}
 NUMBER = {"measure": "number-area-exponent", "covers": ["1"]}
 BROKEN = {"measure": "fragmentation", "covers": ["1"]}
+WIDE = {"layer": "roads", "width-m": 250}
 DEEP = {**BROKEN, "interior-depths-m": [150]}
 FEW = {**BROKEN, "smallest-patch-m2": 200_000, "most-patches": 5_000}
 ISLANDS = {"measure": "area-perimeter-dimension", "of": "islands"}
@@ -76,6 +80,8 @@ CASES = {
     ("entry", "covers"): (AREA, {"covers": ["1", "2"]}),
     ("entry", "zones"): ({**AREA, "zones": None}, {"zones": "zones"}),
     ("entry", "barriers"): (BROKEN, {"barriers": ["roads"]}),
+    ("barrier", "layer"): ({**BROKEN, "barriers": [WIDE]}, {"barriers": [{**WIDE, "layer": "tracks"}]}),
+    ("barrier", "width_m"): ({**BROKEN, "barriers": [WIDE]}, {"barriers": [{**WIDE, "width-m": 90}]}),
     ("entry", "prefix"): (AREA, {"prefix": "old"}),
     ("entry", "class_column"): (ISLANDS, {"class-column": "kind"}),
     ("entry", "dissolve"): (ISLANDS, {"dissolve": False}),
@@ -133,7 +139,9 @@ def test_changing_a_key_of_the_layer_changes_what_comes_out(site, key):
 
 def test_every_option_has_its_case():
     shipped = ("area-perimeter-dimension", "number-area-exponent", "fragmentation")
-    models = {"entry": CoverHead} | {name: load_cover_measure(name).options for name in shipped}
+    models = {"entry": CoverHead, "barrier": BarrierLayer} | {
+        name: load_cover_measure(name).options for name in shipped
+    }
     keys = {(name, field) for name, model in models.items() for field in model.model_fields}
     assert keys - {("entry", "measure"), ("entry", "of")} == set(CASES)
     assert set(RasterLayer.model_fields) == set(LAYER_CASES)

@@ -177,6 +177,45 @@ def test_barriers_cut_patches_and_leave_their_area(site):
     assert estimates(site, "area")[WHOLE_MAP, "reedbed"] == pytest.approx(4 * KM2, rel=1e-6)
 
 
+def write_road(site):
+    """Write a road along the middle of the second column, over the rows above the last."""
+    road = shapely.LineString([(WEST + 1.5 * CELL, NORTH + 50), (WEST + 1.5 * CELL, NORTH - 2.9 * CELL)])
+    gpd.GeoDataFrame(geometry=[road], crs=UTM).to_crs("EPSG:4326").to_file(site / "roads.gpkg")
+    return {"cover": layer(), "zones": zones(), "roads": {"source": "roads.gpkg"}}
+
+
+def test_barriers_with_a_width_take_cells_that_stay_in_the_area(site):
+    asked = {**FRAGMENTATION, "zones": "zones", "barriers": [{"layer": "roads", "width-m": 12}]}
+    record = run(site, write_road(site), [asked])
+    assert record["layers"]["cover"]["measures"][0]["barriers"] == [{"layer": "roads", "width-m": 12}]
+    areas, shares = estimates(site, "area"), estimates(site, "share")
+    assert areas[WHOLE_MAP, "all covers"] == pytest.approx(16 * KM2, rel=1e-6)
+    assert areas[WHOLE_MAP, "barrier"] == pytest.approx(3 * KM2, rel=1e-6)
+    assert areas[WHOLE_MAP, "reedbed"] == pytest.approx(2 * KM2, rel=1e-6)
+    assert shares["row 0", "barrier"] == pytest.approx(100 * 3 / 8)
+    classes = [*CLASSES, "barrier"]
+    for unit in ("row 0", "row 1", WHOLE_MAP):
+        assert sum(shares[unit, name] for name in classes) == pytest.approx(100)
+
+
+def test_another_width_is_measured_anew_and_workers_change_nothing(site):
+    told = []
+    for width, workers in ((12, 1), (12, 2), (220, 2), (220, 1)):
+        asked = {**FRAGMENTATION, "barriers": [{"layer": "roads", "width-m": width}]}
+        layers = {name: said for name, said in write_road(site).items() if name != "zones"}
+        run(site, layers, [asked], run={"workers": workers})
+        told.append((site / "out" / "cover_figures.csv").read_bytes())
+    assert told[0] == told[1] != told[2]
+    assert told[2] == told[3]
+
+
+def test_check_tells_the_width_of_barriers(site):
+    asked = {**FRAGMENTATION, "barriers": [{"layer": "roads", "width-m": 12}]}
+    layers = {name: said for name, said in write_road(site).items() if name != "zones"}
+    told = "\n".join(check_batch(load_config(write_batch(site, layers, [asked]))).lines())
+    assert "cut by roads (12 m wide):" in told
+
+
 def speckled(seed=3, shape=(120, 150)):
     return (np.random.default_rng(seed).random(shape) < 0.45).astype(np.uint8) + 1
 
@@ -474,6 +513,29 @@ LAYERS = {"cover": layer(), "zones": zones(), "rivers": {"source": "rivers.gpkg"
         ({**FRAGMENTATION, "of": "zones"}, "fragmentation measures class maps; 'zones' is no raster"),
         ({**FRAGMENTATION, "zones": "rivers"}, "zones are polygons; layer 'rivers' holds lines"),
         ({**FRAGMENTATION, "barriers": ["zones"]}, "barriers are lines; layer 'zones' holds polygons"),
+        ({**FRAGMENTATION, "barriers": [3]}, r"barriers\[0\]: found 3; allowed: the name of a layer, or"),
+        ({**FRAGMENTATION, "barriers": [""]}, r"barriers\[0\]: found ''; allowed: text that is not empty"),
+        ({**FRAGMENTATION, "barriers": [{"width-m": 3}]}, "the key 'layer' is missing: name of the layer"),
+        (
+            {**FRAGMENTATION, "barriers": [{"layer": "rivers", "width": 3}]},
+            r"barriers\[0\]\.width: unknown key 'width'; allowed: layer, width-m; did you mean 'width-m'",
+        ),
+        (
+            {**FRAGMENTATION, "barriers": [{"layer": "rivers", "width-m": -3}]},
+            r"barriers\[0\]\.width-m: found -3; allowed: 0 or more",
+        ),
+        (
+            {**FRAGMENTATION, "barriers": ["rivers", {"layer": "river", "width-m": 3}]},
+            r"barriers\[1\]\.layer: no layer 'river' is defined.*did you mean 'rivers'",
+        ),
+        (
+            {**FRAGMENTATION, "interior-depths-m": [9], "depth-by-neighbour-m": {"reedbad": 5}},
+            r"depth-by-neighbour-m\.reedbad: .* no class 'reedbad'; allowed: reedbed.*did you mean 'reedbed'",
+        ),
+        (
+            {**FRAGMENTATION, "interior-depths-m": [9], "depth-by-neighbour-m": {"barrier": 5}},
+            r"depth-by-neighbour-m\.barrier: the class map 'cover' has no class 'barrier'",
+        ),
         ({**FRAGMENTATION, "covers": ["reedbad"]}, "no class 'reedbad'.*did you mean 'reedbed'"),
         ({**FRAGMENTATION, "class-column": "kind"}, "names its classes under layers"),
         ({"measure": "sinuosity", "of": "cover"}, "sinuosity measures lines; 'cover' is a class map"),
@@ -489,6 +551,21 @@ LAYERS = {"cover": layer(), "zones": zones(), "rivers": {"source": "rivers.gpkg"
 def test_a_fault_of_the_batch_file_is_told_with_its_place(site, asked, words):
     write_gpkg(site / "rivers.gpkg", [wiggle()])
     assert re.search(words, faults(site, LAYERS, [asked]))
+
+
+def test_barriers_that_take_cells_need_their_name_for_themselves(site):
+    layers = {"cover": layer(groups={"barrier": ["reedbed"]}), "rivers": {"source": "rivers.gpkg"}}
+    write_gpkg(site / "rivers.gpkg", [wiggle()])
+    asked = {**FRAGMENTATION, "barriers": ["rivers", {"layer": "rivers", "width-m": 3}]}
+    assert re.search(r"barriers\[1\]: 'barrier' is what cells are called", faults(site, layers, [asked]))
+
+
+def test_a_depth_from_barriers_that_take_cells(site):
+    asked = {**FRAGMENTATION, "interior-depths-m": [90], "depth-by-neighbour-m": {"barrier": 20}}
+    asked["barriers"] = [{"layer": "roads", "width-m": 12}]
+    run(site, {name: said for name, said in write_road(site).items() if name != "zones"}, [asked])
+    # in the first column only the cells above are more than 90 m from other classes: (0, 0)
+    assert estimates(site, "interior_area_at_90m_depth")[WHOLE_MAP, "reedbed"] == pytest.approx(KM2, rel=1e-6)
 
 
 def test_two_maps_need_a_prefix_to_write_to_the_same_zones(site):

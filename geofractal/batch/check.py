@@ -100,7 +100,8 @@ def _cover_lines(plan: Plan, cover: CoverPlan) -> Iterator[str]:
 def _work_lines(work: CoverWork) -> Iterator[str]:
     request = work.request
     zones = f" and each of the {work.zones.info.features:,} rows of {work.zones.name}" if work.zones else ""
-    barriers = f", cut by {' and '.join(request.barriers)}" if request.barriers else ""
+    lines = [f"{one.layer}{f' ({one.width_m:g} m wide)' if one.width_m else ''}" for one in request.barriers]
+    barriers = f", cut by {' and '.join(lines)}" if lines else ""
     covers = ", ".join(request.covers) or "every class and group"
     yield f"  {request.measure} of {covers}, for the whole map{zones}{barriers}:"
     yield from map(_column_line, request.quantities())

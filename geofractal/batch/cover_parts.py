@@ -125,6 +125,7 @@ def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
     measure = load_cover_measure(request.measure)
     said = [code_digest(), request.measure, str(measure.version), request.options.model_dump_json()]
     said += [repr(request.covers), repr(plan.groups), repr((request.class_column, request.dissolve))]
+    said += [repr([one.width_m for one in request.barriers])]
     said += [] if plan.raster is None else [repr(plan.raster.options)]
     said += [prints[file].sha256 for file in plan.files]
     for layer in (*((plan.polygons,) if plan.polygons else ()), *work.layers):
@@ -152,7 +153,7 @@ def _measure(
     confirm(prints)  # else the key would be that of other bytes
     if result.patches is not None:
         keep(_patch_table(result.patches), patches)
-    names = plan.raster.legend.names if plan.raster else []
+    names = cover.raster.legend.names if cover.raster else []
     zones = cover.zones
     told = {
         "has_patches": result.patches is not None,
@@ -188,7 +189,8 @@ def open_cover(plan: CoverPlan, work: CoverWork, told: Callable[[Strip], None]) 
     )
     grid = plan.raster.grid
     zones = None if work.zones is None else zones_of(work.zones, read_rows(work.zones), grid)
-    barriers = barriers_of(work.barriers, grid) if work.barriers else None
+    widths = [one.width_m for one in work.request.barriers]
+    barriers = barriers_of(work.barriers, widths, grid) if work.barriers else None
     return RasterCover(watched, zones, barriers, plan.groups, work.request.covers)
 
 

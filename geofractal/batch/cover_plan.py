@@ -10,7 +10,9 @@ from typing import TYPE_CHECKING
 
 from geofractal.config.models import Batch, CoverRequest, RasterLayer
 from geofractal.config.wording import near_match
+from geofractal.cover_map import OWN_BARRIER
 from geofractal.errors import ConfigError, LayerError, Problem, SourceError
+from geofractal.landcover.barriers import BARRIER
 from geofractal.reader.raster import Raster, RasterOptions, open_raster
 from geofractal.reader.raster_source import open_source
 
@@ -140,12 +142,12 @@ def reading_options(layer: RasterLayer, batch: Batch) -> RasterOptions:
 def _work(
     request: CoverRequest, vectors: Mapping[str, LayerPlan], failed: Mapping[str, SourceError]
 ) -> CoverWork:
-    used = [("zones", request.zones or "")] + [("barriers", name) for name in request.barriers]
+    used = [("zones", request.zones or "")] + [("barriers", one.layer) for one in request.barriers]
     for what, name in used:
         if name in failed:
             raise LayerError(f"its {what} {name!r} cannot be read: {failed[name]}")
     zones = None if request.zones is None else vectors[request.zones]
-    return CoverWork(request, zones, tuple(vectors[name] for name in request.barriers))
+    return CoverWork(request, zones, tuple(vectors[one.layer] for one in request.barriers))
 
 
 def _cover_problems(batch: Batch, name: str, layer: RasterLayer, raster: Raster) -> Iterator[Problem]:
@@ -172,9 +174,18 @@ def _cover_problems(batch: Batch, name: str, layer: RasterLayer, raster: Raster)
                     ("layers", name, "groups", group, place), said, allowed=allowed, near=near
                 )
     for index, request in enumerate(batch.measures):
-        covers = request.covers if isinstance(request, CoverRequest) and request.of == name else ()
-        for place, cover in enumerate(covers):
-            if unknown(cover, [*known, *layer.groups]):
-                said, allowed, near = told(cover, [*known, *layer.groups])
-                at = ("measures", index, "covers", place)
-                yield batch.problem(at, said, allowed=allowed, near=near)
+        if not isinstance(request, CoverRequest) or request.of != name:
+            continue
+        taking = [place for place, one in enumerate(request.barriers) if one.width_m]
+        if taking and BARRIER in (*known, *legend.own_names.values(), *layer.groups):
+            yield batch.problem(("measures", index, "barriers", taking[0]), OWN_BARRIER)
+        bounding = [*known, BARRIER] if taking else known
+        depths = getattr(request.options, "depth_by_neighbour_m", ())
+        named = [
+            *((("covers", place), one, [*known, *layer.groups]) for place, one in enumerate(request.covers)),
+            *((("depth-by-neighbour-m", one), one, bounding) for one in depths),
+        ]
+        for at, cover, names in named:
+            if unknown(cover, names):
+                said, allowed, near = told(cover, names)
+                yield batch.problem(("measures", index, *at), said, allowed=allowed, near=near)

@@ -193,7 +193,7 @@ def cover_tally(work: CoverWork, part: CoverPart) -> dict[str, Any]:
         "zones": request.zones,
         "zones_refused": part.zone_problems,
         "zones_that_overlap": part.zone_overlaps,
-        "barriers": list(request.barriers),
+        "barriers": [one.model_dump(mode="json", by_alias=True) for one in request.barriers],
         "barriers_left_out": part.barriers_left_out,
         "polygons_left_out": part.polygons_left_out,
         "rows": table.num_rows,

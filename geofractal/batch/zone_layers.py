@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -10,7 +11,7 @@ import numpy as np
 
 from geofractal.batch.parts import NOT_WANTED
 from geofractal.errors import LayerError
-from geofractal.landcover.barriers import Barriers, place_barriers
+from geofractal.landcover.barriers import Barriers, joined, place_barriers
 from geofractal.landcover.grid import Grid
 from geofractal.landcover.zones import Zones, place_zones
 from geofractal.measure import WHOLE_MAP, Ints
@@ -108,21 +109,19 @@ def zones_of(plan: LayerPlan, rows: Rows, grid: Grid) -> Zones:
     return place_zones(grid, rows.geometries[rows.wanted], names, _crs(plan))
 
 
-def barriers_of(plans: tuple[LayerPlan, ...], grid: Grid) -> Barriers:
-    """Return the wanted rows of some layers as barriers of a grid.
+def barriers_of(plans: Sequence[LayerPlan], widths_m: Sequence[float], grid: Grid) -> Barriers:
+    """Return the wanted rows of some layers, each of a width, as barriers of a grid.
 
     Raises
     ------
     SourceError, LayerError
         a file is damaged, or there is no way from its CRS to the grid's
     """
-    segments, left_out = [np.empty((0, 4))], Counter[str]()
-    for plan in plans:
+    parts = []
+    for plan, width_m in zip(plans, widths_m, strict=True):
         rows = read_rows(plan)
-        placed = place_barriers(grid, rows.geometries[rows.wanted], _crs(plan))
-        segments.append(placed.segments)
-        left_out.update(placed.left_out)
-    return Barriers(np.concatenate(segments), dict(left_out))
+        parts.append(place_barriers(grid, rows.geometries[rows.wanted], _crs(plan), width_m))
+    return joined(grid, parts)
 
 
 def _crs(plan: LayerPlan) -> Any:

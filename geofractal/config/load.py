@@ -114,8 +114,9 @@ def _needed(at: KeyPath, request: Request) -> Iterator[tuple[KeyPath, str, str, 
     yield (*at, "of"), request.of, "polygons", said, "a layer of polygons, or a class map"
     if request.zones is not None:
         yield (*at, "zones"), request.zones, "polygons", "zones are polygons", "a layer of polygons"
-    for place, name in enumerate(request.barriers):
-        yield (*at, "barriers", place), name, "barriers", "barriers are lines", "a layer of lines"
+    for place, barrier in enumerate(request.barriers):
+        at_barrier = (*at, "barriers", place)
+        yield at_barrier, barrier.layer, "barriers", "barriers are lines", "a layer of lines"
 
 
 def _validated(
@@ -214,10 +215,9 @@ def _layers_named(tree: YamlTree) -> Iterator[tuple[KeyPath, str]]:
     for at, entry in _entries(tree):
         barriers = entry.get("barriers")
         places = [((*at, key), entry.get(key)) for key in ("of", "zones")]
-        places += [
-            ((*at, "barriers", place), name)
-            for place, name in enumerate(barriers if isinstance(barriers, list) else ())
-        ]
+        for place, said in enumerate(barriers if isinstance(barriers, list) else ()):
+            path = (*at, "barriers", place)
+            places.append(((*path, "layer"), said.get("layer")) if isinstance(said, dict) else (path, said))
         yield from ((path, name) for path, name in places if isinstance(name, str))
 
 
@@ -261,7 +261,7 @@ def _kind_problems(tree: YamlTree, requests: Mapping[KeyPath, Request]) -> Itera
             said = f"{request.of!r} is a class map, which names its classes under layers"
             yield tree.problem((*at, "class-column"), said, on_key=True)
         named = [((*at, "zones"), request.zones)]
-        named += [((*at, "barriers", place), name) for place, name in enumerate(request.barriers)]
+        named += [((*at, "barriers", place), one.layer) for place, one in enumerate(request.barriers)]
         for path, name in named:
             if name in layers and kind_of_layer(layers[name]) == "raster":
                 yield tree.problem(path, f"{name!r} is a class map", allowed=vectors)

@@ -12,6 +12,7 @@ from typing import Annotated, Any, Literal
 from pydantic import (
     AfterValidator,
     BaseModel,
+    BeforeValidator,
     Discriminator,
     Field,
     PrivateAttr,
@@ -242,6 +243,30 @@ class MeasureRequest(RequestHead):
         return measure.ladder_columns
 
 
+class BarrierLayer(Section):
+    """A layer of lines that cut what they cross."""
+
+    layer: Text = Field(description="name of the layer")
+    width_m: float = Field(
+        0.0,
+        ge=0,
+        description="width of the lines in metres. Cells whose centre lies within half of it are of no class "
+        "but stay in the area with data, as the cover barrier, and bound other classes as another class does",
+    )
+
+
+def _barrier_layer(said: Any) -> Any:
+    """Return what a layer's name alone stands for."""
+    if isinstance(said, str):
+        return {"layer": said}
+    if isinstance(said, dict | BarrierLayer):
+        return said
+    raise _refusal("the name of a layer, or a mapping of layer and width-m")
+
+
+Barrier = Annotated[BarrierLayer, BeforeValidator(_barrier_layer, json_schema_input_type=Text | BarrierLayer)]
+
+
 class CoverHead(RequestHead):
     """The keys that the entry of every measure of class maps has."""
 
@@ -253,8 +278,10 @@ class CoverHead(RequestHead):
     zones: Text | None = Field(
         None, description="name of a layer of polygons, for each of which figures are given"
     )
-    barriers: tuple[Text, ...] = Field(
-        (), description="names of layers of lines, such as roads, that cut what they cross"
+    barriers: tuple[Barrier, ...] = Field(
+        (),
+        description="layers of lines, such as roads, that cut what they cross: their names, or "
+        "{layer: name, width-m: metres}",
     )
     class_column: Text | None = Field(
         None, description="column that names the class of each polygon, where patches come from polygons"
@@ -379,7 +406,9 @@ class Batch(BatchSections):
     def layers_used(self) -> set[str]:
         """Return the names of the layers that some measure uses, be it as zones or barriers."""
         used = {request.of for request in self.measures}
-        return used.union(*((r.zones or r.of, *r.barriers) for r in self.cover_requests))
+        return used.union(
+            *((r.zones or r.of, *(one.layer for one in r.barriers)) for r in self.cover_requests)
+        )
 
     def zone_columns_of(self, layer: str) -> tuple[Column, ...]:
         """Return the columns that class maps give a layer as their zones."""

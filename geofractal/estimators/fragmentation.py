@@ -105,6 +105,7 @@ def about(cover: CoverMap) -> Reporting:
         math.sqrt(math.prod(grid.typical_cell)),
         grid.area_unit_m2,
         grid.length_unit_m,
+        barred=cover.barriers is not None and cover.barriers.wide,
         **told,
     )
 

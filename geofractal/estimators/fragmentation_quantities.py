@@ -26,7 +26,13 @@ PLOTNICK = "Allain & Cloitre 1991; Plotnick et al. 1993, Landscape Ecology 8:201
 _SIZE = "patches cut at the zone's border, of at least the smallest size"
 
 FIXED = (
-    Quantity("area", "area", "amount", "km2", "area of the class; of all covers: area with data"),
+    Quantity(
+        "area",
+        "area",
+        "amount",
+        "km2",
+        "area of the class; of all covers: area with data; of barrier: cells that wide barriers take",
+    ),
     Quantity(
         "area_not_covered", "nodata", "amount", "km2", "area of the zone without data, off the map included"
     ),

@@ -18,6 +18,7 @@ from geofractal.estimators.fragmentation_quantities import (
     CUT,
     quantities_of,
 )
+from geofractal.landcover.barriers import BARRIER
 from geofractal.landcover.covers import Pack, pack_groups
 from geofractal.landcover.patch_totals import Totals
 from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP
@@ -45,6 +46,7 @@ class Reporting:
     problems : why a zone cannot be measured, empty where it can
     overlaps : numbers of the zones that share an area with each
     outside_m2 : area of each zone off the map
+    barred : whether the map has cells that barriers took, of the class `BARRIER`
     """
 
     classes: Sequence[str]
@@ -57,18 +59,24 @@ class Reporting:
     problems: tuple[str, ...] = ()
     overlaps: Sequence[tuple[int, ...]] = ()
     outside_m2: Sequence[float] | NDArray[np.float64] = ()
+    barred: bool = False
 
     def packs(self) -> tuple[Pack, ...]:
         """Return what is measured together: classes, then groups, as far as asked for."""
         wanted = self.covers or tuple(self.groups)
-        packs = pack_groups({name: self.groups[name] for name in wanted if name in self.groups})
         classes = not self.covers or any(name not in self.groups for name in self.covers)
+        groups = {name: self.groups[name] for name in wanted if name in self.groups}
+        packs = pack_groups(groups | ({BARRIER: (BARRIER,)} if self.barred and not classes else {}))
         return (Pack(), *packs) if classes else packs
 
     def wanted(self, pack: Pack) -> list[tuple[int, str]]:
         """Return number and name of the covers of a pack that are asked for."""
         names = pack.covers(self.classes)
-        found = [(k, name) for k, name in enumerate(names) if not self.covers or name in self.covers]
+        found = [
+            (k, name)
+            for k, name in enumerate(names)
+            if (name in self.covers if self.covers else not (self.barred and name == BARRIER))
+        ]
         if not pack.names:
             missing = [name for name in self.covers if name not in names and name not in self.groups]
             found += [(len(names) + i, name) for i, name in enumerate(missing)]
@@ -162,6 +170,10 @@ class Figures:
         self.add(unit, ALL_COVERS, "area", covered * self._km2, note=note)
         beyond = self.about.outside_m2[unit] / 1e6 if is_zone else 0.0
         self.add(unit, ALL_COVERS, "area_not_covered", totals.uncovered(unit) * self._km2 + beyond)
+        if self.about.barred:
+            taken = totals.of(unit, pack.covers(self.about.classes).index(BARRIER)).area
+            self.add(unit, BARRIER, "area", taken * self._km2)
+            self._ratio(unit, BARRIER, "share", 100 * taken, covered)
         twice = [totals.twice_edge(unit, kind) for kind in range(len(self.about.classes))]
         lengths = [one for one in twice if one is not None]
         if not pack.names and len(lengths) == len(twice):

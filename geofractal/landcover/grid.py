@@ -89,6 +89,11 @@ class Grid:
         axes = self.crs.axis_info
         return float(axes[0].unit_conversion_factor) if axes else 1.0
 
+    @property
+    def full_turn(self) -> float:
+        """Return the columns of a full turn of longitude on an upright geographic grid."""
+        return 2 * math.pi / self.unit / abs(self.transform[0])
+
     @cached_property
     def typical_cell(self) -> tuple[float, float]:
         """Return the median true width and height of a cell in metres."""

@@ -30,8 +30,6 @@ EDGE_CELLS = 16.0
 """Longest edge, in cells, that is projected by its ends alone; longer ones, straight in their own CRS, are
 divided first. Over 16 cells a projected edge bends by far less than a cell."""
 
-FULL_TURN = 360.0
-
 
 @dataclass(frozen=True)
 class Zones:
@@ -170,7 +168,7 @@ def _turned_copies(grid: Grid, placed: Any) -> Any:
     """Return a zone on longitudes with its copies a full turn away that reach the grid."""
     if grid.kind != "rows":
         return placed
-    turn = FULL_TURN * np.pi / 180 / grid.unit / abs(grid.transform[0])
+    turn = grid.full_turn
     copies = [shapely.transform(placed, lambda xy, k=k: xy + np.array([k * turn, 0.0])) for k in (-1, 1)]
     reaching = [one for one in copies if one.bounds[0] < grid.columns and one.bounds[2] > 0]
     here = placed.bounds[0] < grid.columns and placed.bounds[2] > 0
