@@ -1,27 +1,18 @@
 """Box counting: kernels against brute force, known counts, and the measure `box-dimension`."""
 
 from itertools import pairwise, product
-from math import log, log2, pi
+from math import log, pi
 
 import numpy as np
 import pytest
 import shapely
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
-from scipy import ndimage
 
 import geofractal
 from geofractal import synthetic
 from geofractal.estimators import box
-from geofractal.estimators.box_cells import (
-    CellBoxCounter,
-    cell_dimensions,
-    cell_interval,
-    cell_sizes,
-    count_cells,
-)
 from geofractal.kernels import boxes as kernels
-from geofractal.kernels.cell_boxes import count_rows
 from geofractal.kernels.ladder_judge import STRETCHES
 from geofractal.scaling.ladder import Ladders
 from geofractal.testing import check_measure, lines_of, specimens
@@ -359,121 +350,3 @@ class TestMeasure:
     def test_sizes_out_of_order_are_refused(self):
         with pytest.raises(ValueError, match=r"size-min-m \(9\) must be below size-max-m \(9\)"):
             box.BoxOptions(size_min_m=9.0, size_max_m=9.0)
-
-
-class TestCells:
-    def test_gasket_has_three_to_the_power_of_boxes(self):
-        # ln 3 / ln 2: each halving of the box side triples the boxes
-        sizes = 2 ** np.arange(8)
-        found = count_cells(synthetic.carpet(synthetic.GASKET, level=10).cells, sizes)
-        assert found.boxes.tolist() == [3 ** (10 - k) for k in range(8)]
-        slope = np.polyfit(np.log(sizes), np.log(found.boxes), 1)[0]
-        assert -slope == pytest.approx(log2(3), rel=1e-12)
-
-    def test_carpet_has_eight_to_the_power_of_boxes_evenly_filled(self):
-        found = count_cells(synthetic.carpet(level=5).cells, 3 ** np.arange(5))
-        assert found.boxes.tolist() == [8 ** (5 - k) for k in range(5)]
-        # every box holds the same number of cells, so all dimensions agree
-        assert found.evenness == pytest.approx(found.boxes[:, None] * np.ones(2))
-
-    @settings(max_examples=30, deadline=None)
-    @given(st.integers(0, 2**32), st.integers(1, 30), st.integers(1, 30), st.integers(1, 9))
-    def test_strips_equal_brute_force(self, seed, rows, columns, strip):
-        rng = np.random.default_rng(seed)
-        cells = rng.random((rows, columns)) < 0.3
-        sizes = np.array([1, 2, 3, 7, 40])
-        counter = CellBoxCounter(rows, columns, sizes)
-        for start in range(0, rows, strip):
-            counter.add(cells[start : start + strip])
-        found = counter.counts()
-        for k, size in enumerate(sizes):
-            fewest = []
-            for down, right in counter._shifts[counter._sides == size]:
-                boxes = {((i + down) // size, (j + right) // size) for i, j in np.argwhere(cells)}
-                fewest.append(len(boxes))
-            assert found.grids[k][: len(fewest)].tolist() == fewest
-            assert found.boxes[k] == min(fewest)
-
-    def test_shares_are_those_of_the_cells(self):
-        cells = np.zeros((4, 4), bool)
-        cells[:2, :2] = True
-        cells[3, 3] = True
-        found = count_cells(cells, np.array([1, 2]))
-        p = np.array([4, 1]) / 5
-        assert found.evenness[0] == pytest.approx([5, 5])
-        assert found.evenness[1] == pytest.approx([np.exp(-np.sum(p * np.log(p))), 1 / np.sum(p**2)])
-
-    def test_absent_class_has_no_boxes(self):
-        found = count_cells(np.zeros((200, 200), bool))
-        assert (found.boxes == 0).all()
-        assert np.isnan(found.evenness).all()
-        assert np.isnan(cell_dimensions(found)).all()
-
-    def test_full_map_has_dimension_two(self):
-        found = cell_dimensions(count_cells(np.ones((512, 512), bool), 2 ** np.arange(7)))
-        assert found == pytest.approx((2, 2, 2), rel=1e-12)
-
-    def test_too_few_sizes_have_no_dimension(self):
-        assert np.isnan(cell_dimensions(count_cells(np.ones((8, 8), bool), np.array([1, 2, 4])))).all()
-
-    @pytest.mark.parametrize(("side", "kept"), [(2, 3), (3, 6), (3, 8)])
-    def test_random_carpets(self, side, kept):
-        level = {2: 9, 3: 6}[side]
-        maps = [synthetic.random_carpet(side, kept, level=level, seed=seed) for seed in range(3)]
-        for one in maps:
-            assert cell_dimensions(count_cells(one.cells)) == pytest.approx((one.dimension,) * 3, abs=0.09)
-
-    def test_rows_must_fit(self):
-        with pytest.raises(ValueError, match="does not fit a map of 4 rows and 4 columns"):
-            CellBoxCounter(4, 4).add(np.ones((2, 5), bool))
-        with pytest.raises(ValueError, match="0 of 4 rows"):
-            CellBoxCounter(4, 4).counts()
-        with pytest.raises(ValueError, match="from 1 up"):
-            CellBoxCounter(4, 4, np.array([0, 1]))
-
-    def test_sizes_are_whole_and_geometric(self):
-        sizes = cell_sizes(8000, 9000)
-        assert sizes[0] == 4
-        assert sizes[-1] == 1000
-        assert np.diff(np.log(sizes[sizes > 40])).max() < 1.1 * log(10) / 12
-
-    def test_counting_rows_equals_its_interpreted_twin(self):
-        cells = np.random.default_rng(2).random((7, 9)) < 0.4
-        results = []
-        for call in (count_rows, count_rows.py_func):
-            found, below = np.zeros((2, 3)), np.zeros(8, np.int64)
-            sides, shifts = np.array([2, 4]), np.array([[1, 0], [0, 3]])
-            call(cells, 0, 7, sides, shifts, np.array([0, 5, 8]), np.zeros(10, np.int64), below, found)
-            results.append(found)
-        assert np.array_equal(*results)
-        assert results[0][0, 0] > 0
-
-
-class TestCellInterval:
-    """The interval holds the truth on maps of exactly known dimension, in draws that set nothing."""
-
-    @pytest.mark.parametrize("dimension", [1.1, 1.3, 1.5, 1.7])
-    def test_traced_trails(self, dimension):
-        inside = []
-        for seed in range(5000, 5012):
-            xy = synthetic.fractional_trail(dimension, vertices=50_000, seed=seed).xy
-            places = ((xy - xy.min(axis=0)) / np.ptp(xy, axis=0).max() * 398).astype(int)
-            cells = np.zeros((400, 400), bool)
-            cells[places[:, 1], places[:, 0]] = True
-            low, high = cell_interval(count_cells(cells))
-            inside.append(low <= dimension <= high)
-        assert np.mean(inside) >= 0.9
-
-    def test_percolation_clusters(self):
-        """Mass of critical clusters: D = 91/48 (exact; as quoted by Ziff)."""
-        for seed in range(5000, 5006):
-            open_cells = np.random.default_rng(seed).random((400, 400)) < 0.592746
-            labels, _ = ndimage.label(open_cells)
-            largest = labels == np.bincount(labels.ravel())[1:].argmax() + 1
-            low, high = cell_interval(count_cells(largest))
-            assert low <= 91 / 48 <= high
-
-    def test_a_filled_map_may_have_dimension_two_and_a_missing_class_has_none(self):
-        low, high = cell_interval(count_cells(np.ones((100, 100), bool)))
-        assert low < 2 == high
-        assert np.isnan(cell_interval(count_cells(np.zeros((100, 100), bool)))).all()

@@ -4,15 +4,15 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from itertools import pairwise
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.estimators.box import GRID_SHIFTS
-from geofractal.estimators.divider import FEWEST_RUNGS
-from geofractal.kernels.cell_boxes import count_rows
-from geofractal.scaling.fit import fit_power_law
-from geofractal.scaling.ladder import RUNGS_PER_DECADE, Ladders
+from geofractal.kernels.cell_boxes import BLOCKS, count_rows
+from geofractal.scaling.cells import CellJudgement, effective_dimension, judge_cells
+from geofractal.scaling.ladder import RUNGS_PER_DECADE
 
 Bools = NDArray[np.bool_]
 Floats = NDArray[np.float64]
@@ -21,11 +21,6 @@ Ints = NDArray[np.int64]
 FIRST_BOX_CELLS = 4
 """First box side in cells. Boxes of one cell fit the cells exactly and larger ones seldom do, so that fits
 that begin with them come out 0.05 to 0.1 too low on maps of known dimension; from 4 cells on 0.01 to 0.06."""
-
-REACH_BELOW, REACH_ABOVE = 0.15, 0.28
-"""How far the interval of a dimension of cells reaches below and above it. Set on maps of 400 to 1,000 cells
-a side (trails of D 1.1 to 1.7, midpoint curves, critical percolation clusters, random carpets), whose boxes
-come out up to 0.16 too low on the mean, the denser the set the more; on fresh draws the truth was inside."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,12 +34,14 @@ class CellCounts:
     evenness : (k, 2) effective numbers of boxes on that grid: exp(-sum p ln p) and 1 / sum p^2 over the
         share p of the cells in each box; NaN where the class is absent
     grids : (k, g) boxes on each grid tried, NaN for the others
+    tallies : (k, 16) boxes in each of 4 x 4 blocks of the map, on the grid with the fewest
     """
 
     sizes: Ints
     boxes: Ints
     evenness: Floats
     grids: Floats
+    tallies: Ints
 
 
 def cell_sizes(rows: int, columns: int) -> Ints:
@@ -87,6 +84,7 @@ class CellBoxCounter:
         self._columns = np.zeros(columns + 1, dtype=np.int64)
         self._below = np.zeros(self._offsets[-1], dtype=np.int64)
         self._found = np.zeros((len(self._sides), 3))
+        self._tallies = np.zeros((len(self._sides), BLOCKS**2), dtype=np.int64)
         self._rows, self._seen = rows, 0
 
     def add(self, cells: Bools) -> None:
@@ -110,6 +108,7 @@ class CellBoxCounter:
             self._columns,
             self._below,
             self._found,
+            self._tallies,
         )
         self._seen += len(cells)
 
@@ -121,48 +120,41 @@ class CellBoxCounter:
         grids = np.full((len(self.sizes), int(self._grids.max())), np.nan)
         for k, (a, b) in enumerate(pairwise(firsts)):
             grids[k, : b - a] = self._found[a:b, 0]
-        best = self._found[firsts[:-1] + np.nanargmin(grids, axis=1)]
+        fewest = firsts[:-1] + np.nanargmin(grids, axis=1)
+        best = self._found[fewest]
         total = float(self._columns[-1])
         with np.errstate(divide="ignore", invalid="ignore"):
             evenness = np.column_stack([total * np.exp(-best[:, 1] / total), total**2 / best[:, 2]])
-        return CellCounts(self.sizes, best[:, 0].astype(np.int64), evenness, grids)
+        return CellCounts(self.sizes, best[:, 0].astype(np.int64), evenness, grids, self._tallies[fewest])
 
 
-def cell_dimensions(counts: CellCounts) -> tuple[float, float, float]:
-    """Fit box, information and correlation dimension through the counts, by least squares.
+class CellDimensions(NamedTuple):
+    """Dimensions of a set of cells; `found` has the box dimension, its ladder and the verdict on all three.
 
-    NaN where fewer than `FEWEST_RUNGS` sizes were counted, or the class is absent. `cell_interval` gives
-    the box dimension's interval; no verdict is calibrated for sets of cells.
+    `information` (q = 1) and `correlation` (q = 2) are a dimension and both ends of its 95 % interval.
     """
-    if len(counts.sizes) < FEWEST_RUNGS or counts.boxes[0] == 0:
-        return np.nan, np.nan, np.nan
-    ladders = Ladders(np.array([0, len(counts.sizes)]), counts.sizes.astype(np.float64))
-    box, even, paired = (
-        -float(fit_power_law(ladders, values).slope[0])
-        for values in (counts.boxes.astype(np.float64), *counts.evenness.T)
+
+    found: CellJudgement
+    information: tuple[float, float, float]
+    correlation: tuple[float, float, float]
+
+
+def cell_dimensions(counts: CellCounts) -> CellDimensions:
+    """Return what counts are evidence of.
+
+    Examples
+    --------
+    >>> cell_dimensions(count_cells(np.ones((400, 400), bool))).found.verdict
+    'power-law'
+    >>> cell_dimensions(count_cells(np.zeros((400, 400), bool))).found
+    CellJudgement(verdict='too-few-scales', dimension=nan, low=nan, high=nan, error=nan, size_min=nan, \
+size_max=nan, sizes=0, break_at=nan, break_low=nan, break_high=nan, fine=nan, coarse=nan)
+    """
+    found = judge_cells(counts.sizes, counts.boxes, counts.tallies)
+    even, paired = (
+        effective_dimension(found, counts.sizes, counts.boxes, effective) for effective in counts.evenness.T
     )
-    return box, even, paired
-
-
-def cell_interval(counts: CellCounts) -> tuple[float, float]:
-    """Return the 95 % interval of the box dimension for the process that made the map.
-
-    `REACH_BELOW` and `REACH_ABOVE` of the figure, and half of what the fine and the coarse half of the
-    sizes differ by. NaN where there is no dimension.
-    """
-    dimension = cell_dimensions(counts)[0]
-    if not np.isfinite(dimension):
-        return np.nan, np.nan
-    half = len(counts.sizes) // 2
-    x, y = np.log(counts.sizes), np.log(counts.boxes)
-    fine, coarse = (_slope(x[part], y[part]) for part in (slice(half), slice(half, None)))
-    bend = 0.5 * abs(fine - coarse)
-    return max(0.0, dimension - REACH_BELOW - bend), min(2.0, dimension + REACH_ABOVE + bend)
-
-
-def _slope(x: Floats, y: Floats) -> float:
-    away = x - x.mean()
-    return float((away * (y - y.mean())).sum() / (away * away).sum())
+    return CellDimensions(found, even, paired)
 
 
 def _whole_shifts(size: int) -> Ints:

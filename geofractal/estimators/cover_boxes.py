@@ -2,13 +2,20 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from geofractal.estimators.box_cells import CellBoxCounter, cell_dimensions, cell_interval
+from geofractal.estimators.box_cells import CellBoxCounter, CellDimensions, cell_dimensions
+from geofractal.estimators.fragmentation_quantities import box_quantities
 from geofractal.landcover.windows import Window
+
+ABSENT = "the class is absent"
+ONE_REGIME = "no break was found"
+FILLED = "a filled area, of dimension 2, is not ruled out"
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,11 +51,61 @@ class CoverBoxes:
             cells &= window.strip.zones == self.part.zone
         self._counter.add(np.ascontiguousarray(cells[first:stop, self.part.columns]))
 
-    def dimension(self) -> tuple[float, tuple[float, float], tuple[int, int]]:
-        """Return dimension and interval, NaN where there is none, and first and last box size in cells."""
+    def dimensions(self) -> CellDimensions | None:
+        """Return the dimensions of the cells; None where there is none of them."""
         counts = self._counter.counts()
-        sizes = int(counts.sizes[0]), int(counts.sizes[-1])
-        return cell_dimensions(counts)[0], cell_interval(counts), sizes
+        return cell_dimensions(counts) if counts.boxes[0] else None
+
+
+class Row(NamedTuple):
+    """A row of the table of figures; lengths in metres."""
+
+    quantity: str
+    estimate: float
+    low: float = math.nan
+    high: float = math.nan
+    note: str | None = None
+
+
+def box_rows(dimensions: CellDimensions | None, *, edge: bool, cell: float, remark: str | None) -> list[Row]:
+    """Return the rows of a set of cells.
+
+    Parameters
+    ----------
+    dimensions : of the class, or of its edge; None where it is absent
+    edge : whether they are those of the edge
+    cell : side of a cell in metres
+    remark : what is to be said beside the dimension
+    """
+    prefix = "edge_" if edge else ""
+    if dimensions is None:
+        return [
+            Row(one.name, math.nan, note=ABSENT) for one in box_quantities(edge=edge) if one.kind != "text"
+        ]
+    found = dimensions.found
+    given = math.isfinite(found.dimension)
+    missing = None if given else found.verdict
+    beside = [
+        found.verdict,
+        FILLED if found.verdict == "power-law" and found.high >= 2 else None,
+        remark if given else None,
+    ]
+    whole = None if math.isfinite(found.fine) else missing or ONE_REGIME
+    broken = None if math.isfinite(found.break_at) else missing or ONE_REGIME
+    breaks = found.break_at * cell, found.break_low * cell, found.break_high * cell
+    rows = [
+        Row("box_dim", found.dimension, found.low, found.high, "; ".join(filter(None, beside))),
+        Row("box_verdict", math.nan, note=found.verdict),
+        Row("box_size_min", found.size_min * cell, note=missing),
+        Row("box_size_max", found.size_max * cell, note=missing),
+        Row("box_break", *breaks, note=broken),
+        Row("box_fine_dim", found.fine, note=whole),
+        Row("box_coarse_dim", found.coarse, note=whole),
+    ]
+    if not edge:
+        rows.append(Row("box_information_dim", *dimensions.information, note=missing))
+        rows.append(Row("box_correlation_dim", *dimensions.correlation, note=missing))
+    return [row._replace(quantity=prefix + row.quantity) for row in rows]
 
 
 def _changes(codes: NDArray[np.int16]) -> NDArray[np.bool_]:

@@ -67,6 +67,7 @@ class Fragmentation(CoverMeasure[FragmentationOptions]):
     title: ClassVar[str] = "Fragmentation of classes and habitat groups"
     formula: ClassVar[str] = "effective mesh size = sum A_i^2 / A_t; further ones with each figure"
     sources: ClassVar[tuple[str, ...]] = (words.JAEGER, words.MOSER, words.SAURA, words.PLOTNICK)
+    version: ClassVar[int] = 2
     stem: ClassVar[str] = "fragmentation"
     options: ClassVar[type[Options]] = FragmentationOptions
 

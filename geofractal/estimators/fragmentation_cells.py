@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from geofractal.estimators import fragmentation_quantities as words
-from geofractal.estimators.cover_boxes import CoverBoxes, Part
+from geofractal.estimators.cover_boxes import ABSENT, CoverBoxes, Part, box_rows
 from geofractal.landcover.coarse_edges import LagSums
 from geofractal.landcover.interior import Depth, InteriorSums
 from geofractal.landcover.lacunarity import MOST_CELLS, GlidingSums, boxes_of
@@ -25,7 +25,6 @@ if TYPE_CHECKING:
 TOO_FINE = "not coarser than the map's own cells"
 TOO_LARGE = f"boxes of more than {MOST_CELLS} cells a side"
 NO_BOX = "no box lies wholly inside the area with data"
-ABSENT = "the class is absent"
 UNEVEN = 1.05  # ratio of cell sizes over a map from which sizes in cells need a word
 
 
@@ -187,14 +186,10 @@ class CellFigures:
         counters: dict[tuple[int, int, bool], CoverBoxes],
     ) -> None:
         cell = math.sqrt(math.prod(self.grid.typical_cell))
-        for quantity, edge in (("box_dim", False), ("edge_box_dim", True)):
-            dimension, (low, high), (first, last) = counters[unit, kind, edge].dimension()
-            sizes = f"boxes of {first * cell:g} to {last * cell:g} m"
-            sizes = "; ".join(filter(None, (sizes, self._uneven)))
-            note = (
-                sizes if math.isfinite(dimension) else f"too few box sizes, or the class is absent ({sizes})"
-            )
-            figures.add(unit, name, quantity, dimension, low=low, high=high, note=note)
+        for edge in (False, True):
+            found = counters[unit, kind, edge].dimensions()
+            for row in box_rows(found, edge=edge, cell=cell, remark=self._uneven):
+                figures.add(unit, name, row.quantity, row.estimate, low=row.low, high=row.high, note=row.note)
 
 
 def uneven_cells(grid: Grid) -> str | None:

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import partial
 from typing import TYPE_CHECKING
 
+from geofractal.estimators.box_columns import HENTSCHEL_PROCACCIA
 from geofractal.estimators.divider import plain_number
 from geofractal.measure import Quantity
 
@@ -165,20 +167,74 @@ CONNECTED = (
     ),
 )
 
-BOXES = tuple(
-    Quantity(
-        name,
-        short,
-        "scaling",
-        "",
-        f"box dimension of {what}; the note has the box sizes. No verdict has been calibrated for cells",
-        "D = -slope of ln N(s) on ln s",
+
+def box_quantities(*, edge: bool) -> tuple[Quantity, ...]:
+    """Return the figures of box counting of a class, or of its edge."""
+    what = "the cells of the class that another class touches by a side" if edge else "the cells of the class"
+    name, short = ("edge_box", "ebx") if edge else ("box", "box")
+    scale = partial(Quantity, group="scaling")
+    found = (
+        scale(
+            f"{name}_dim",
+            f"{short}_dim",
+            unit="",
+            meaning=f"box dimension of {what}, between the first and the last box size used; under "
+            "two-regime and curved the interval holds both ends of that range",
+            formula="D = -slope of ln N(s) on ln s, plus half of what maps of known dimension lack",
+            interval=True,
+        ),
+        scale(
+            f"{name}_verdict",
+            f"{short}verd",
+            unit="",
+            meaning="whether a dimension exists: power-law; two-regime (one on each side of a break); "
+            "curved; smooth (nothing beyond dimension 1); too-few-scales (under half a decade of box sizes)",
+            formula="a hinge and a cubic against the straight line on logarithmic axes",
+            kind="text",
+        ),
+        scale(f"{name}_size_min", f"{short}_min", unit="m", meaning="first box size that was used"),
+        scale(f"{name}_size_max", f"{short}_max", unit="m", meaning="last box size that was used"),
+        scale(
+            f"{name}_break",
+            f"{short}_brk",
+            unit="m",
+            meaning="box size at which two regimes meet",
+            interval=True,
+        ),
+        scale(
+            f"{name}_fine_dim",
+            f"{short}fine",
+            unit="",
+            meaning="dimension below the break; under curved, of the fine sizes",
+        ),
+        scale(
+            f"{name}_coarse_dim",
+            f"{short}coar",
+            unit="",
+            meaning="dimension above the break; under curved, of the coarse sizes",
+        ),
     )
-    for name, short, what in (
-        ("box_dim", "box_dim", "the cells of the class"),
-        ("edge_box_dim", "edg_dim", "the cells of the class that another class touches by a side"),
+    return found if edge else (*found, *_weighted_boxes())
+
+
+def _weighted_boxes() -> tuple[Quantity, ...]:
+    return tuple(
+        Quantity(
+            f"box_{word}_dim",
+            short,
+            "scaling",
+            "",
+            f"{word} dimension (q = {q}): as box_dim, each box weighted by the cells in it; the verdict is "
+            "that of box_dim, and the interval was tried on maps that are evenly filled only",
+            f"as box_dim, with {formula} for N, p the share of the cells in each box",
+            HENTSCHEL_PROCACCIA,
+            interval=True,
+        )
+        for word, short, q, formula in (
+            ("information", "boxinfo", 1, "exp(-sum p ln p)"),
+            ("correlation", "boxcorr", 2, "1 / sum p^2"),
+        )
     )
-)
 
 
 def named(word: str, metres: float, what: str) -> str:
@@ -257,5 +313,5 @@ def quantities_of(options: FragmentationOptions) -> tuple[Quantity, ...]:
     found += NEAREST if options.distances else ()
     found += [one for size in options.lacunarity_boxes_m for one in lacunarity(size)]
     found += CONNECTED if options.dispersal_m is not None else ()
-    found += BOXES if options.box_dimension else ()
+    found += [one for edge in (False, True) if options.box_dimension for one in box_quantities(edge=edge)]
     return tuple(found)

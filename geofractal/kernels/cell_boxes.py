@@ -10,6 +10,9 @@ from geofractal.kernels.jit import kernel
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
+BLOCKS = 4
+"""Blocks of the map, across and down, that boxes are tallied in."""
+
 
 @kernel
 def count_rows(
@@ -22,6 +25,7 @@ def count_rows(
     columns: Ints,
     below: Ints,
     found: Floats,
+    tallies: Ints,
 ) -> None:
     """Count the boxes of every grid that end in a strip of rows.
 
@@ -36,6 +40,7 @@ def count_rows(
     columns : (width + 1,) cells of the class in the rows so far and left of each column; changed in place
     below : (offsets[-1],) cells of the class in all finished boxes of each column of boxes; changed in place
     found : (g, 3) boxes, sum of m ln m and sum of m^2 over the cells m in each box; added to
+    tallies : (g, BLOCKS^2) boxes by the block of the map that their last row and column lie in; added to
     """
     height, width = cells.shape
     for r in range(height):
@@ -47,7 +52,7 @@ def count_rows(
         for g in range(len(sizes)):
             if (done + shifts[g, 0]) % sizes[g] != 0 and done != rows:
                 continue
-            left = 0
+            left, down = 0, BLOCKS * ((done - 1) * BLOCKS // rows)
             for b in range(offsets[g + 1] - offsets[g]):
                 right = min((b + 1) * sizes[g] - shifts[g, 1], width)
                 total = columns[right] - columns[left]
@@ -56,5 +61,6 @@ def count_rows(
                     found[g, 0] += 1.0
                     found[g, 1] += mass * np.log(mass)
                     found[g, 2] += mass * mass
+                    tallies[g, down + (right - 1) * BLOCKS // width] += 1
                 below[offsets[g] + b] = total
                 left = right

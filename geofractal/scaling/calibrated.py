@@ -6,6 +6,8 @@ set them and which were kept apart to judge them.
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 from geofractal.kernels.ladder_judge import Constants
 
 DIVIDER = Constants(
@@ -51,3 +53,55 @@ BOX = DIVIDER._replace(
 """`crowding`: strands that lie close share boxes, so that counts are the more too low the higher the
 dimension and the shorter the ladder. 0.4 would set trails right that cross themselves, 0 curves drawn by a
 rule: 0.25 lies between, and the doubt about it widens the interval."""
+
+
+class CellConstants(NamedTuple):
+    """What simulation set for box counts of raster cells; see `geofractal.scaling.cells`."""
+
+    fewest_boxes: int
+    fewest_sizes: int
+    fewest_decades: float
+    sure_boxes: float
+    crowding: float
+    crowding_fades: float
+    corrected: float
+    doubt: float
+    few_blocks: float
+    ripple: float
+    quantile: float
+    margin: float
+    hinge_share: float
+    cubic_share: float
+    least_bend: float
+    sureness: float
+    most_residual: float
+    clear_turn: float
+    effective_reach: float
+    smooth_below: float
+
+
+CELLS = CellConstants(
+    fewest_boxes=6,
+    fewest_sizes=5,
+    fewest_decades=0.5,
+    sure_boxes=50.0,
+    crowding=1.1,
+    crowding_fades=0.7,
+    corrected=0.5,
+    doubt=0.3,
+    few_blocks=0.08,
+    ripple=2.0,
+    quantile=2.3,
+    margin=0.2,
+    hinge_share=0.62,
+    cubic_share=0.55,
+    least_bend=0.018,
+    sureness=1.4,
+    most_residual=0.12,
+    clear_turn=3.0,
+    effective_reach=1.25,
+    smooth_below=1.03,
+)
+"""Sizes from the first with fewer than `fewest_boxes` on are left out. `crowding` is what random families
+lack of their slope at one decade; `least_bend`, in ln boxes a decade, is what percolation clusters and trails
+mostly bend at most; `most_residual` is what carpets on the lattice of the cells mostly leave at most."""
