@@ -212,6 +212,9 @@ and border rule; ``border_rule`` is empty where no border matters."""
 WHOLE_MAP = "whole map"
 """Reporting unit of figures that are not those of a zone."""
 
+ALL_COVERS = "all covers"
+"""Cover of figures that are those of all classes together."""
+
 GROUPS = ("amount", "border", "interior", "separation", "connectedness", "scaling")
 """What a quantity is about."""
 
@@ -230,6 +233,7 @@ class Quantity:
         its ``note`` is the word
     interval : whether ``low`` and ``high`` are filled
     border_rules : what the table's ``border_rule`` may say, a row each; empty where it says nothing
+    together : whether it is given once, for `ALL_COVERS`, rather than for each
     """
 
     name: str
@@ -242,6 +246,7 @@ class Quantity:
     kind: Literal["number", "text"] = "number"
     interval: bool = False
     border_rules: tuple[str, ...] = ()
+    together: bool = False
 
 
 Outline = Literal["cell-edges", "outer-cell-edges", "smoothed"]

@@ -23,7 +23,7 @@ from geofractal.batch.check import check_batch
 from geofractal.batch.inspect import inspect_path
 from geofractal.batch.run import run_batch
 from geofractal.config import load_config
-from geofractal.errors import ConfigError
+from geofractal.errors import ConfigError, OutputError
 from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP
 from geofractal.progress import Progress
 
@@ -83,9 +83,9 @@ def site(tmp_path):
     return tmp_path
 
 
-def run_halves(site, **keys):
+def run_halves(site, outputs=None, **keys):
     asked = {**FRAGMENTATION, "zones": "zones", "covers": ["habitat", "pasture"], **keys}
-    return run(site, {"cover": layer(), "zones": zones()}, [asked])
+    return run(site, {"cover": layer(), "zones": zones()}, [asked], outputs)
 
 
 # What comes out
@@ -139,6 +139,69 @@ def test_zones_measured_as_lines_too_come_out_in_one_copy(site):
     copy = gpd.read_file(site / "out" / "zones.gpkg")
     assert copy["habitat_area_km2"].notna().all()
     assert copy["sinuosity_note"].str.contains("ring").all()
+
+
+def test_area_not_covered_is_one_column_of_the_zones(site):
+    """The left half of the map, and as much again beyond its left side; two cells lack data."""
+    codes = CODES.copy()
+    codes[3, :2] = 0
+    write_map(site / "cover.tif", codes, nodata=0)
+    write_gpkg(site / "zones.gpkg", [cells(-2, 0, 2, 4), cells(2, 0, 4, 4)], layer="zones")
+    outputs = {"folder": "out", "formats": ["geopackage", "shapefile"]}
+    run_halves(site, prefix="now", outputs=outputs)
+    copy = gpd.read_file(site / "out" / "zones.gpkg")
+    assert [name for name in copy if "not_covered" in name] == ["now_area_not_covered_km2"]
+    assert copy["now_area_not_covered_km2"].tolist() == pytest.approx([(8 + 2) * KM2, 0], rel=1e-5)
+    short = gpd.read_file(site / "out" / "zones.shp")["nonodata"]
+    assert short.tolist() == pytest.approx(copy["now_area_not_covered_km2"].tolist())
+    with (site / "out" / "data_dictionary.csv").open(encoding="utf-8") as file:
+        (told,) = [row for row in csv.DictReader(file) if row["name"] == "now_area_not_covered_km2"]
+    assert (told["layer"], told["unit"]) == ("zones", "km2")
+    assert "off the map included" in told["meaning"]
+
+
+def test_a_measure_asked_again_under_a_prefix_has_files_and_columns_of_its_own(site):
+    """Two cells that touch by a corner are one patch by eight neighbours and two by four."""
+    write_map(site / "cover.tif", np.array([[3, 1], [1, 3]], np.uint8))
+    write_gpkg(site / "zones.gpkg", [cells(0, 0, 2, 2)], layer="zones")
+    asked = {**FRAGMENTATION, "zones": "zones", "covers": ["pasture"]}
+    sides = {**asked, "prefix": "sides", "neighbours": 4}
+    layers = {"cover": layer(groups={}), "zones": zones()}
+    record = run(site, layers, [asked, sides, {**DIMENSION, "covers": ["pasture"]}])
+    assert estimates(site, "patches")[WHOLE_MAP, "pasture"] == 1
+    assert estimates(site, "patches", name="cover_sides")[WHOLE_MAP, "pasture"] == 2
+    assert "area_perimeter_dim" in set(figures(site).quantity)
+    copy = gpd.read_file(site / "out" / "zones.gpkg")
+    name = "pasture_patches_cut_at_the_border"
+    assert (copy[name].tolist(), copy[f"sides_{name}"].tolist()) == ([1], [2])
+    files = {Path(path).name for path in record["layers"]["cover"]["files"]}
+    assert files == {"cover_figures.csv", "cover_sides_figures.csv"}
+    assert [told["prefix"] for told in record["layers"]["cover"]["measures"]] == [None, "sides", None]
+    told = (site / "out" / "data_dictionary.csv").read_text("utf-8")
+    assert "cover_sides_figures,effective_mesh_size" in told
+
+
+def test_patches_asked_for_twice_go_to_two_layers(tmp_path):
+    write_map(tmp_path / "cover.tif", speckled())
+    asked = {**DIMENSION, "smallest-cells": 4, "covers": ["some"], "patches": True}
+    layers = {"cover": {"source": "cover.tif", "classes": {"some": 2, "rest": 1}}}
+    run(tmp_path, layers, [asked, {**asked, "prefix": "sides", "neighbours": 4}])
+    for stem, sides in (("cover", np.ones((3, 3))), ("cover_sides", None)):
+        _, count = ndimage.label(speckled() == 2, sides)
+        assert len(gpd.read_file(tmp_path / "out" / f"{stem}_patches.gpkg")) == count
+
+
+@pytest.mark.parametrize(("columns", "west", "told"), [(72, -180, True), (72, 0, True), (71, -180, False)])
+def test_a_map_of_all_longitudes_is_told_not_to_be_joined(tmp_path, columns, west, told):
+    profile = {"driver": "GTiff", "count": 1, "height": 10, "width": columns, "dtype": "uint8"}
+    transform = Affine(5, 0, west, 0, -5, 25)
+    with rasterio.open(tmp_path / "cover.tif", "w", **profile, crs=4326, transform=transform) as dataset:
+        dataset.write(np.ones((1, 10, columns), np.uint8))
+    layers = {"cover": {"source": "cover.tif"}}
+    checked = "\n".join(check_batch(load_config(write_batch(tmp_path, layers, [FRAGMENTATION]))).lines())
+    assert ("warning: a map of all longitudes: its first and last columns are not joined" in checked) == told
+    record = run(tmp_path, layers, [FRAGMENTATION])
+    assert bool(record["layers"]["cover"]["warnings"]) == told
 
 
 def test_two_maps_write_to_one_layer_of_zones_under_their_prefixes(site):
@@ -564,7 +627,7 @@ def test_a_depth_from_barriers_that_take_cells(site):
     asked = {**FRAGMENTATION, "interior-depths-m": [90], "depth-by-neighbour-m": {"barrier": 20}}
     asked["barriers"] = [{"layer": "roads", "width-m": 12}]
     run(site, {name: said for name, said in write_road(site).items() if name != "zones"}, [asked])
-    # in the first column only the cells above are more than 90 m from other classes: (0, 0)
+    # the road leaves cells (0, 0) and (1, 0), whose centres are 150 and 50 m from the woodland below
     assert estimates(site, "interior_area_at_90m_depth")[WHOLE_MAP, "reedbed"] == pytest.approx(KM2, rel=1e-6)
 
 
@@ -576,10 +639,19 @@ def test_two_maps_need_a_prefix_to_write_to_the_same_zones(site):
     assert "a prefix that sets the two apart" in said
 
 
-def test_a_measure_is_asked_once_of_a_map(site):
-    said = faults(site, {"cover": layer()}, [FRAGMENTATION, {**FRAGMENTATION, "neighbours": 4}])
+@pytest.mark.parametrize(("first", "second"), [(None, None), ("sides", None), ("sides", "sides")])
+def test_a_measure_asked_again_of_a_map_needs_a_prefix_of_its_own(site, first, second):
+    asked = [{**FRAGMENTATION, "prefix": first}, {**FRAGMENTATION, "prefix": second, "neighbours": 4}]
+    said = faults(site, {"cover": layer()}, asked)
     assert "fragmentation is asked of 'cover' already, at line 1" in said
-    assert "list the layer twice under two names" in said
+    assert "a prefix of its own, for the names of its files and columns" in said
+
+
+def test_files_of_a_measure_asked_again_may_not_be_those_of_another_map(site):
+    asked = [FRAGMENTATION, {**FRAGMENTATION, "prefix": "sides", "neighbours": 4}]
+    asked.append({**FRAGMENTATION, "of": "cover_sides"})
+    with pytest.raises(OutputError, match=r"cover and cover_sides would both be written to this file"):
+        run(site, {"cover": layer(), "cover_sides": layer()}, asked)
 
 
 @pytest.mark.parametrize(

@@ -89,6 +89,8 @@ def _cover_lines(plan: Plan, cover: CoverPlan) -> Iterator[str]:
         warped = f", {_percent(grid.distortion)} on the {grid.plane} plane that it is warped to"
         budget = f"; budget: {raster.options.budget_percent:g} %"
         yield f"{told}{warped if cover.warped else ''}{budget}"
+        if grid.seam:
+            yield f"  warning: {grid.seam}"
         known = legend.names if legend.closed else [*dict.fromkeys(legend.own_names.values())]
         yield f"  classes: {', '.join(known) or 'the codes that are met'}"
         yield from (f"  group {name}: {', '.join(members)}" for name, members in cover.groups.items())

@@ -59,30 +59,45 @@ class CoverPlan:
         """Whether the map is measured on another grid than its own."""
         return self.raster is not None and self.raster.grid is not self.raster.source_grid
 
-    def table(self, folder: Path, word: str) -> Path:
-        """Return the file of the table of figures in a format."""
-        return folder / f"{self.name}_figures.{word}"
+    @cached_property
+    def stems(self) -> tuple[str, ...]:
+        """Return how the files of each measure are named: as the map; one asked again, with its prefix too."""
+        met: set[str] = set()
+        stems = []
+        for request in (work.request for work in self.works):
+            stems.append(f"{self.name}_{request.prefix}" if request.measure in met else self.name)
+            met.add(request.measure)
+        return tuple(stems)
+
+    def table(self, folder: Path, stem: str, word: str) -> Path:
+        """Return the file of a table of figures in a format."""
+        return folder / f"{stem}_figures.{word}"
 
     def warping_file(self, folder: Path) -> Path:
         """Return the file of what warping did to each class."""
         return folder / f"{self.name}_warping.csv"
 
-    def patch_files(self, batch: Batch) -> dict[str, Path]:
-        """Return the file of the patches in each format, none where none are asked for."""
-        if not any(getattr(work.request.options, "patches", False) for work in self.works):
-            return {}
+    def patch_files(self, batch: Batch, stem: str) -> dict[str, Path]:
+        """Return the file of patches in each format."""
         words = [word for word in batch.outputs.formats if word in PATCH_FORMATS] or ["geopackage"]
         if self.raster is None:
             words = ["geoparquet"]
         folder = batch.outputs.folder
-        return {word: folder / f"{self.name}_patches{PATCH_FORMATS[word]}" for word in words}
+        return {word: folder / f"{stem}_patches{PATCH_FORMATS[word]}" for word in words}
 
     def targets(self, batch: Batch) -> list[Path]:
         """Return all files that the map's results go to."""
         folder = batch.outputs.folder
-        files = [self.table(folder, word) for word in batch.outputs.tables]
+        files = [
+            self.table(folder, stem, word)
+            for stem in dict.fromkeys(self.stems)
+            for word in batch.outputs.tables
+        ]
         files += [self.warping_file(folder)] if self.warped else []
-        return [*files, *self.patch_files(batch).values()]
+        for work, stem in zip(self.works, self.stems, strict=True):
+            if getattr(work.request.options, "patches", False):
+                files += self.patch_files(batch, stem).values()
+        return files
 
 
 def raster_files(path: Path) -> tuple[Path, ...]:

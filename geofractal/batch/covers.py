@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import time
-from collections import Counter
-from collections.abc import Iterator
+from collections import Counter, defaultdict
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -60,18 +60,23 @@ class MeasuredCover:
         yield from zip(self.plan.works, self.parts, strict=True)
 
     @property
-    def figures(self) -> pa.Table:
-        """Return the table of figures of all measures."""
-        return pa.concat_tables([part.figures for part in self.parts])
+    def figures(self) -> dict[str, pa.Table]:
+        """Return the tables of figures, by how the names of their files begin."""
+        tables = defaultdict(list)
+        for stem, part in zip(self.plan.stems, self.parts, strict=True):
+            tables[stem].append(part.figures)
+        return {stem: pa.concat_tables(parts) for stem, parts in tables.items()}
 
     @property
-    def quantities(self) -> tuple[Column, ...]:
-        """Return what the table's quantities are, for the data dictionary."""
-        return tuple(
-            Column(q.name, q.short, q.kind, q.unit, q.meaning, q.formula, q.source)
-            for work in self.plan.works
-            for q in work.request.quantities()
-        )
+    def quantities(self) -> dict[str, tuple[Column, ...]]:
+        """Return what the quantities of each table are, for the data dictionary."""
+        told: dict[str, tuple[Column, ...]] = defaultdict(tuple)
+        for stem, work in zip(self.plan.stems, self.plan.works, strict=True):
+            told[f"{stem}_figures"] += tuple(
+                Column(q.name, q.short, q.kind, q.unit, q.meaning, q.formula, q.source)
+                for q in work.request.quantities()
+            )
+        return told
 
 
 def measure_cover(plan: CoverPlan, folder: Path, progress: Progress) -> MeasuredCover:
@@ -116,19 +121,21 @@ def write_cover(found: MeasuredCover, batch: Batch, progress: Progress) -> None:
     """
     begun = time.monotonic()
     folder = batch.outputs.folder
-    for word in batch.outputs.tables:
-        write_table(found.figures, found.plan.table(folder, word))
+    for stem, table in found.figures.items():
+        for word in batch.outputs.tables:
+            write_table(table, found.plan.table(folder, stem, word))
     if found.warping is not None:
         write_table(found.warping, found.plan.warping_file(folder))
-    for work, part in found.works:
+    for (work, part), stem in zip(found.works, found.plan.stems, strict=True):
         if part.patches is not None:
-            _write_patches(found.plan, work, part, batch, progress)
+            targets = found.plan.patch_files(batch, stem).values()
+            _write_patches(found.plan, work, part, targets, progress)
     found.files = found.plan.targets(batch)
     found.writing_s = time.monotonic() - begun
 
 
 def _write_patches(
-    plan: CoverPlan, work: CoverWork, part: CoverPart, batch: Batch, progress: Progress
+    plan: CoverPlan, work: CoverWork, part: CoverPart, targets: Iterable[Path], progress: Progress
 ) -> None:
     """Write the patches of a measure in each format; polygons of cells are drawn once, and kept."""
     from pyproj import CRS
@@ -141,7 +148,7 @@ def _write_patches(
         drawn, crs = part.patches.with_suffix(".polygons.parquet"), plan.raster.grid.crs
         if not drawn.exists():
             _draw(plan, work, part, drawn, progress)
-    for target in plan.patch_files(batch).values():
+    for target in targets:
         with pq.ParquetFile(drawn) as file:
             rows = file.metadata.num_rows
             shown = [name for name in file.schema_arrow.names if name not in INNER]
@@ -188,6 +195,7 @@ def cover_tally(work: CoverWork, part: CoverPart) -> dict[str, Any]:
     refused = sum(reasons.values())
     return {
         "measure": request.measure,
+        "prefix": request.prefix,
         "options": request.options.model_dump(mode="json", by_alias=True),
         "covers": list(request.covers),
         "zones": request.zones,
@@ -227,6 +235,7 @@ def cover_record(found: MeasuredCover) -> dict[str, Any]:
             },
             "cells_of_classes": found.parts[0].classes,
             "groups": {name: list(members) for name, members in plan.groups.items()},
+            "warnings": [grid.seam] if grid.seam else [],
         }
     return record | {
         "measures": [cover_tally(work, part) for work, part in found.works],

@@ -116,7 +116,7 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
             _write_ladders(done, batch, folder, progress)
         columns = {found.plan.name: found.plan.columns for found in whole}
         columns |= {table.name: table.columns for found in whole for table in found.plan.work.ladders}
-        columns |= {f"{found.plan.name}_figures": found.quantities for found in covers}
+        columns |= {table: held for found in covers for table, held in found.quantities.items()}
         write_data_dictionary(batch.outputs.folder, columns)
         write_refused_rows(batch.outputs.folder, whole)
         record = run_record(batch, whole, covers, failed, started)

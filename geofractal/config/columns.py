@@ -8,7 +8,7 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import Literal
 
-from geofractal.measure import Column, Quantity
+from geofractal.measure import ALL_COVERS, Column, Quantity
 
 _SHORT_BYTES = 10
 _NOTE = "why a figure is missing or limited; null where nothing is to be said"
@@ -34,15 +34,18 @@ def zone_columns(
 ) -> tuple[ZoneColumn, ...]:
     """Return a column for each class, quantity and border rule, intervals included, and one for notes.
 
-    Names are ``<class>_<quantity>_<rule>_low_<unit>``, of lower-case words, with the prefix before them.
+    Names are ``<class>_<quantity>_<rule>_low_<unit>``, of lower-case words, with the prefix before them;
+    what is given once for all classes has no class in its name.
     """
     slugs: set[str] = set()
     found: list[ZoneColumn] = []
     for place, cover in enumerate(covers, start=1):
         slug = _free(_slug(cover) or f"class_{place}", slugs, None)
         slugs.add(slug)
-        for quantity in quantities:
+        for quantity in (one for one in quantities if not one.together):
             found += _of_quantity(cover, slug, quantity)
+    for quantity in (one for one in quantities if one.together):
+        found += _of_quantity(ALL_COVERS, "", quantity)
     note = Column(f"{stem}_note", f"{stem[:5]}_note", "text", "", _NOTE)
     found.append(ZoneColumn(note, "", "", "", "note"))
     shorts: set[str] = set()

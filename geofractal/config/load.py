@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import os
 import warnings
+from collections import defaultdict
 from collections.abc import Collection, Iterator, Mapping
 from pathlib import Path
 from typing import Any, TypeVar
@@ -242,7 +243,7 @@ def _kind_problems(tree: YamlTree, requests: Mapping[KeyPath, Request]) -> Itera
     layers = _layers(tree)
     vectors = ", ".join(name for name in layers if kind_of_layer(layers[name]) == "vector") or "none"
     rasters = ", ".join(name for name in layers if kind_of_layer(layers[name]) == "raster") or "none"
-    asked: dict[tuple[str, str], KeyPath] = {}
+    asked: dict[tuple[str, str], dict[str | None, KeyPath]] = defaultdict(dict)
     for at, request in requests.items():
         is_map = kind_of_layer(layers.get(request.of)) == "raster"
         if isinstance(request, MeasureRequest):
@@ -250,11 +251,13 @@ def _kind_problems(tree: YamlTree, requests: Mapping[KeyPath, Request]) -> Itera
                 said = f"{request.measure} measures lines; {request.of!r} is a class map"
                 yield tree.problem((*at, "of"), said, allowed=vectors)
             continue
-        first = asked.setdefault((request.measure, request.of), at)
-        if first != at:
-            said = f"{request.measure} is asked of {request.of!r} already, at line {tree.values[first][0]}"
-            allowed = "once; to measure it in two ways, list the layer twice under two names"
+        earlier = asked[request.measure, request.of]
+        if earlier and (request.prefix is None or request.prefix in earlier):
+            line, _ = tree.values[earlier.get(request.prefix, next(iter(earlier.values())))]
+            said = f"{request.measure} is asked of {request.of!r} already, at line {line}"
+            allowed = "a prefix of its own, for the names of its files and columns"
             yield tree.problem((*at, "measure"), said, allowed=allowed)
+        earlier.setdefault(request.prefix, at)
         if not is_map and request.of in layers:
             yield from _polygon_problems(tree, at, request, rasters)
         elif request.class_column is not None and is_map:

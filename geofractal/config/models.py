@@ -215,7 +215,9 @@ class RequestHead(Section):
     measure: str = Field(description="what to measure; `geofractal measures` lists the words")
     of: str = Field(description="name of the layer to measure")
     prefix: Prefix | None = Field(
-        None, description="word set before the names of the new columns, where two measures would share one"
+        None,
+        description="word set before the names of the new columns, where two measures would share one; a "
+        "measure asked of one class map again also has it in the names of its files",
     )
 
 

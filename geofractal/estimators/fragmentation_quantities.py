@@ -17,9 +17,6 @@ CUT, ACROSS = "cut at the border", "across the border"
 CHANGES, ALL_EDGES = "class changes", "with zone and map borders"
 BOUNDS, OPEN = "map edge bounds", "map edge is open"
 
-ALL_COVERS = "all covers"
-"""Cover of figures that are those of all classes together."""
-
 JAEGER = "Jaeger 2000, Landscape Ecology 15:115-130"
 MOSER = "Moser et al. 2007, Landscape Ecology 22"
 SAURA = "Saura & Pascual-Hortal 2007; Saura et al. 2011"
@@ -36,7 +33,12 @@ FIXED = (
         "area of the class; of all covers: area with data; of barrier: cells that wide barriers take",
     ),
     Quantity(
-        "area_not_covered", "nodata", "amount", "km2", "area of the zone without data, off the map included"
+        "area_not_covered",
+        "nodata",
+        "amount",
+        "km2",
+        "area of the zone without data, off the map included",
+        together=True,
     ),
     Quantity("share", "share", "amount", "percent", "area of the class over all area with data"),
     Quantity("patches", "patches", "amount", "", f"number of {_SIZE}", border_rules=(CUT,)),

@@ -12,7 +12,6 @@ from numpy.typing import NDArray
 
 from geofractal.estimators.fragmentation_quantities import (
     ACROSS,
-    ALL_COVERS,
     ALL_EDGES,
     CHANGES,
     CUT,
@@ -21,7 +20,7 @@ from geofractal.estimators.fragmentation_quantities import (
 from geofractal.landcover.barriers import BARRIER
 from geofractal.landcover.covers import Pack, pack_groups
 from geofractal.landcover.patch_totals import Totals
-from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP
+from geofractal.measure import ALL_COVERS, FIGURE_COLUMNS, WHOLE_MAP
 
 if TYPE_CHECKING:
     import pandas as pd

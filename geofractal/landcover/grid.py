@@ -94,6 +94,16 @@ class Grid:
         """Return the columns of a full turn of longitude on an upright geographic grid."""
         return 2 * math.pi / self.unit / abs(self.transform[0])
 
+    @property
+    def seam(self) -> str:
+        """Return a word on a map that goes all around the Earth; empty for any other."""
+        if self.kind != "rows" or self.columns < self.full_turn - 0.5:
+            return ""
+        return (
+            "a map of all longitudes: its first and last columns are not joined, so patches that lie across "
+            "them are counted on either side and reach the map's edge"
+        )
+
     @cached_property
     def typical_cell(self) -> tuple[float, float]:
         """Return the median true width and height of a cell in metres."""
