@@ -61,7 +61,7 @@ class CoverPlan:
 
     @cached_property
     def stems(self) -> tuple[str, ...]:
-        """Return how the files of each measure are named: as the map; one asked again, with its prefix too."""
+        """Return how each measure's files are named: as the map, and one asked again with its prefix too."""
         met: set[str] = set()
         stems = []
         for request in (work.request for work in self.works):
