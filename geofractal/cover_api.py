@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+import warnings
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -10,12 +11,13 @@ import numpy as np
 from pydantic import ValidationError
 
 from geofractal.cover_map import RasterCover
-from geofractal.errors import ConfigError, LayerError
+from geofractal.errors import ConfigError, GeofractalWarning, LayerError
 from geofractal.estimators.fragmentation import Fragmentation, FragmentationOptions
-from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
 from geofractal.landcover.barriers import BARRIER, place_barriers
+from geofractal.landcover.polygon_zones import place_polygon_barriers, place_polygon_zones
 from geofractal.landcover.zones import place_zones
 from geofractal.patches import open_class_map
+from geofractal.polygon_cover import PolygonCover
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -44,17 +46,18 @@ def fragmentation(
     Parameters
     ----------
     source : a raster, as a path or as codes with transform and CRS; or a GeoDataFrame or GeoSeries of
-        polygons, of which amount and mesh size are measured
+        polygons, which are held at once and whose figures come from their exact boundaries; those that
+        need cells are null
     zones : GeoDataFrame or GeoSeries of polygons in any CRS, or a sequence of shapely polygons in the
-        source's own; cells belong to them by their centre. They may overlap
+        source's own; cells belong to them by their centre, polygons are cut. They may overlap
     zone_names : column of a GeoDataFrame, or one name a zone; numbers from 1 where left out
     barriers : lines, given as zones are: links between neighbouring cells whose centre line they cross are
-        cut. For rasters only
-    barrier_width_m : width of the barriers, one for all or one for each (None or 0: no width). Cells whose
-        centre lies within half of it are of no class but stay in the area with data, as the cover
-        ``barrier``; they bound other classes as another class does: edges to them are class changes, and
-        interior depth counts from them. A barrier narrower than a cell takes a cell here and there, and
-        cuts all the same
+        cut; polygons are parted by them
+    barrier_width_m : width of the barriers, one for all or one for each (None or 0: no width). Polygons less
+        the strip of that width, and cells whose centre lies within half of it, are of no class but stay in
+        the area with data, as the cover ``barrier``; they bound other classes as another class does: edges
+        to them are class changes, and interior depth counts from them. A barrier narrower than a cell takes
+        a cell here and there, and cuts all the same
     groups : name of a group -> its classes; each is measured as one class
     covers : classes and groups wanted; all of them where left out
     reading : how to read a raster
@@ -94,12 +97,15 @@ def fragmentation(
     names = () if zones is None else tuple(map(str, _names(zones, zone_names)))
     taken = {name: tuple(members) for name, members in (groups or {}).items()}
     if hasattr(source, "geometry"):
-        if barriers is not None:
-            raise ConfigError("Barriers cut links between cells; give the classes as a raster.")
-        layer = _polygon_layer(source, cover, zones)
-        return polygon_fragmentation(
-            replace(layer, extent=extent, zone_names=names, groups=taken, covers=tuple(covers)), chosen
-        )
+        layer = _polygon_layer(source, cover, zones, names, barriers, barrier_width_m)
+        layer = replace(layer, extent=extent, groups=taken, covers=tuple(covers))
+        depths = _bounding(chosen, barred=layer.barriers is not None and layer.barriers.wide)
+        known = dict.fromkeys(name for name in layer.classes if name is not None)
+        _refuse_twins(known, taken)
+        for key, name in _strangers(known, taken, covers, depths):
+            there = f"no polygon is of class {name!r}; there are {', '.join(known)}"
+            warnings.warn(f"{key}: {there}", GeofractalWarning, stacklevel=2)
+        return Fragmentation().measure(layer, chosen).figures
     opened = open_class_map(source, reading, {})
     own, grid = opened.source_grid.crs, opened.grid
     placed = None if zones is None else place_zones(grid, _geometries(zones), names, _crs(zones, own))
@@ -116,16 +122,29 @@ def _check_names(
     """Refuse names of classes that the raster cannot have, and groups named as classes."""
     known = list(legend.names if legend.closed else dict.fromkeys(legend.own_names.values()))
     free = not legend.closed and not known  # names are the codes that will be met
+    for key, name in _strangers(known, groups, covers, neighbours):
+        if not (free and name.lstrip("-").isdigit()):
+            there = ", ".join(known) or "codes as text, such as '1'"
+            raise ConfigError(f"{key}: the raster has no class {name!r}; there are {there}.")
+    _refuse_twins(known, groups)
+
+
+def _strangers(
+    known: Collection[str],
+    groups: Mapping[str, Sequence[str]],
+    covers: Iterable[str],
+    neighbours: Iterable[str],
+) -> Iterator[tuple[str, str]]:
+    """Yield names of classes that are not known, after the option that names them."""
     asked = {"groups": [name for members in groups.values() for name in members]}
     asked |= {
         "covers": [name for name in covers if name not in groups],
         "depth_by_neighbour_m": [*neighbours],
     }
-    for key, names in asked.items():
-        for name in names:
-            if name not in known and not (free and name.lstrip("-").isdigit()):
-                there = ", ".join(known) or "codes as text, such as '1'"
-                raise ConfigError(f"{key}: the raster has no class {name!r}; there are {there}.")
+    yield from ((key, name) for key, names in asked.items() for name in names if name not in known)
+
+
+def _refuse_twins(known: Collection[str], groups: Iterable[str]) -> None:
     if both := sorted(set(groups).intersection(known)):
         raise ConfigError(f"groups: {both[0]!r} is the name of a class already; choose another one.")
 
@@ -135,20 +154,30 @@ def _bounding(options: FragmentationOptions, *, barred: bool) -> list[str]:
     return [name for name in options.depth_by_neighbour_m if not (barred and name == BARRIER)]
 
 
-def _polygon_layer(source: Any, cover: str | Sequence[Any] | None, zones: Any) -> PolygonLayer:
-    """Return polygons with their classes, and zones in their CRS."""
+def _polygon_layer(
+    source: Any,
+    cover: str | Sequence[Any] | None,
+    zones: Any,
+    names: tuple[str, ...],
+    barriers: Any,
+    width: Any,
+) -> PolygonCover:
+    """Return polygons with their classes, and zones and barriers in their CRS."""
+    import pandas as pd
+    import pyproj
+
     if source.crs is None:
         raise LayerError("The polygons carry no CRS; give it with set_crs.")
+    own = pyproj.CRS.from_user_input(source.crs)
     column = ["all"] * len(source) if cover is None else source[cover] if isinstance(cover, str) else cover
-    moved = zones.to_crs(source.crs) if hasattr(zones, "to_crs") and zones.crs is not None else zones
-    geometries = np.array([*source.geometry, None], object)[:-1]
-    return PolygonLayer(
-        geometries,
-        [str(name) for name in column],
-        source.crs,
-        None,
-        () if zones is None else _geometries(moved),
-    )
+    polygons = np.array([*source.geometry, None], object)[:-1]
+    placed = lines = None
+    if zones is not None:
+        placed = place_polygon_zones(_geometries(zones), names, _crs(zones, own), polygons, own)
+    if barriers is not None:
+        lines = place_polygon_barriers(_geometries(barriers), _crs(barriers, own), own, width)
+    classes = np.array([*(None if pd.isna(name) else str(name) for name in column), None], object)[:-1]
+    return PolygonCover(polygons, classes, own, zones=placed, barriers=lines)
 
 
 def _frozen(value: Any) -> Any:

@@ -8,14 +8,14 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from geofractal.errors import ConfigError, LayerError
+from geofractal.errors import ConfigError
 from geofractal.landcover.barriers import BARRIER, Barriers
 from geofractal.landcover.covers import Pack, pack_groups
 from geofractal.landcover.perimeter import Perimeter
 from geofractal.landcover.strips import NOT_COVERED, Strip
 from geofractal.landcover.zones import ZonePainter, Zones
 from geofractal.measure import CoverPatches, Outline
-from geofractal.patches import patch_frames, polygon_patches
+from geofractal.patches import patch_frames
 from geofractal.reader.raster import Raster
 from geofractal.reader.raster_classes import Legend
 
@@ -156,55 +156,3 @@ def _only(pack: Pack, strips: Iterator[Strip]) -> Iterator[Strip]:
     for strip in strips:
         other = strip.codes == len(pack.names)
         yield replace(strip, codes=np.where(other, np.int16(NOT_COVERED), strip.codes))
-
-
-@dataclass(frozen=True)
-class PolygonCover:
-    """A layer of polygons as measures get it: see `geofractal.measure.CoverMap`.
-
-    Attributes
-    ----------
-    geometries : (n,) shapely geometries
-    classes : (n,) class of each, None where all are one class
-    crs : of the polygons
-    dissolve : whether polygons of one class that overlap or share a boundary are one patch
-    left_out : why geometries are in no patch, and how many; known once patches were asked for
-    """
-
-    geometries: Any
-    classes: Any
-    crs: Any
-    covers: tuple[str, ...] = ()
-    dissolve: bool = True
-    left_out: dict[str, int] = field(default_factory=dict)
-    raster: None = None
-    zones: None = None
-    barriers: None = None
-    groups: dict[str, tuple[str, ...]] = field(default_factory=dict)
-
-    def patches(
-        self,
-        *,
-        neighbours: int = 8,
-        perimeter: Outline = "cell-edges",
-        map_edge: bool = True,  # noqa: ARG002 - polygons have none
-    ) -> Iterator[CoverPatches]:
-        """Yield the patches of all polygons."""
-        import pandas as pd
-
-        if perimeter == "smoothed":
-            raise LayerError("perimeter: smoothed is for class maps; polygons have no cells to smooth.")
-        table = polygon_patches(
-            self.geometries,
-            crs=self.crs,
-            cover=self.classes,
-            neighbours=neighbours,
-            dissolve=self.dissolve,
-            perimeter=perimeter,
-        )
-        self.left_out.update(table.attrs["left_out"])
-        names = self.covers or tuple(table["cover"].cat.categories)
-        table = table[table["cover"].isin(names)].reset_index(drop=True)
-        yield CoverPatches(
-            table.assign(cover=table["cover"].cat.set_categories(pd.Index(names, dtype=str))), ()
-        )

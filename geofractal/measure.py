@@ -325,7 +325,8 @@ class CoverMeasure(ABC, Generic[O]):
 
     Class attributes are those of `Measure`, and
 
-    from_polygons : whether the patches of a polygon layer will do, for which `CoverMap.raster` is None
+    from_polygons : whether a polygon layer will do, for which `CoverMap.raster` is None
+    dissolves : whether polygons of a class that touch are always one
     """
 
     name: ClassVar[str]
@@ -335,6 +336,7 @@ class CoverMeasure(ABC, Generic[O]):
     stem: ClassVar[str]
     needs: ClassVar[Literal["cover"]] = "cover"
     from_polygons: ClassVar[bool] = False
+    dissolves: ClassVar[bool] = False
     version: ClassVar[int] = 1
     options: ClassVar[type[Options]]
 

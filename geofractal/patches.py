@@ -19,6 +19,8 @@ from geofractal.reader.raster_source import ClassMap, Path
 if TYPE_CHECKING:
     import pandas as pd
 
+    from geofractal.landcover.polygons import PolygonPatches
+
 RasterLike = Path | ClassMap | tuple[NDArray[Any], Any, Any]
 """A path that GDAL reads, a `ClassMap`, or (codes, transform, crs)."""
 
@@ -264,7 +266,6 @@ def polygon_patches(
     LayerError
         where no CRS is known
     """
-    import pandas as pd
     import pyproj
 
     from geofractal.landcover.polygons import find_polygon_patches
@@ -283,6 +284,13 @@ def polygon_patches(
     found = find_polygon_patches(
         shapes, names, pyproj.CRS.from_user_input(own or crs), neighbours=neighbours, dissolve=dissolve
     )
+    return polygon_table(found, perimeter, extent)
+
+
+def polygon_table(found: PolygonPatches, perimeter: Outline, extent: Any) -> pd.DataFrame:
+    """Return patches of polygons in the columns of `polygon_patches`."""
+    import pandas as pd
+
     touches = [extent is not None and bool(extent.boundary.intersects(one)) for one in found.geometry]
     outer = perimeter == "outer-cell-edges"
     table = pd.DataFrame(

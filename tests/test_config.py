@@ -115,6 +115,7 @@ def test_what_is_left_out_has_the_stated_defaults(load):
                 "group-by": None,
                 "where": None,
                 "encoding": None,
+                "groups": {},
                 "edges": "straight",
                 "prepare": {
                     "repair": False,
@@ -186,7 +187,7 @@ def test_an_alias_repeats_what_it_names(load):
 # One problem at a time
 
 
-LAYER_KEYS = "source, layer, crs, override-crs, id, group-by, where, encoding, edges, prepare"
+LAYER_KEYS = "source, layer, crs, override-crs, id, group-by, where, encoding, groups, edges, prepare"
 TOP_KEYS = "batch, layers, projection, outputs, run, measures"
 SPACING_KEYS = "measure, of, prefix, quantile, also-quantiles"
 PREPARE_KEYS = "repair, join-within-m, drop-repeated, boundaries, branches"

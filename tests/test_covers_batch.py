@@ -573,7 +573,6 @@ LAYERS = {"cover": layer(), "zones": zones(), "rivers": {"source": "rivers.gpkg"
         ({**FRAGMENTATION, "zones": "zone"}, r"no layer 'zone' is defined.*did you mean 'zones'"),
         ({**FRAGMENTATION, "barriers": ["river"]}, r"barriers\[0\]: no layer 'river'.*did you mean 'rivers'"),
         ({**FRAGMENTATION, "zones": "cover"}, r"zones: 'cover' is a class map; allowed: zones, rivers"),
-        ({**FRAGMENTATION, "of": "zones"}, "fragmentation measures class maps; 'zones' is no raster"),
         ({**FRAGMENTATION, "zones": "rivers"}, "zones are polygons; layer 'rivers' holds lines"),
         ({**FRAGMENTATION, "barriers": ["zones"]}, "barriers are lines; layer 'zones' holds polygons"),
         ({**FRAGMENTATION, "barriers": [3]}, r"barriers\[0\]: found 3; allowed: the name of a layer, or"),
@@ -607,7 +606,6 @@ LAYERS = {"cover": layer(), "zones": zones(), "rivers": {"source": "rivers.gpkg"
             "'zones' belongs to measures of class maps",
         ),
         ({**DIMENSION, "of": "rivers"}, "takes patches from polygons; layer 'rivers' holds lines"),
-        ({**DIMENSION, "of": "zones", "zones": "zones"}, "zones are for class maps"),
         ({**DIMENSION, "filled": True}, "filled: true goes with perimeter: outer-cell-edges only"),
     ],
 )

@@ -90,6 +90,7 @@ COVERED_ELSEWHERE = {
     ("layer", "override_crs"): "test_a_stated_crs_is_taken_and_one_that_contradicts_is_refused",
     ("layer", "id"): "test_refused_rows_are_listed_by_their_id",
     ("layer", "encoding"): "test_a_stated_encoding_reads_the_text_right",
+    ("layer", "groups"): "test_zones_and_groups_give_the_figures_of_the_raster_of_the_same_map",
     ("outputs", "folder"): "test_the_folder_is_where_results_go",
     ("outputs", "tables"): "test_ladder_tables.py, test_covers_batch.py",
     ("run", "workers"): "test_batch.py: results do not depend on it",

@@ -93,7 +93,11 @@ def _cover_lines(plan: Plan, cover: CoverPlan) -> Iterator[str]:
             yield f"  warning: {grid.seam}"
         known = legend.names if legend.closed else [*dict.fromkeys(legend.own_names.values())]
         yield f"  classes: {', '.join(known) or 'the codes that are met'}"
-        yield from (f"  group {name}: {', '.join(members)}" for name, members in cover.groups.items())
+    if cover.ground is not None:
+        yield f"  CRS: {cover.ground.crs.name}"
+        told = f"  distances between polygons are off by {_percent(cover.ground.distortion)} at most on the"
+        yield f"{told} {cover.ground.name} plane; budget: {cover.budget_percent:g} %"
+    yield from (f"  group {name}: {', '.join(members)}" for name, members in cover.groups.items())
     for work in cover.works:
         yield from _work_lines(work)
     yield from (f"  file: {target}" for target in cover.targets(plan.batch))

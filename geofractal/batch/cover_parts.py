@@ -15,15 +15,21 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
-from geofractal.batch.cover_plan import CoverPlan, CoverWork
-from geofractal.batch.zone_layers import barriers_of, read_rows, zones_of
-from geofractal.cover_map import PolygonCover, RasterCover
+from geofractal.batch.cover_plan import CoverPlan, CoverWork, class_values
+from geofractal.batch.zone_layers import (
+    barriers_of,
+    polygon_barriers_of,
+    polygon_zones_of,
+    read_rows,
+    zones_of,
+)
+from geofractal.cover_map import RasterCover
 from geofractal.kernels.codes import count_codes
 from geofractal.landcover.strips import Strip
 from geofractal.measure import FIGURE_COLUMNS, CoverMap, Ints
+from geofractal.polygon_cover import PolygonCover
 from geofractal.progress import Stage
 from geofractal.reader.raster import Raster
-from geofractal.reader.vector import stream
 from geofractal.registry import load_cover_measure
 from geofractal.versions import code_digest
 from geofractal.writer.commit import flush, in_plain_words
@@ -35,7 +41,6 @@ if TYPE_CHECKING:
 
     import pandas as pd
 
-    from geofractal.batch.plan import LayerPlan
 
 Prints = Mapping[Path, Fingerprint]
 """Fingerprints of the files that a batch reads."""
@@ -126,7 +131,7 @@ def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
     said = [code_digest(), request.measure, str(measure.version), request.options.model_dump_json()]
     said += [repr(request.covers), repr(plan.groups), repr((request.class_column, request.dissolve))]
     said += [repr([one.width_m for one in request.barriers])]
-    said += [] if plan.raster is None else [repr(plan.raster.options)]
+    said.append(repr(plan.budget_percent if plan.raster is None else plan.raster.options))
     said += [prints[file].sha256 for file in plan.files]
     for layer in (*((plan.polygons,) if plan.polygons else ()), *work.layers):
         held = layer.layer
@@ -182,7 +187,7 @@ def _named(zones: Any, what: str) -> dict[str, Any]:
 def open_cover(plan: CoverPlan, work: CoverWork, told: Callable[[Strip], None]) -> CoverMap:
     """Return the map of a part as its measure gets it; `told` hears of every strip that is read."""
     if plan.polygons is not None:
-        return _polygons(plan.polygons, work)
+        return _polygons(plan, work)
     assert plan.raster is not None
     watched = WatchedRaster(
         **{name: getattr(plan.raster, name) for name in Raster.__dataclass_fields__}, told=told
@@ -194,17 +199,27 @@ def open_cover(plan: CoverPlan, work: CoverWork, told: Callable[[Strip], None]) 
     return RasterCover(watched, zones, barriers, plan.groups, work.request.covers)
 
 
-def _polygons(plan: LayerPlan, work: CoverWork) -> PolygonCover:
+def _polygons(plan: CoverPlan, work: CoverWork) -> PolygonCover:
     from pyproj import CRS
 
-    rows = read_rows(plan)
+    assert plan.polygons is not None
+    info, rows, request = plan.polygons.info, read_rows(plan.polygons), work.request
     classes = None
-    if (column := work.request.class_column) is not None:
-        held = [batch.attributes.column(column).to_pylist() for batch in stream(plan.info, columns=[column])]
-        classes = np.array([str(value) for part in held for value in part], object)[rows.wanted]
-    crs = CRS.from_user_input(plan.info.crs)
-    geometries, request = rows.geometries[rows.wanted], work.request
-    return PolygonCover(geometries, classes, crs, request.covers, request.dissolve)
+    if request.class_column is not None:
+        classes = np.array([*class_values(info, request.class_column), None], object)[:-1][rows.wanted]
+    crs, polygons = CRS.from_user_input(info.crs), rows.geometries[rows.wanted]
+    widths = [one.width_m for one in request.barriers]
+    return PolygonCover(
+        polygons,
+        classes,
+        crs,
+        request.covers,
+        request.dissolve,
+        None if work.zones is None else polygon_zones_of(work.zones, polygons, crs),
+        polygon_barriers_of(work.barriers, widths, crs) if work.barriers else None,
+        plan.groups,
+        budget=plan.budget_percent / 100,
+    )
 
 
 def _patch_table(patches: pd.DataFrame) -> pa.Table:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -10,11 +11,15 @@ from typing import TYPE_CHECKING
 
 from geofractal.config.models import Batch, CoverRequest, RasterLayer
 from geofractal.config.wording import near_match
+from geofractal.config.yaml_tree import KeyPath
 from geofractal.cover_map import OWN_BARRIER
-from geofractal.errors import ConfigError, LayerError, Problem, SourceError
+from geofractal.errors import ConfigError, GeofractalWarning, LayerError, Problem, SourceError
 from geofractal.landcover.barriers import BARRIER
+from geofractal.reader.ground import GroundPlane
+from geofractal.reader.layers import LayerInfo, allowed
 from geofractal.reader.raster import Raster, RasterOptions, open_raster
 from geofractal.reader.raster_source import open_source
+from geofractal.reader.vector import stream
 
 if TYPE_CHECKING:
     from geofractal.batch.plan import LayerPlan
@@ -45,6 +50,16 @@ class CoverPlan:
     polygons: LayerPlan | None
     groups: dict[str, tuple[str, ...]]
     works: tuple[CoverWork, ...]
+    budget_percent: float
+
+    @cached_property
+    def ground(self) -> GroundPlane | None:
+        """Return the plane that distances between polygons are measured on; None of a layer without rows."""
+        if self.polygons is None or (bounds := self.polygons.info.bounds) is None:
+            return None
+        from pyproj import CRS
+
+        return GroundPlane(CRS.from_user_input(self.polygons.info.crs), bounds, self.budget_percent / 100)
 
     @cached_property
     def files(self) -> tuple[Path, ...]:
@@ -120,6 +135,7 @@ def plan_covers(
 ) -> tuple[CoverPlan, ...]:
     """Look at every class map's header; what cannot be read goes to `failed`, what is wrong to `problems`."""
     plans: list[CoverPlan] = []
+    budget = batch.projection.budget_percent
     for name, layer in batch.layers.items():
         requests = batch.cover_requests_of(name)
         if not requests or name in failed:
@@ -129,9 +145,11 @@ def plan_covers(
             if isinstance(layer, RasterLayer):
                 raster = open_raster(layer.source, reading_options(layer, batch))
                 problems += _cover_problems(batch, name, layer, raster)
-                plans.append(CoverPlan(name, raster, None, dict(layer.groups), works))
+                plans.append(CoverPlan(name, raster, None, dict(layer.groups), works, budget))
             else:
-                plans.append(CoverPlan(name, None, vectors[name], {}, works))
+                plan = CoverPlan(name, None, vectors[name], dict(layer.groups), works, budget)
+                problems += _class_problems(batch, plan)
+                plans.append(plan)
         except SourceError as error:
             failed[name] = error
         except ConfigError as error:
@@ -204,3 +222,62 @@ def _cover_problems(batch: Batch, name: str, layer: RasterLayer, raster: Raster)
             if unknown(cover, names):
                 said, allowed, near = told(cover, names)
                 yield batch.problem(("measures", index, *at), said, allowed=allowed, near=near)
+
+
+def class_values(info: LayerInfo, column: str) -> Iterator[str | None]:
+    """Yield the class of each polygon of a layer; None where it has none."""
+    for part in stream(info, columns=[column]):
+        held = part.attributes.column(column).to_pylist()
+        yield from (None if value is None else str(value) for value in held)
+
+
+def _class_problems(batch: Batch, plan: CoverPlan) -> Iterator[Problem]:
+    """Yield columns of classes that a layer of polygons lacks, and groups that are classes already.
+
+    Warns
+    -----
+    GeofractalWarning
+        for a class that groups or measures name and no polygon is of: it may be gone, or be misspelt
+    """
+    assert plan.polygons is not None
+    info, known = plan.polygons.info, dict[str | None, None]()
+    asked = [
+        (index, request)
+        for index, request in enumerate(batch.measures)
+        if isinstance(request, CoverRequest) and request.of == plan.name
+    ]
+    for index, request in asked:
+        column = request.class_column
+        if column is not None and column not in info.field_names:
+            said = f"{info.path}: layer {info.layer!r} has no column {column!r}"
+            words = f"{said}; {allowed(info.field_names, column)}"
+            yield batch.problem(("measures", index, "class-column"), words)
+            return
+    for column in dict.fromkeys(request.class_column for _, request in asked):
+        known |= {"all": None} if column is None else dict.fromkeys(class_values(info, column))
+    classes = [name for name in known if name is not None]
+    for index, request in asked:
+        taking = [place for place, one in enumerate(request.barriers) if one.width_m]
+        if taking and BARRIER in (*classes, *plan.groups):
+            yield batch.problem(("measures", index, "barriers", taking[0]), OWN_BARRIER)
+    for group in plan.groups:
+        if group in known:
+            said = f"{group!r} is the name of a class already"
+            yield batch.problem(("layers", plan.name, "groups", group), said, allowed="another name")
+    for at, name in _classes_named(batch, plan):
+        if name not in known:
+            said = f"no polygon of {plan.name!r} is of class {name!r}"
+            problem = batch.problem(at, said, allowed=", ".join(classes), near=near_match(name, classes))
+            warnings.warn(str(problem), GeofractalWarning, stacklevel=2)
+
+
+def _classes_named(batch: Batch, plan: CoverPlan) -> Iterator[tuple[KeyPath, str]]:
+    """Yield where groups and measures of a layer name classes."""
+    for group, members in plan.groups.items():
+        for place, member in enumerate(members):
+            yield ("layers", plan.name, "groups", group, place), member
+    for index, request in enumerate(batch.measures):
+        if isinstance(request, CoverRequest) and request.of == plan.name:
+            for place, cover in enumerate(request.covers):
+                if cover not in plan.groups:
+                    yield ("measures", index, "covers", place), cover

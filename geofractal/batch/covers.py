@@ -234,10 +234,19 @@ def cover_record(found: MeasuredCover) -> dict[str, Any]:
                 "own_distortion_percent": 100.0 * source.distortion,
             },
             "cells_of_classes": found.parts[0].classes,
-            "groups": {name: list(members) for name, members in plan.groups.items()},
             "warnings": [grid.seam] if grid.seam else [],
         }
+    if plan.ground is not None:
+        record |= {
+            "geometry": "polygons",
+            "crs": {"name": plan.ground.crs.name, "wkt": plan.ground.crs.to_wkt()},
+            "distances": {
+                "measured_on": plan.ground.name,
+                "distortion_percent": 100.0 * plan.ground.distortion,
+            },
+        }
     return record | {
+        "groups": {name: list(members) for name, members in plan.groups.items()},
         "measures": [cover_tally(work, part) for work, part in found.works],
         "files": [str(path) for path in found.files],
         "seconds": {"measuring": round(found.seconds, 3), "writing": round(found.writing_s, 3)},

@@ -13,11 +13,19 @@ from geofractal.batch.parts import NOT_WANTED
 from geofractal.errors import LayerError
 from geofractal.landcover.barriers import Barriers, joined, place_barriers
 from geofractal.landcover.grid import Grid
+from geofractal.landcover.polygon_zones import (
+    PolygonBarriers,
+    PolygonZones,
+    place_polygon_barriers,
+    place_polygon_zones,
+)
 from geofractal.landcover.zones import Zones, place_zones
 from geofractal.measure import WHOLE_MAP, Ints
 from geofractal.reader.vector import stream
 
 if TYPE_CHECKING:
+    from pyproj import CRS
+
     from geofractal.batch.plan import LayerPlan
 
 
@@ -98,6 +106,18 @@ def zones_of(plan: LayerPlan, rows: Rows, grid: Grid) -> Zones:
     LayerError
         two zones have one name, or there is no way from their CRS to the grid's
     """
+    return place_zones(grid, rows.geometries[rows.wanted], _zone_names(plan, rows), _crs(plan))
+
+
+def polygon_zones_of(plan: LayerPlan, polygons: Any, crs: CRS) -> PolygonZones:
+    """Return the wanted rows of a layer as zones of polygons, as `zones_of`."""
+    rows = read_rows(plan)
+    names = _zone_names(plan, rows)
+    return place_polygon_zones(rows.geometries[rows.wanted], names, _crs(plan), polygons, crs)
+
+
+def _zone_names(plan: LayerPlan, rows: Rows) -> list[str]:
+    """Return the names of the wanted rows, of which none may be another's or that of the whole map."""
     names = [name for name, wanted in zip(rows.names, rows.wanted, strict=True) if wanted]
     twice = sorted(name for name, count in Counter([*names, WHOLE_MAP]).items() if count > 1)
     if twice:
@@ -106,7 +126,19 @@ def zones_of(plan: LayerPlan, rows: Rows, grid: Grid) -> Zones:
         raise LayerError(
             f"{plan.info.path}: layer {plan.info.layer!r}: {column} {said}; zones need own names"
         )
-    return place_zones(grid, rows.geometries[rows.wanted], names, _crs(plan))
+    return names
+
+
+def polygon_barriers_of(plans: Sequence[LayerPlan], widths_m: Sequence[float], crs: CRS) -> PolygonBarriers:
+    """Return the wanted rows of some layers as barriers of polygons, as `barriers_of`."""
+    lines, strips, left_out = [np.empty(0, object)], [np.empty(0, object)], Counter[str]()
+    for plan, width_m in zip(plans, widths_m, strict=True):
+        rows = read_rows(plan)
+        placed = place_polygon_barriers(rows.geometries[rows.wanted], _crs(plan), crs, width_m)
+        lines.append(placed.lines)
+        strips.append(placed.strips)
+        left_out.update(placed.left_out)
+    return PolygonBarriers(np.concatenate(lines), np.concatenate(strips), dict(left_out))
 
 
 def barriers_of(plans: Sequence[LayerPlan], widths_m: Sequence[float], grid: Grid) -> Barriers:

@@ -272,14 +272,19 @@ def _kind_problems(tree: YamlTree, requests: Mapping[KeyPath, Request]) -> Itera
 
 def _polygon_problems(tree: YamlTree, at: KeyPath, request: CoverRequest, rasters: str) -> Iterator[Problem]:
     """Yield what a measure of class maps cannot do with a layer of polygons."""
-    if not load_cover_measure(request.measure).from_polygons:
+    measure = load_cover_measure(request.measure)
+    if not measure.from_polygons:
         said = f"{request.measure} measures class maps; {request.of!r} is no raster"
         yield tree.problem((*at, "of"), said, allowed=rasters)
         return
-    for key, value in (("zones", request.zones), ("barriers", request.barriers)):
-        if value:
-            said = f"{request.of!r} is a layer of polygons; {key} are for class maps"
-            yield tree.problem((*at, key), said, on_key=True)
+    if not request.dissolve and (measure.dissolves or request.barriers):
+        why = "barriers part" if request.barriers else f"{request.measure} takes"
+        said = f"dissolve: false keeps polygons that touch apart; {why} those of a class as one"
+        yield tree.problem((*at, "dissolve"), said, allowed="true")
+    groups = _layers(tree)[request.of].get("groups")
+    if groups and request.class_column is None:
+        said = f"the groups of {request.of!r} are of classes, and no column names the class of a polygon"
+        yield tree.problem((*at, "measure"), said, allowed="the key class-column beside it", on_key=True)
 
 
 def _unused_layers(tree: YamlTree) -> Iterator[Problem]:

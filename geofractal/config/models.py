@@ -153,6 +153,11 @@ class VectorLayer(Section):
     encoding: Annotated[Text, AfterValidator(_known_encoding)] | None = Field(
         None, description="encoding of text in a Shapefile that states it wrongly or not at all"
     )
+    groups: dict[Text, tuple[Text, ...]] = Field(
+        {},
+        description="names for several classes of polygons taken together, such as habitat, where a class "
+        "column is named",
+    )
     edges: Literal["straight", "geodesic"] = Field(
         "straight", description="edges between vertices: straight in the layer's CRS, or geodesics"
     )
@@ -252,8 +257,9 @@ class BarrierLayer(Section):
     width_m: float = Field(
         0.0,
         ge=0,
-        description="width of the lines in metres. Cells whose centre lies within half of it are of no class "
-        "but stay in the area with data, as the cover barrier, and bound other classes as another class does",
+        description="width of the lines in metres. Cells whose centre lies within half of it, and the strip "
+        "of that width of polygons, are of no class but stay in the area with data, as the cover barrier, "
+        "and bound other classes as another class does",
     )
 
 
@@ -286,7 +292,7 @@ class CoverHead(RequestHead):
         "{layer: name, width-m: metres}",
     )
     class_column: Text | None = Field(
-        None, description="column that names the class of each polygon, where patches come from polygons"
+        None, description="column that names the class of each polygon, of a layer of polygons"
     )
     dissolve: bool = Field(
         True, description="make polygons of one class that overlap or share a boundary one patch"

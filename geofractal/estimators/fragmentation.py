@@ -6,7 +6,7 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import partial
-from typing import Annotated, Any, ClassVar, Literal
+from typing import Annotated, Any, ClassVar, Literal, cast
 
 import numpy as np
 from pydantic import Field
@@ -14,6 +14,7 @@ from pydantic import Field
 from geofractal.estimators import fragmentation_quantities as words
 from geofractal.estimators.fragmentation_cells import CellFigures
 from geofractal.estimators.fragmentation_links import link_figures
+from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
 from geofractal.estimators.fragmentation_table import Figures, Reporting
 from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.covers import Pack
@@ -69,6 +70,8 @@ class Fragmentation(CoverMeasure[FragmentationOptions]):
     sources: ClassVar[tuple[str, ...]] = (words.JAEGER, words.MOSER, words.SAURA, words.PLOTNICK)
     version: ClassVar[int] = 2
     stem: ClassVar[str] = "fragmentation"
+    from_polygons: ClassVar[bool] = True
+    dissolves: ClassVar[bool] = True
     options: ClassVar[type[Options]] = FragmentationOptions
 
     def quantities(self, options: FragmentationOptions) -> tuple[Quantity, ...]:
@@ -77,6 +80,8 @@ class Fragmentation(CoverMeasure[FragmentationOptions]):
 
     def measure(self, cover: CoverMap, options: FragmentationOptions) -> CoverResult:
         """Measure classes in one reading for each set of zones, then what was asked for beyond."""
+        if cover.raster is None:
+            return CoverResult(polygon_fragmentation(cast("PolygonLayer", cover), options))
         figures = Figures(about(cover), options)
         for pack in figures.about.packs():
             totals = count_patches(cover, pack, options)
@@ -140,6 +145,10 @@ class MapTotals:
         """Return twice the length of class-change edges, in the grid's unit."""
         zoned = unit < self.whole and kind < self.shared.shape[1]
         return 2 * self.of(unit, kind).inner_edge + (int(self.shared[unit, kind]) if zoned else 0)
+
+    def twice_all_edges(self, unit: int) -> int:
+        """Return twice the length of edges between any two covers, each of which has them."""
+        return sum(self.twice_edge(unit, kind) for kind in range(self.patches.classes)) // 2
 
     def covered(self, unit: int) -> int:
         """Return the covered area of a unit, in the grid's unit."""

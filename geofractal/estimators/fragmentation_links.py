@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +18,20 @@ if TYPE_CHECKING:
     from geofractal.landcover.covers import Pack
     from geofractal.landcover.grid import Ints
     from geofractal.measure import CoverMap
+
+
+class Links(Protocol):
+    """How far patches are from each other, such as `geofractal.landcover.connectivity.Distances`."""
+
+    def nearest(self, wanted: Ints) -> NDArray[np.float64]:
+        """Return the gap from each wanted patch to the nearest other one; infinite for a lone patch."""
+
+    def within_reach(self, wanted: Ints, most: float) -> Ints:
+        """Return the patches whose box is within `most` metres of the box of all wanted ones."""
+
+    def costs(self, chosen: Ints, dispersal_m: float) -> NDArray[np.float64]:
+        """Return -ln p between every two chosen patches, infinite beyond reach."""
+
 
 LONE = "a lone patch has no other one"
 ABSENT = "no patch of this class"
@@ -50,12 +64,12 @@ def link_figures(
         if found is None:
             for unit in figures.measured():
                 patches = totals.of(unit, kind).patches
-                reason = TOO_MUCH if 0 < patches <= options.most_patches else _many(patches, options)
-                _add_null(figures, unit, name, options, reason if patches else ABSENT)
+                reason = TOO_MUCH if 0 < patches <= options.most_patches else many(patches, options)
+                add_null(figures, unit, name, options, reason if patches else ABSENT)
             continue
         links = Distances(found, top, width)
         for unit, inside in _parts(found, cover, totals).items():
-            _add_unit(figures, unit, name, options, links, inside, grid.area_unit_m2)
+            add_unit(figures, unit, name, options, links, inside, grid.area_unit_m2)
 
 
 def _parts(found: PatchRuns, cover: CoverMap, totals: MapTotals) -> dict[int, tuple[Ints, Ints]]:
@@ -70,29 +84,32 @@ def _parts(found: PatchRuns, cover: CoverMap, totals: MapTotals) -> dict[int, tu
     return parts
 
 
-def _many(patches: int, options: FragmentationOptions) -> str:
+def many(patches: int, options: FragmentationOptions) -> str:
+    """Say that a class has more patches than allowed."""
     return f"{patches} patches, more than most-patches ({options.most_patches})"
 
 
-def _add_null(figures: Figures, unit: int, name: str, options: FragmentationOptions, note: str) -> None:
+def add_null(figures: Figures, unit: int, name: str, options: FragmentationOptions, note: str) -> None:
+    """Add the rows of distances and connected area without a figure."""
     for quantity in words.NEAREST if options.distances else ():
         figures.add(unit, name, quantity.name, math.nan, note=note)
     for quantity in words.CONNECTED if options.dispersal_m is not None else ():
         figures.add(unit, name, quantity.name, math.nan, note=note)
 
 
-def _add_unit(
+def add_unit(
     figures: Figures,
     unit: int,
     name: str,
     options: FragmentationOptions,
-    links: Distances,
+    links: Links,
     inside: tuple[Ints, Ints],
     area_unit_m2: float,
 ) -> None:
+    """Add the rows of distances and connected area of a unit: its patches and what of each lies inside."""
     patches, areas = inside
     if len(patches) == 0 or len(patches) > options.most_patches:
-        _add_null(figures, unit, name, options, _many(len(patches), options) if len(patches) else ABSENT)
+        add_null(figures, unit, name, options, many(len(patches), options) if len(patches) else ABSENT)
         return
     if options.distances:
         nearest = links.nearest(patches)
@@ -111,7 +128,7 @@ def _add_connected(
     unit: int,
     name: str,
     options: FragmentationOptions,
-    links: Distances,
+    links: Links,
     patches: Ints,
     areas: NDArray[np.floating[Any]],
 ) -> None:
@@ -119,7 +136,7 @@ def _add_connected(
     chosen = links.within_reach(patches, reach(options.dispersal_m))
     names = [quantity.name for quantity in words.CONNECTED]
     if len(chosen) > options.most_patches:
-        note = f"{_many(len(chosen), options)}, with those outside that paths may use"
+        note = f"{many(len(chosen), options)}, with those outside that paths may use"
         for quantity in names:
             figures.add(unit, name, quantity, math.nan, note=note)
         return

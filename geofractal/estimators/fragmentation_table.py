@@ -46,6 +46,7 @@ class Reporting:
     overlaps : numbers of the zones that share an area with each
     outside_m2 : area of each zone off the map
     barred : whether the map has cells that barriers took, of the class `BARRIER`
+    said : of each unit, what is to be said beside its area; the whole map is the last
     """
 
     classes: Sequence[str]
@@ -59,6 +60,7 @@ class Reporting:
     overlaps: Sequence[tuple[int, ...]] = ()
     outside_m2: Sequence[float] | NDArray[np.float64] = ()
     barred: bool = False
+    said: Sequence[str] = ()
 
     def packs(self) -> tuple[Pack, ...]:
         """Return what is measured together: classes, then groups, as far as asked for."""
@@ -94,8 +96,11 @@ class UnitTotals(Protocol):
     def uncovered(self, unit: int) -> int:
         """Return the area of a unit without data, but for what lies off the map."""
 
-    def twice_edge(self, unit: int, kind: int) -> int | None:
-        """Return twice the length of class-change edges, None where edges are not measured."""
+    def twice_edge(self, unit: int, kind: int) -> int:
+        """Return twice the length of class-change edges of a cover."""
+
+    def twice_all_edges(self, unit: int) -> int:
+        """Return twice the length of edges between any two covers."""
 
 
 class Figures:
@@ -155,28 +160,25 @@ class Figures:
             for kind, name in self.about.wanted(pack):
                 one = totals.of(unit, kind)
                 self._add_amount(unit, name, one, covered)
-                twice = totals.twice_edge(unit, kind)
-                if twice is not None:
-                    self._add_edge(unit, name, CHANGES, twice / 2, covered)
-                    self._add_edge(unit, name, ALL_EDGES, one.outer_edge, covered)
+                self._add_edge(unit, name, CHANGES, totals.twice_edge(unit, kind) / 2, covered)
+                self._add_edge(unit, name, ALL_EDGES, one.outer_edge, covered)
                 self._add_mesh(unit, name, one, covered)
 
     def _add_all(self, unit: int, pack: Pack, totals: UnitTotals, covered: int) -> None:
         """Add area with and without data, and edges between any classes where these are told apart."""
         is_zone = unit < len(self.about.zones)
         others = self.about.overlaps[unit] if is_zone else ()
-        note = "overlaps " + ", ".join(self._units[other] for other in others) if others else None
-        self.add(unit, ALL_COVERS, "area", covered * self._km2, note=note)
+        shared = "overlaps " + ", ".join(self._units[other] for other in others) if others else ""
+        note = "; ".join(filter(None, (shared, *self.about.said[unit : unit + 1])))
+        self.add(unit, ALL_COVERS, "area", covered * self._km2, note=note or None)
         beyond = self.about.outside_m2[unit] / 1e6 if is_zone else 0.0
         self.add(unit, ALL_COVERS, "area_not_covered", totals.uncovered(unit) * self._km2 + beyond)
         if self.about.barred:
             taken = totals.of(unit, pack.covers(self.about.classes).index(BARRIER)).area
             self.add(unit, BARRIER, "area", taken * self._km2)
             self._ratio(unit, BARRIER, "share", 100 * taken, covered)
-        twice = [totals.twice_edge(unit, kind) for kind in range(len(self.about.classes))]
-        lengths = [one for one in twice if one is not None]
-        if not pack.names and len(lengths) == len(twice):
-            self._add_edge(unit, ALL_COVERS, CHANGES, sum(lengths) / 4, covered)
+        if not pack.names:
+            self._add_edge(unit, ALL_COVERS, CHANGES, totals.twice_all_edges(unit) / 2, covered)
 
     def _add_amount(self, unit: int, name: str, one: Totals, covered: int) -> None:
         area = one.area * self._km2

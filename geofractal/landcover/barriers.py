@@ -21,10 +21,10 @@ if TYPE_CHECKING:
     from pyproj import CRS
 
 BARRIER = "barrier"
-"""Class of the cells that barriers with a width take."""
+"""Class of what barriers with a width take."""
 
 Widths = float | Sequence[float | None] | None
-"""Width of barriers in metres: one for all or one for each; 0 and None take no cells."""
+"""Width of barriers in metres: one for all or one for each; 0 and None take nothing."""
 
 
 @dataclass(frozen=True)
@@ -96,11 +96,11 @@ def place_barriers(
     LayerError
         no way from the lines' CRS to the grid's
     """
-    widths = _widths(width_m, len(geometries))
+    widths = barrier_widths(width_m, len(geometries))
     placer = Placer(grid, crs)
     parts, owners, reasons = [np.empty((0, 4))], [np.empty(0)], []
     for geometry, width in zip(geometries, widths, strict=True):
-        reason = _unusable(geometry)
+        reason = unusable_line(geometry)
         placed = None if reason else placer(shapely.force_2d(geometry))
         if placed is not None and not np.isfinite(shapely.get_coordinates(placed)).all():
             reason, placed = "reaches where the raster's CRS is not defined", None
@@ -123,8 +123,14 @@ def joined(grid: Grid, parts: Sequence[Barriers]) -> Barriers:
     return Barriers(grid, segments, width_m, dict(left_out))
 
 
-def _widths(width_m: Widths, lines: int) -> Floats:
-    """Return the width of each line."""
+def barrier_widths(width_m: Widths, lines: int) -> Floats:
+    """Return the width of each line.
+
+    Raises
+    ------
+    ConfigError
+        a width that is no number of 0 or more, or not one width a line
+    """
     stated = list(width_m) if isinstance(width_m, Iterable) else [width_m] * lines
     if len(stated) != lines:
         raise ConfigError(
@@ -181,7 +187,8 @@ def _turned(barriers: Barriers) -> Barriers:
     return replace(barriers, segments=np.concatenate(copies), width_m=np.concatenate(widths))
 
 
-def _unusable(geometry: Any) -> str:
+def unusable_line(geometry: Any) -> str:
+    """Return why a geometry is no barrier; empty where it is one."""
     if geometry is None:
         return "missing geometry"
     if geometry.geom_type not in {"LineString", "MultiLineString", "LinearRing"}:

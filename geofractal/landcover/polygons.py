@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -19,6 +20,8 @@ if TYPE_CHECKING:
 EDGE_M = 2_000.0
 """Longest edge that is taken for a geodesic; longer ones, straight in the layer's CRS, are divided first.
 At 60 N a 2 km edge along a parallel lies 0.1 m off its geodesic."""
+
+RINGS_AT_ONCE = 10_000
 
 Geometries = NDArray[np.object_]
 
@@ -73,18 +76,15 @@ def find_polygon_patches(
         patches = _joined_at_points(parts) if dissolve and neighbours == 8 else list(parts)
         names += [name] * len(patches)
         found += patches
-    figures = np.array([_measure(patch, crs) for patch in found], np.float64).reshape(-1, 5)
-    area, perimeter, outer, filled, holes = figures.T
-    return PolygonPatches(
-        np.array(names, dtype=object),
-        _as_array(found),
-        area,
-        perimeter,
-        outer,
-        filled,
-        holes.astype(np.int64),
-        left_out,
-    )
+    return measured_patches(np.array(names, dtype=object), _as_array(found), crs, left_out)
+
+
+def measured_patches(
+    cover: NDArray[np.object_], patches: Geometries, crs: CRS, left_out: dict[str, int]
+) -> PolygonPatches:
+    """Return patches, each a polygon or several, with their sizes."""
+    area, perimeter, outer, filled, holes = _measures(patches, crs).T
+    return PolygonPatches(cover, patches, area, perimeter, outer, filled, holes.astype(np.int64), left_out)
 
 
 def _as_array(geometries: list[Any]) -> Geometries:
@@ -119,29 +119,67 @@ def _joined_at_points(parts: Geometries) -> list[Any]:
     return [one[0] if len(one) == 1 else shapely.multipolygons(one) for one in members]
 
 
-def _measure(patch: Any, crs: CRS) -> tuple[float, float, float, float, int]:
-    """Return area, perimeter, outer perimeter, filled area and number of holes of one patch."""
-    outer = outer_area = inner = inner_area = 0.0
-    holes = 0
-    for part in shapely.get_parts(patch):
-        area, length = ring_size(part.exterior, crs)
-        outer, outer_area = outer + length, outer_area + area
-        for ring in part.interiors:
-            area, length = ring_size(ring, crs)
-            inner, inner_area, holes = inner + length, inner_area + area, holes + 1
-    return outer_area - inner_area, outer + inner, outer, outer_area, holes
+def _measures(patches: Geometries, crs: CRS) -> Floats:
+    """Return (n, 5) area, perimeter, outer perimeter, filled area and number of holes of patches."""
+    parts, patch = shapely.get_parts(patches, return_index=True)
+    rings, part = shapely.get_rings(parts, return_index=True)
+    area, length = ring_sizes(rings, crs)
+    inner = np.ones(len(rings), np.bool_)
+    inner[np.unique(part, return_index=True)[1]] = False
+    owner, outer = patch[part], ~inner
+    sums = [np.where(outer, area, -area), length, np.where(outer, length, 0), np.where(outer, area, 0), inner]
+    return np.stack([np.bincount(owner, one, minlength=len(patches)) for one in sums], axis=1)
+
+
+def polygon_areas(polygons: Geometries, crs: CRS) -> Floats:
+    """Return the area of each polygon in square metres."""
+    rings, owner = shapely.get_rings(polygons, return_index=True)
+    area, _ = ring_sizes(rings, crs)
+    inner = np.ones(len(rings), np.bool_)
+    inner[np.unique(owner, return_index=True)[1]] = False
+    return np.bincount(owner, np.where(inner, -area, area), minlength=len(polygons)).astype(np.float64)
 
 
 def ring_size(ring: Any, crs: CRS) -> tuple[float, float]:
     """Return the area inside a ring in square metres and its length in metres."""
+    area, length = ring_sizes(np.array([ring], object), crs)
+    return float(area[0]), float(length[0])
+
+
+def ring_sizes(rings: Geometries, crs: CRS) -> tuple[Floats, Floats]:
+    """Return the area inside each ring in square metres and its length in metres."""
     if is_engineering(crs):
         unit = float(crs.axis_info[0].unit_conversion_factor)
-        return shapely.Polygon(ring).area * unit**2, ring.length * unit
+        return shapely.area(shapely.polygons(rings)) * unit**2, shapely.length(rings) * unit
     from pyproj import Geod
 
-    unit = crs.axis_info[0].unit_conversion_factor
     major, e2 = ellipsoid(crs)
-    longest = EDGE_M / (major if crs.is_geographic else 1.0) / unit
-    x, y = shapely.get_coordinates(shapely.segmentize(ring, longest)).T
-    area, length = Geod(a=major, es=e2).polygon_area_perimeter(*lon_lat(crs, x, y))
-    return abs(area), length
+    geod, sizes = Geod(a=major, es=e2), np.empty((2, len(rings)))
+    for begin in range(0, len(rings), RINGS_AT_ONCE):
+        some = shapely.segmentize(rings[begin : begin + RINGS_AT_ONCE], longest_edge(crs))
+        lon, lat = lon_lat(crs, *shapely.get_coordinates(some).T)
+        stops = np.cumsum(shapely.get_num_coordinates(some))
+        for k, (start, stop) in enumerate(pairwise([0, *stops.tolist()]), begin):
+            sizes[:, k] = geod.polygon_area_perimeter(lon[start:stop], lat[start:stop])
+    return np.abs(sizes[0]), sizes[1]
+
+
+def line_lengths(lines: Geometries, crs: CRS) -> Floats:
+    """Return the length of each line in metres."""
+    if is_engineering(crs):
+        return np.asarray(shapely.length(lines) * float(crs.axis_info[0].unit_conversion_factor))
+    from pyproj import Geod
+
+    major, e2 = ellipsoid(crs)
+    dense = shapely.segmentize(lines, longest_edge(crs))
+    xy, line = shapely.get_coordinates(dense, return_index=True)
+    lon, lat = lon_lat(crs, *xy.T)
+    _, _, steps = Geod(a=major, es=e2).inv(lon[:-1], lat[:-1], lon[1:], lat[1:])
+    within = line[1:] == line[:-1]
+    return np.bincount(line[1:][within], steps[within], minlength=len(lines)).astype(np.float64)
+
+
+def longest_edge(crs: CRS) -> float:
+    """Return `EDGE_M` in units of a CRS."""
+    unit = float(crs.axis_info[0].unit_conversion_factor)
+    return EDGE_M / (ellipsoid(crs)[0] if crs.is_geographic else 1.0) / unit

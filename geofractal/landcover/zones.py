@@ -7,6 +7,7 @@ sets, greedily in their order; each set is measured by itself.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
@@ -87,10 +88,7 @@ def place_zones(grid: Grid, geometries: Sequence[Any], names: Sequence[Any], crs
     LayerError
         no way from the zones' CRS to the grid's
     """
-    titles = tuple(str(name) for name in names)
-    twice = sorted({title for title in titles if titles.count(title) > 1}) if titles else []
-    if twice:
-        raise ConfigError(f"Zones need names of their own; {', '.join(twice[:5])} is given more than once.")
+    titles = distinct_names(names)
     placer = Placer(grid, crs)
     problems, beyond, edges, owners = [], np.zeros(len(titles)), [], []
     for i, geometry in enumerate(geometries):
@@ -106,6 +104,46 @@ def place_zones(grid: Grid, geometries: Sequence[Any], names: Sequence[Any], crs
         titles, tuple(problems), beyond, table, np.concatenate([np.empty(0, np.int64), *owners]), (), ()
     )
     return _in_sets(zones, grid)
+
+
+def distinct_names(names: Sequence[Any]) -> tuple[str, ...]:
+    """Return names of zones as text.
+
+    Raises
+    ------
+    ConfigError
+        two zones of one name
+    """
+    titles = tuple(str(name) for name in names)
+    twice = sorted(title for title, count in Counter(titles).items() if count > 1)
+    if twice:
+        raise ConfigError(f"Zones need names of their own; {', '.join(twice[:5])} is given more than once.")
+    return titles
+
+
+def change_of_crs(crs: CRS | None, own: CRS, whose: str) -> Any:
+    """Return what changes coordinates of zones or barriers to a map's CRS, None where nothing changes.
+
+    Raises
+    ------
+    LayerError
+        there is no way, or only one of the two is known
+    """
+    from pyproj import Transformer
+    from pyproj.exceptions import ProjError
+
+    if crs is None:
+        if is_engineering(own):
+            return None
+        raise LayerError("Zones and barriers need a CRS; give them one, for example EPSG:25832.")
+    if crs.equals(own, ignore_axis_order=True):
+        return None
+    try:
+        return Transformer.from_crs(crs, own, always_xy=True)
+    except ProjError as error:
+        raise LayerError(
+            f"There is no way from {crs.name!r} to the {whose} CRS {own.name!r}: {error}"
+        ) from error
 
 
 @dataclass(frozen=True)
@@ -135,21 +173,7 @@ class Placer:
     @cached_property
     def _change(self) -> Any:
         """Return what changes coordinates, None where there is nothing to change."""
-        from pyproj import Transformer
-        from pyproj.exceptions import ProjError
-
-        if self.crs is None:
-            if is_engineering(self.grid.crs):
-                return None
-            raise LayerError("Zones and barriers need a CRS; give them one, for example EPSG:25832.")
-        if self.crs.equals(self.grid.crs, ignore_axis_order=True):
-            return None
-        try:
-            return Transformer.from_crs(self.crs, self.grid.crs, always_xy=True)
-        except ProjError as error:
-            raise LayerError(
-                f"There is no way from {self.crs.name!r} to the raster's CRS {self.grid.crs.name!r}: {error}"
-            ) from error
+        return change_of_crs(self.crs, self.grid.crs, "raster's")
 
 
 def _placed(placer: Placer, geometry: Any) -> tuple[str, Any]:
