@@ -14,6 +14,9 @@ from geofractal import synthetic
 from geofractal.estimators import box
 from geofractal.kernels import boxes as kernels
 from geofractal.kernels.ladder_judge import STRETCHES
+from geofractal.scaling import crowding
+from geofractal.scaling.fit import fit_power_law
+from geofractal.scaling.judge import judge
 from geofractal.scaling.ladder import Ladders
 from geofractal.testing import check_measure, lines_of, specimens
 
@@ -29,7 +32,7 @@ def tables(tiles=4096):
 
 
 def grid_of(parts, size, origin=(0, 0, 0), tallies=None, call=kernels.count_grid):
-    """Return boxes, entropy and sum of squares of one grid over parts, each (k, 2) or (k, 3)."""
+    """Return boxes, entropy, sum of squares and visits of one grid over parts, each (k, 2) or (k, 3)."""
     xy = np.ascontiguousarray(np.concatenate(parts), dtype=float)
     starts = np.concatenate([[0], np.cumsum([len(part) for part in parts])])
     along, bounds = kernels.measure_along(xy, starts, np.array([0, len(parts)]))
@@ -65,6 +68,22 @@ def shares_by_crossings(part, size):
     return np.array([share for share in shares.values() if share > 1e-12])
 
 
+def visits_by_crossings(part):
+    """Visits to unit boxes: runs of neighbouring stretches, sixteenths of the length, that meet each box."""
+    moves = np.linalg.norm(np.diff(part, axis=0), axis=1)
+    ends = np.concatenate([[0.0], np.cumsum(moves)])
+    met = set()
+    for a, b, start, stop in zip(part, part[1:], ends, ends[1:], strict=False):
+        cuts = [np.arange(np.ceil(min(p, q)), np.floor(max(p, q)) + 1) for p, q in zip(a, b, strict=True)]
+        times = [(cut - p) / (q - p) for cut, p, q in zip(cuts, a, b, strict=True)]
+        sixteenths = (np.arange(17) / 16 * ends[-1] - start) / (stop - start)
+        times = np.sort(np.concatenate([[0.0, 1.0], *times, sixteenths]))
+        for t in (times[1:] + times[:-1])[(times[:-1] >= 0) & (times[1:] <= 1)] / 2:
+            stretch = int((start + t * (stop - start)) / ends[-1] * 16)
+            met.add((*np.floor(a + t * (b - a)).astype(int).tolist(), stretch))
+    return sum((*box, stretch - 1) not in met for *box, stretch in met)
+
+
 def expected(shares):
     p = shares / shares.sum()
     return len(p), -np.sum(p * np.log(p)), np.sum(p * p)
@@ -73,12 +92,12 @@ def expected(shares):
 class TestCountGrid:
     def test_straight_line_along_the_grid(self):
         # a line of 4 sides along an edge lies in the 4 boxes above it
-        assert grid_of([[(0, 1), (4, 1)]], 1.0) == pytest.approx((4, log(4), 1 / 4))
+        assert grid_of([[(0, 1), (4, 1)]], 1.0) == pytest.approx((4, log(4), 1 / 4, 4))
 
     def test_straight_line_across_edges(self):
         # shares 1/2, 1, 1/2 of 2
         found = grid_of([[(0.5, 0.5), (2.5, 0.5)]], 1.0)
-        assert found == pytest.approx((3, 0.5 * log(4) + 0.5 * log(2), 1 / 16 + 1 / 4 + 1 / 16))
+        assert found == pytest.approx((3, 0.5 * log(4) + 0.5 * log(2), 1 / 16 + 1 / 4 + 1 / 16, 3))
 
     @pytest.mark.parametrize("ends", [[(0, 0), (5, 5)], [(0, 5), (5, 0)], [(5, 0), (0, 5)]])
     def test_diagonal_through_corners_touches_no_further_box(self, ends):
@@ -108,12 +127,22 @@ class TestCountGrid:
 
     def test_the_gap_between_parts_is_no_line(self):
         assert grid_of([[(0.5, 0.5), (0.6, 0.5)], [(7.5, 0.5), (7.6, 0.5)]], 1.0) == pytest.approx(
-            (2, log(2), 1 / 2)
+            (2, log(2), 1 / 2, 2)
         )
 
     def test_parts_share_boxes(self):
         part = [(0.5, 0.5), (2.5, 0.5)]
-        assert grid_of([part, part], 1.0) == pytest.approx(grid_of([part], 1.0))
+        assert grid_of([part, part], 1.0)[:3] == pytest.approx(grid_of([part], 1.0)[:3])
+
+    def test_boxes_that_a_line_comes_back_to_are_visited_again(self):
+        # out through 8 boxes and back: only about the turn do stretches of the way out and back adjoin
+        assert grid_of([[(0.5, 0.5), (7.5, 0.5), (0.5, 0.5)]], 1.0)[3] == 8 + 6
+
+    @settings(max_examples=40, deadline=None)
+    @given(st.integers(0, 2**32), st.sampled_from([2, 3]))
+    def test_visits_equal_the_runs_of_stretches_by_box(self, seed, axes):
+        part = np.random.default_rng(seed).uniform(0, 5, (12, axes))
+        assert grid_of([part], 1.0)[3] == visits_by_crossings(part)
 
     @settings(max_examples=60, deadline=None)
     @given(st.integers(0, 2**32), st.booleans(), st.integers(1, 3))
@@ -123,14 +152,14 @@ class TestCountGrid:
         if whole:  # vertices on halves of the grid: edges and corners everywhere
             parts = [np.round(part * 2) / 2 for part in parts]
         assume(any((part != part[0]).any() for part in parts))
-        assert grid_of(parts, 1.0) == pytest.approx(expected(shares_by_shapely(parts)), abs=1e-6)
+        assert grid_of(parts, 1.0)[:3] == pytest.approx(expected(shares_by_shapely(parts)), abs=1e-6)
 
     @settings(max_examples=40, deadline=None)
     @given(st.integers(0, 2**32), st.sampled_from([2, 3]))
     def test_it_equals_the_crossings(self, seed, axes):
         part = np.cumsum(np.random.default_rng(seed).normal(size=(300, axes)), axis=0)
         part -= part.min(axis=0)
-        assert grid_of([part], 2.5) == pytest.approx(expected(shares_by_crossings(part, 2.5)), rel=1e-9)
+        assert grid_of([part], 2.5)[:3] == pytest.approx(expected(shares_by_crossings(part, 2.5)), rel=1e-9)
 
     def test_three_dimensions_of_a_flat_line_are_those_of_the_plane(self):
         flat = np.add(synthetic.koch(level=5).xy, [0, 1])
@@ -270,13 +299,14 @@ class TestDimensions:
         ("curve", "error"),
         [
             (synthetic.koch(1.1, level=8), 0.02),
-            (synthetic.gosper_island(level=8), 0.025),
-            (synthetic.koch(level=8), 0.025),
-            (synthetic.minkowski_island(level=8), 0.05),
-            (synthetic.koch(1.4, level=8), 0.04),
-            (synthetic.quadratic_koch(2, level=5), 0.05),
-            (synthetic.dragon_boundary(level=16), 0.08),
-            (synthetic.gasket(level=9), 0.06),
+            (synthetic.gosper_island(level=8), 0.02),
+            (synthetic.koch(level=8), 0.02),
+            (synthetic.minkowski_island(level=8), 0.025),
+            (synthetic.koch(1.4, level=8), 0.02),
+            (synthetic.quadratic_koch(1, level=7), 0.04),
+            (synthetic.quadratic_koch(2, level=5), 0.03),
+            (synthetic.dragon_boundary(level=16), 0.06),
+            (synthetic.gasket(level=9), 0.03),
         ],
     )
     @pytest.mark.parametrize("angle", [0.0, 0.4])
@@ -285,6 +315,16 @@ class TestDimensions:
         assert values["box_dim"][0] == pytest.approx(curve.dimension, abs=error)
         assert values["box_dim_low"][0] <= curve.dimension <= values["box_dim_high"][0]
         assert values["box_verdict"][0] == "power-law"
+
+    def test_lines_that_cross_themselves_are_made_up_for(self):
+        trails = [synthetic.fractional_trail(1.5, vertices=5_000, seed=seed).xy for seed in range(20)]
+        lines = lines_of([[trail] for trail in trails])
+        ladders = box.box_ladders(lines)
+        counts = box.count(lines, ladders)
+        bare = -fit_power_law(ladders, counts.boxes).slope
+        assert np.mean(bare) < 1.42  # as counted they come out too low
+        found = box.BoxDimension().measure(lines, box.BoxOptions())["box_dim"]
+        assert np.mean(found) == pytest.approx(1.5, abs=0.05)
 
     @pytest.mark.parametrize("angle", [0.0, 0.1, pi / 4])
     def test_straight_line_is_smooth(self, angle):
@@ -304,6 +344,39 @@ class TestDimensions:
         thin, thick = [(0, 0), (1e3, 0)], [(1e3, 0), (2e3, 0)]
         counts = box.count(lines_of([[thin, *[thick] * 99]]), Ladders(np.array([0, 1]), np.array([1e3])))
         assert counts.paired[0] < counts.even[0] < counts.boxes[0]
+
+
+class TestCrowding:
+    def test_curves_that_keep_off_themselves_lack_nothing(self):
+        lines = lines_of([[synthetic.koch(d, level=7).xy] for d in (1.1, 1.3, 1.4)])
+        ladders = box.box_ladders(lines)
+        counts = box.count(lines, ladders)
+        assert crowding.lacking(ladders, counts.boxes, counts.visits) == pytest.approx(0, abs=1e-3)
+
+    def test_what_is_lacking_by_the_formula_and_made_up_for(self):
+        """Boxes 1000 s^-1.5, a tenth come back to: LACK 0.1 / (0.1 + HALF_CROWDED) 0.5 / sqrt(ln 8)."""
+        sizes = np.array([2.0, 4.0, 8.0, 16.0, 32.0, 1.0])
+        ladders = Ladders(np.array([0, 5, 5, 6]), sizes)
+        boxes = 1000 * sizes**-1.5
+        boxes[4] = np.nan
+        again = 0.1 / (0.1 + crowding.HALF_CROWDED)
+        lack = crowding.lacking(ladders, boxes, 1.1 * boxes)
+        assert lack == pytest.approx([crowding.LACK * again * 0.5 / np.sqrt(np.log(8)), 0, 0])
+        fit = fit_power_law(ladders, crowding.made_up(ladders, boxes, lack))
+        assert fit.slope[0] == pytest.approx(-1.5 - lack[0])
+
+    def test_its_doubt_widens_the_interval(self):
+        lines = lines_of([[synthetic.fractional_trail(1.3, vertices=3_000, seed=1).xy]])
+        ladders, scales = box.box_ladders(lines), box.scales_of(lines)
+        counts = box.count(lines, ladders)
+        found = judge(ladders, box.box_rungs(lines, scales, ladders, counts, counts.boxes), estimator="box")
+        less, none = crowding.doubted(found, np.array([0.1])), crowding.doubted(found, np.zeros(1))
+        assert none.low == pytest.approx(found.low)
+        assert none.high == pytest.approx(found.high)
+        reach = np.hypot(found.high - found.dimension, 0.1 * crowding.DOUBT)
+        assert less.high == pytest.approx(found.dimension + reach)
+        assert less.low < found.low
+        assert less.error > found.error
 
 
 class TestMeasure:

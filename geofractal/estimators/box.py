@@ -8,10 +8,11 @@ import numpy as np
 from pydantic import Field, model_validator
 
 from geofractal.estimators.box_columns import BOX_COLUMNS, HENTSCHEL_PROCACCIA, LADDER_COLUMNS
-from geofractal.estimators.divider import FEWEST_RUNGS, Metres, Notes, plain_number
+from geofractal.estimators.divider import FEWEST_RUNGS, Metres, Notes, check_ends
 from geofractal.estimators.ladder_table import ladder_rows
 from geofractal.kernels.boxes import TILE, Tables, count_ladders
 from geofractal.measure import PLANES, Column, LadderMeasure, LadderOptions
+from geofractal.scaling.crowding import doubted, lacking, made_up
 from geofractal.scaling.judge import VERDICTS, Rungs, judge
 from geofractal.scaling.ladder import Ladders, finest_rulers, geometric_ladders, scales_of
 
@@ -36,6 +37,11 @@ ENOUGH_BOXES = 1 << 15
 LAST_BOX_EXTENT = 1.0 / 6.0
 """Last box side as a share of the longest side of the feature's bounds: larger boxes fill up."""
 
+LARGEST_BOX_EXTENT = 1.0 / 4.0
+"""The same where half a decade of sizes, the least that is judged, would not fit else."""
+
+_HALF_A_DECADE = 10**0.5 * (1 + 1e-6)
+
 MOST_TILES = 1 << 21
 """Tiles of 64 boxes that the tables hold at most (1.4 GB): smaller boxes are left out."""
 
@@ -48,6 +54,7 @@ class Counts(NamedTuple):
     boxes : (k,) fewest boxes over the grids; NaN where the rung was not counted
     even : (k,) exp(-sum p ln p) over the shares p of length in each box
     paired : (k,) 1 / sum p^2
+    visits : (k,) boxes, counted again for every stretch, or row of stretches, of the line that comes back
     spread : (k,) standard deviation of ln boxes over the grids; NaN where one grid was enough
     tallies : (k, STRETCHES) boxes in each stretch of equal length of the line, on the first grid
     """
@@ -55,6 +62,7 @@ class Counts(NamedTuple):
     boxes: Floats
     even: Floats
     paired: Floats
+    visits: Floats
     spread: Floats
     tallies: Floats
 
@@ -77,7 +85,10 @@ def box_ladders(
     extents = _sides(lines).max(axis=1)
     n = len(lines)
     lowest = np.full(n, float(size_min_m)) if size_min_m is not None else finest
-    highest = np.full(n, float(size_max_m)) if size_max_m is not None else LAST_BOX_EXTENT * extents
+    fitting = np.minimum(_HALF_A_DECADE * lowest, LARGEST_BOX_EXTENT * extents)
+    highest = np.maximum(LAST_BOX_EXTENT * extents, fitting)
+    if size_max_m is not None:
+        highest = np.full(n, float(size_max_m))
     highest[np.isnan(finest)] = np.nan
     return geometric_ladders(lowest, highest, rungs)
 
@@ -121,7 +132,7 @@ def count(lines: Lines, ladders: Ladders, *, shifts: Floats = GRID_SHIFTS) -> Co
     return Counts(*_fewest(grids), tallies)
 
 
-def _fewest(grids: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+def _fewest(grids: Floats) -> tuple[Floats, Floats, Floats, Floats, Floats]:
     """Return the grid with the fewest boxes of each rung, and how the grids differ."""
     boxes = np.where(grids[:, :, 0] > 0, grids[:, :, 0], np.nan)
     tried = np.isfinite(boxes)
@@ -133,7 +144,7 @@ def _fewest(grids: Floats) -> tuple[Floats, Floats, Floats, Floats]:
     mean = logs.sum(axis=1) / several
     spread = np.sqrt((np.where(tried, logs - mean[:, None], 0.0) ** 2).sum(axis=1) / (several - 1))
     counted = np.where(number > 0, 1.0, np.nan)
-    return counted * best[:, 0], np.exp(best[:, 1]), 1 / best[:, 2], spread
+    return counted * best[:, 0], np.exp(best[:, 1]), 1 / best[:, 2], counted * best[:, 3], spread
 
 
 def _sides(lines: Lines) -> Floats:
@@ -174,7 +185,7 @@ class BoxOptions(LadderOptions):
         description="first box side of the ladder in metres; left out: the finest ruler of the source",
     )
     size_max_m: Metres | None = Field(
-        None, description="last box side of the ladder in metres; left out: a sixth of the longest extent"
+        None, description="last box side of the ladder in metres; left out: chosen from the feature's extent"
     )
     rungs: Annotated[int, Field(ge=FEWEST_RUNGS, le=200)] | None = Field(
         None, description="number of box sizes; left out: as many a decade as the ladder's rule says"
@@ -185,11 +196,7 @@ class BoxOptions(LadderOptions):
 
     @model_validator(mode="after")
     def _lowest_below_highest(self) -> Self:
-        low, high = self.size_min_m, self.size_max_m
-        if low is not None and high is not None and low >= high:
-            raise ValueError(
-                f"size-min-m ({plain_number(low)}) must be below size-max-m ({plain_number(high)})"
-            )
+        check_ends("size", self.size_min_m, self.size_max_m)
         return self
 
 
@@ -217,12 +224,12 @@ class BoxDimension(LadderMeasure[BoxOptions]):
 
     def measure_with_ladder(self, lines: Lines, options: BoxOptions) -> tuple[Values, LadderRows]:
         """Return the same, and what was counted at every rung."""
-        values, ladders, rungs, found = _counted(lines, options)
+        values, ladders, rungs, found, lack = _counted(lines, options)
         own: Values = {
             "box_size_m": ladders.rulers,
             "boxes": np.where(np.isnan(rungs.steps), -1, rungs.steps).astype(np.int64),
             "boxes_spread": rungs.noise / ladders.rulers,
-            "boxes_fit": found.lengths_at_rungs(ladders) / ladders.rulers,
+            "boxes_fit": made_up(ladders, found.lengths_at_rungs(ladders) / ladders.rulers, -lack),
         }
         return values, ladder_rows(own, ladders, rungs, found)
 
@@ -246,8 +253,19 @@ def box_rungs(lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, ef
     )
 
 
-def _counted(lines: Lines, options: BoxOptions) -> tuple[Values, Ladders, Rungs, Judgement]:
-    """Return a chunk's columns, and the rungs that its box dimensions rest on."""
+def judge_boxes(
+    lines: Lines, scales: Floats, ladders: Ladders, counts: Counts, effective: Floats, lack: Floats
+) -> Judgement:
+    """Judge what was counted, made up for what the slope of each feature's boxes lacks, (n,).
+
+    Other parameters as in `box_rungs`; see `geofractal.scaling.crowding`.
+    """
+    rungs = box_rungs(lines, scales, ladders, counts, made_up(ladders, effective, lack))
+    return doubted(judge(ladders, rungs, estimator="box"), lack)
+
+
+def _counted(lines: Lines, options: BoxOptions) -> tuple[Values, Ladders, Rungs, Judgement, Floats]:
+    """Return a chunk's columns, the rungs that its box dimensions rest on, and what their slopes lack."""
     scales = scales_of(lines)
     notes = Notes(finest_rulers(scales))
     notes.add(scales[:, 3] > 0, "drawn along raster cells, which its ladder keeps clear of")
@@ -259,21 +277,21 @@ def _counted(lines: Lines, options: BoxOptions) -> tuple[Values, Ladders, Rungs,
         scales=scales,
     )
     counts = count(lines, ladders, shifts=GRID_SHIFTS[: options.grids])
-    rungs, even, paired = (
-        box_rungs(lines, scales, ladders, counts, effective)
+    lack = lacking(ladders, counts.boxes, counts.visits)
+    found, even, paired = (
+        judge_boxes(lines, scales, ladders, counts, effective, lack)
         for effective in (counts.boxes, counts.even, counts.paired)
     )
-    found = judge(ladders, rungs, estimator="box")
     lost = np.bincount(ladders.owners[np.isnan(counts.boxes)], minlength=len(lines)) > 0
     notes.add(lost, "the smallest boxes are too many to count and are left out; raise size-min-m")
     notes.add(np.isnan(found.dimension), "no dimension: too few box sizes between its detail and its extent")
     values = _dimensions(found)
-    values["box_information_dim"] = judge(ladders, even, estimator="box").dimension
-    values["box_correlation_dim"] = judge(ladders, paired, estimator="box").dimension
+    values["box_information_dim"] = even.dimension
+    values["box_correlation_dim"] = paired.dimension
     values["box_distortion_percent"] = 100 * lines.distortion
     values["box_plane"] = np.array(PLANES, dtype=object)[lines.plane]
     values["box_note"] = notes.texts
-    return values, ladders, rungs, found
+    return values, ladders, box_rungs(lines, scales, ladders, counts, counts.boxes), found, lack
 
 
 def _dimensions(found: Judgement) -> Values:

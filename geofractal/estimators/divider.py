@@ -132,6 +132,13 @@ def plain_number(value: float) -> str:
     return text.rstrip("0").rstrip(".") if "." in text else text
 
 
+def check_ends(what: str, low_m: float | None, high_m: float | None) -> None:
+    """Refuse a stated ladder that does not ascend; `what` its rungs are is the options' first word."""
+    if low_m is not None and high_m is not None and low_m >= high_m:
+        low, high = plain_number(low_m), plain_number(high_m)
+        raise ValueError(f"{what}-min-m ({low}) must be below {what}-max-m ({high})")
+
+
 class Notes:
     """One text a feature that says why a figure is missing or limited."""
 
@@ -179,11 +186,7 @@ class DividerOptions(LadderOptions):
 
     @model_validator(mode="after")
     def _lowest_below_highest(self) -> Self:
-        low, high = self.ruler_min_m, self.ruler_max_m
-        if low is not None and high is not None and low >= high:
-            raise ValueError(
-                f"ruler-min-m ({plain_number(low)}) must be below ruler-max-m ({plain_number(high)})"
-            )
+        check_ends("ruler", self.ruler_min_m, self.ruler_max_m)
         return self
 
 

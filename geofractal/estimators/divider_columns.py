@@ -2,12 +2,10 @@
 
 from __future__ import annotations
 
-from geofractal.estimators.ladder_table import ladder_columns
+from geofractal.estimators.ladder_table import judged_columns, ladder_columns
 from geofractal.measure import PLANES, Column
 
 MANDELBROT = "Mandelbrot 1967, Science 156:636-638"
-
-_CALIBRATION = "set by simulation on curves of exactly known dimension; `geofractal calibrate` repeats it"
 
 DIMENSION_COLUMNS = (
     Column(
@@ -19,68 +17,14 @@ DIMENSION_COLUMNS = (
         "D = 1 - slope of ln L(r) on ln r",
         MANDELBROT,
     ),
-    Column(
-        "divider_dim_low",
-        "div_dlow",
-        "number",
-        "",
-        "lower end of the 95 % interval for the process that made the line: the one to use when two"
-        " different lines are compared; under two-regime and curved it holds both ends of the ladder",
-        source=_CALIBRATION,
-    ),
-    Column(
-        "divider_dim_high",
-        "div_dhigh",
-        "number",
-        "",
-        "upper end of the same interval",
-        source=_CALIBRATION,
-    ),
-    Column(
-        "divider_spread",
-        "div_spread",
-        "number",
-        "",
-        "standard error of divider_dim for this line alone: starts, directions, placement of the rulers;"
-        " too narrow to compare two different lines with",
-    ),
-    Column(
-        "divider_verdict",
-        "div_verdic",
-        "text",
-        "",
-        "whether a dimension exists: power-law; two-regime (one dimension on each side of a break); curved;"
-        " smooth (nothing beyond dimension 1); too-few-scales",
-        "a hinge, a step and a parabola against the straight line on logarithmic axes",
-        _CALIBRATION,
-    ),
-    Column("divider_ruler_min_m", "div_rmin_m", "number", "m", "first ruler of the ladder that was used"),
-    Column("divider_ruler_max_m", "div_rmax_m", "number", "m", "last ruler of the ladder that was used"),
-    Column("divider_rungs", "div_rungs", "count", "", "number of rulers that were used"),
-    Column(
-        "divider_r2",
-        "div_r2",
-        "number",
-        "",
-        "share of the variance of ln L that the fitted line explains; near 1 for any line on logarithmic"
-        " axes, so no evidence that a dimension exists",
-    ),
-    Column("divider_break_m", "div_brk_m", "number", "m", "ruler at which the two regimes meet"),
-    Column("divider_break_low_m", "div_brkl_m", "number", "m", "lower end of the break's interval"),
-    Column("divider_break_high_m", "div_brkh_m", "number", "m", "upper end of the break's interval"),
-    Column(
-        "divider_fine_dim",
-        "div_fine",
-        "number",
-        "",
-        "dimension below the break; under curved, at the first ruler",
-    ),
-    Column(
-        "divider_coarse_dim",
-        "div_coarse",
-        "number",
-        "",
-        "dimension above the break; under curved, at the last ruler",
+    *judged_columns(
+        "divider",
+        "div",
+        "ruler",
+        "ruler",
+        scatter="starts, directions, placement of the rulers",
+        fitted="ln L",
+        source="set by simulation on curves of exactly known dimension; `geofractal calibrate` repeats it",
     ),
     Column(
         "divider_content",

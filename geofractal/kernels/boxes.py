@@ -165,9 +165,9 @@ def _put(
 
 
 @kernel
-def _drain(tables: Tables, used: int) -> tuple[float, float, float]:
-    """Return boxes, Shannon entropy and sum of squared shares, and leave the tables empty."""
-    boxes, total, logs, squares = 0.0, 0.0, 0.0, 0.0
+def _drain(tables: Tables, used: int) -> tuple[float, float, float, float]:
+    """Return boxes, Shannon entropy, sum of squared shares and visits, and leave the tables empty."""
+    boxes, total, logs, squares, visits = 0.0, 0.0, 0.0, 0.0, 0.0
     for t in range(used):
         tables.slots[tables.places[t]] = 0
         for b in range(TILE):
@@ -178,10 +178,14 @@ def _drain(tables: Tables, used: int) -> tuple[float, float, float]:
                 logs += mass * np.log(mass)
                 squares += mass * mass
                 tables.masses[t, b] = 0.0
+                seen = np.int64(tables.seen[t, b])
                 tables.seen[t, b] = 0
+                while seen > 0:
+                    visits += (seen & 3) == 1
+                    seen >>= 1
     if boxes == 0.0:
-        return 0.0, np.nan, np.nan
-    return boxes, np.log(total) - logs / total, squares / total**2
+        return 0.0, np.nan, np.nan, 0.0
+    return boxes, np.log(total) - logs / total, squares / total**2, visits
 
 
 @kernel
@@ -195,7 +199,7 @@ def count_grid(
     span: Ints,
     tables: Tables,
     tallies: Floats,
-) -> tuple[float, float, float]:
+) -> tuple[float, float, float, float]:
     """Count the boxes of one grid that the parts pass through, and how the length is spread over them.
 
     Parameters
@@ -210,8 +214,9 @@ def count_grid(
 
     Returns
     -------
-    boxes, entropy, squares
-        Boxes counted, -sum p ln p and sum p^2 over the share p of length in each; 0 and NaN without length
+    boxes, entropy, squares, visits
+        Boxes counted, -sum p ln p and sum p^2 over the share p of length in each; 0 and NaN without length.
+        Visits are boxes counted again for every stretch of the line, or row of them, that comes back to them
     """
     solid = xy.shape[1] == 3
     state = np.full(5, -1)
@@ -292,12 +297,12 @@ def count_ladders(
 
     Returns
     -------
-    found : (k, g, 3) boxes, entropy and sum of squares as in `count_grid`; NaN for grids that were not tried
+    found : (k, g, 4) boxes, entropy, sum of squares and visits as in `count_grid`; NaN for grids not tried
     tallies : (k, STRETCHES) boxes of the first grid in each stretch of equal length of the line
     """
     axes = xy.shape[1]
     along, bounds = measure_along(xy, part_offsets, feature_offsets)
-    out = np.full((len(sizes), len(shifts), 3), np.nan)
+    out = np.full((len(sizes), len(shifts), 4), np.nan)
     tallies, unused = np.zeros((len(sizes), STRETCHES)), np.zeros(STRETCHES)
     low, high, origin, span = np.zeros(3), np.zeros(3), np.zeros(3), np.ones(3, dtype=np.int64)
     for f in range(len(feature_offsets) - 1):
@@ -325,6 +330,6 @@ def count_ladders(
                     tables,
                     tallies[r] if g == 0 else unused,
                 )
-                out[r, g, 0], out[r, g, 1], out[r, g, 2] = found
+                out[r, g, 0], out[r, g, 1], out[r, g, 2], out[r, g, 3] = found
                 counted += found[0]
     return out, tallies

@@ -40,19 +40,16 @@ DIVIDER = Constants(
 
 BOX = DIVIDER._replace(
     coarse_bias=0.0,
-    crowding=0.25,
     own_least=0.6,
     own_low=0.6,
     ring_doubt=0.0,
     ripple=0.0,
     bias_doubt=1.5,
-    quantile=2.8,
+    quantile=3.1,
     tilt=0.16,
     threshold=1.8,
 )
-"""`crowding`: strands that lie close share boxes, so that counts are the more too low the higher the
-dimension and the shorter the ladder. 0.4 would set trails right that cross themselves, 0 curves drawn by a
-rule: 0.25 lies between, and the doubt about it widens the interval."""
+"""What lines that share boxes with themselves lack is made up for before: `geofractal.scaling.crowding`."""
 
 
 class CellConstants(NamedTuple):
