@@ -144,6 +144,35 @@ def test_exactly_known_curves(deterministic, i):
     assert deterministic.low[i] <= truth <= deterministic.high[i]
 
 
+def test_the_ripple_of_exact_curves_is_no_break(deterministic):
+    """Made of equal pieces, they are power laws with a wave in ln L of period ln ratio (Moran 1946)."""
+    assert deterministic.verdict_words() == ["power-law"] * len(DETERMINISTIC)
+    island = synthetic.koch(1.4, level=7, island=True)
+    assert judge_lines(lines_of([island]))[2].verdict_words() == ["power-law"]
+
+
+@pytest.mark.parametrize("period", [0.9, 1.4, 1.8])
+@pytest.mark.parametrize("phase", range(0, 6, 2))
+def test_a_ripple_of_any_phase_is_no_break(period, phase):
+    wave = np.sin(2 * np.pi * np.log(RULERS) / period + phase)
+    found = laid(RULERS, 1e7 * RULERS**-0.3 * np.exp(0.1 * wave))
+    assert found.verdict_words() == ["power-law"]
+
+
+def test_rings_drawn_from_open_curves_are_found_like_them():
+    """Four random middles of D = 1.1 (Moran 1946) about a square: a ring's turning back is taken out."""
+    corners = np.exp(-0.5j * np.pi * np.arange(5))
+    rings = []
+    for seed in range(12):
+        sides = [synthetic.random_midpoint(1.1, level=9, seed=4 * seed + i).xy @ [1, 1j] for i in range(4)]
+        points = [corners[i] + (corners[i + 1] - corners[i]) * sides[i][:-1] for i in range(4)]
+        ring = np.concatenate([*points, corners[:1]])
+        rings.append(synthetic.Curve(np.column_stack([ring.real, ring.imag]), True, (), "four sides"))
+    found = judge_lines(lines_of(rings))[2]
+    assert found.dimension.mean() == pytest.approx(1.1, abs=0.01)
+    assert ((found.low <= 1.1) & (found.high >= 1.1)).all()
+
+
 def test_lines_and_arcs_are_smooth():
     curves = [synthetic.line(vertices=n, angle=a) for n, a in ((400, 0.0), (3000, 1.0))]
     curves += [synthetic.arc(turn, vertices=2000) for turn in (0.3, 1.0, 4.0)]
@@ -168,6 +197,17 @@ def test_rough_above_and_below_a_scale_are_two_regimes():
         for fine, coarse in ((1.0, 1.3), (1.4, 1.1))
     ]
     assert judge_lines(lines_of(curves))[2].verdict_words() == ["two-regime"] * 2
+
+
+@pytest.mark.parametrize(("fine", "coarse"), [(1.0, 1.3), (1.4, 1.1)])
+def test_a_break_is_placed_within_a_factor_1_5(fine, coarse):
+    """Random-sided Koch curves with more than 1.5 decades on either side of the length of their pieces."""
+    levels = [math.ceil(1.55 * d / math.log10(4)) + 1 for d in (fine, coarse)]
+    for seed in range(3):
+        curve = synthetic.two_regimes(fine, coarse, fine_level=levels[0], coarse_level=levels[1], seed=seed)
+        found = judge_lines(lines_of([curve]))[2]
+        assert found.verdict_words() == ["two-regime"]
+        assert 1 / 1.5 < found.break_at[0] / curve.breaks[0] < 1.5
 
 
 def test_intervals_of_trails_hold_the_truth():

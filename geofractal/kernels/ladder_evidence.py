@@ -48,11 +48,16 @@ def weighted_slope(w: Floats, x: Floats, y: Floats) -> tuple[float, float, float
 
 @kernel
 def without_bias(
-    x: Floats, y: Floats, steps: Floats, detail: float, gap: float, open_parts: float, c: Constants
+    x: Floats, y: Floats, steps: Floats, detail: float, gap: float, parts: tuple[float, float], c: Constants
 ) -> Floats:
-    """Return y without what the ends of the ladder add, for a line whose dimension is 1 + `gap`."""
+    """Return y without what the ends of the ladder add, for a line whose dimension is 1 + `gap`.
+
+    `parts` are the numbers of its open lines and of its rings. Each part's last step adds length; a ring
+    also turns back, which shortens it the more the straighter it is otherwise, but for a smooth one.
+    """
     fine = c.fine_bias * gap**1.5
-    coarse = c.coarse_bias * gap / (1.0 + gap) * open_parts
+    coarse = c.coarse_bias * gap / (1.0 + gap) * (parts[0] + parts[1])
+    coarse -= c.ring_turn * np.exp(-gap / 0.3) * min(gap / 0.05, 1.0) * parts[1]
     crowding = c.crowding * gap**1.5 / (x[-1] - x[0]) ** 0.8
     z = np.empty(len(y))
     for k in range(len(y)):

@@ -65,10 +65,12 @@ class Constants(NamedTuple):
     ramp: float
     fine_bias: float
     coarse_bias: float
+    ring_turn: float
     crowding: float
     own_least: float
     own_low: float
     own_long: float
+    own_long_below: float
     own_without: float
     ring: float
     ring_doubt: float
@@ -78,8 +80,11 @@ class Constants(NamedTuple):
     quantile: float
     skew: float
     tilt: float
+    tilt_fade: float
+    lean: float
     ripple_share: float
     threshold: float
+    rough_threshold: float
     break_shift: float
     smooth_below: float
     fewest_decades: float
@@ -96,8 +101,8 @@ def _interval(row: Floats, c: Constants) -> None:
     half = c.quantile * row[PROCESS_ERROR]
     reach = min(half / max(gap, 0.002), c.skew * (0.05 / max(gap, 0.007)) ** 0.37)
     tilt = min(max((gap - 0.35) / 0.3, 0.0), 1.0)
-    short = min(3.0 / (row[LAST_X] - row[FIRST_X]), 1.0) ** 2
-    row[LOW] = max(row[DIMENSION] - half * (1.0 - 0.1 * tilt), 1.0)
+    short = min(3.0 / (row[LAST_X] - row[FIRST_X]), 1.0) ** c.tilt_fade
+    row[LOW] = max(row[DIMENSION] - half * (1.0 - c.lean * tilt), 1.0)
     row[HIGH] = max(row[DIMENSION] + half + c.tilt * tilt * short, 1.0 + gap * np.exp(reach))
     if row[VERDICT] == TWO_REGIME or row[VERDICT] == CURVED:
         row[LOW] = max(min(row[LOW], row[FINE_DIMENSION], row[COARSE_DIMENSION]), 1.0)
@@ -111,7 +116,7 @@ def _interval(row: Floats, c: Constants) -> None:
 @kernel
 def _judge(
     row: Floats, x: Floats, y: Floats, steps: Floats, noise: Floats, tallies: Floats,
-    detail: float, open_parts: float, c: Constants,
+    detail: float, parts: tuple[float, float], c: Constants,
 ) -> None:  # fmt: skip
     """Judge the usable rungs of one feature; see `judge_ladders`."""
     row[RUNGS], row[FIRST_X], row[LAST_X], row[VERDICT] = len(x), x[0], x[-1], TOO_FEW
@@ -124,7 +129,7 @@ def _judge(
     z = y
     for _ in range(3):
         gap = min(max(-slope, 0.0), 1.0)
-        z = without_bias(x, y, steps, detail, gap, open_parts, c)
+        z = without_bias(x, y, steps, detail, gap, parts, c)
         slope, mean_x, mean_y, xx = weighted_slope(w, x, z)
     row[DIMENSION], row[MEAN_X], row[MEAN_Y] = 1.0 - slope, mean_x, mean_y
     total, residual = 0.0, 0.0
@@ -134,17 +139,19 @@ def _judge(
     row[RESIDUAL], row[R2] = np.sqrt(residual), 1.0 - residual / total if total > 0.0 else 1.0
     row[SPREAD] = line_spread(w, x, z, noise, slope)
     gap = max(row[DIMENSION] - 1.0, 1e-6)
+    ring = parts[0] == 0.0
     if tallies.shape[1] > 0:
         scale = c.own_low / np.sqrt(max(gap, 0.02))
-        scale *= (span / 5.0) ** (c.own_long * max(0.0, 1.0 - gap / 0.15))
+        if not ring:
+            scale *= (span / 5.0) ** (c.own_long * max(0.0, 1.0 - gap / c.own_long_below))
         own = own_error(x, steps, tallies) * max(scale, c.own_least)
     else:
         own = c.own_without * np.sqrt(gap) * (1.0 + 0.5 * gap) / span
-    if open_parts == 0.0:
+    if ring:
         own *= c.ring
     bends = bend_square(w, x, z, mean_x, xx)
     doubt = c.bias_doubt * (row[DIMENSION] - row[RAW_DIMENSION])
-    closure = c.ring_doubt / (steps[-1] * span) if open_parts == 0.0 else 0.0
+    closure = c.ring_doubt / (steps[-1] * span) if ring else 0.0
     ripple = c.ripple * row[RESIDUAL] / (span * span)
     row[OWN_ERROR] = own
     row[PROCESS_ERROR] = np.sqrt(own**2 + c.bend**2 * bends + doubt**2 + closure**2 + ripple**2)
@@ -195,6 +202,7 @@ def judge_ladders(
     used: NDArray[np.bool_],
     detail: Floats,
     open_parts: Floats,
+    rings: Floats,
     c: Constants,
 ) -> Floats:
     """Judge every feature's ladder.
@@ -209,6 +217,7 @@ def judge_ladders(
     used : (q,) the rungs to judge by, see `used_rungs`
     detail : (n,) ln of the finest detail of the source, in the unit of the rulers
     open_parts : (n,) number of open lines; 0 where a feature is made of rings alone
+    rings : (n,) number of rings whose turning back is to be taken out
 
     Returns
     -------
@@ -231,6 +240,6 @@ def judge_ladders(
         if n_used > 0:
             _judge(
                 out[i], rx[:n_used], ry[:n_used], rsteps[:n_used], rnoise[:n_used], rtallies[:n_used],
-                detail[i], open_parts[i], c,
+                detail[i], (open_parts[i], rings[i]), c,
             )  # fmt: skip
     return out

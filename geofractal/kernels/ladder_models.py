@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from geofractal.kernels.jit import kernel
+from geofractal.kernels.ladder_evidence import weighted_slope
 from geofractal.kernels.ladder_fields import (
     BREAK_HIGH_X,
     BREAK_LOW_X,
@@ -29,6 +30,16 @@ if TYPE_CHECKING:
 
 PLACES = 31
 """Places at which a break is tried."""
+
+NO_BREAK_SHARE = 0.85
+"""Share of the straight line's mean square from which on an alternative explains nothing, even where the
+first half decade is smooth: a ripple may begin with a stretch that looks it."""
+
+PERIODS = 15
+"""Periods that are tried for a ripple, in even ratios."""
+
+SHORTEST_PERIOD = 2.0
+"""Shortest ratio of rulers after which a ripple repeats; two rungs lie a factor 1.2 apart."""
 
 
 @kernel
@@ -90,6 +101,33 @@ def _best_step(w: Floats, x: Floats, y: Floats, places: Floats) -> tuple[Floats,
 
 
 @kernel
+def _ripple_left(w: Floats, x: Floats, y: Floats) -> float:
+    """Return the mean square left by a line with a sine wave that fits twice into the ladder at least.
+
+    Curves made of equal pieces carry such a wave; its period is the logarithm of their ratio.
+    """
+    rest = _across(w, x, y)
+    cosine, sine = np.empty(len(x)), np.empty(len(x))
+    shortest, longest = np.log(SHORTEST_PERIOD), 0.5 * (x[-1] - x[0])
+    best = np.inf
+    for i in range(PERIODS):
+        if longest > shortest:
+            period = shortest * (longest / shortest) ** (i / (PERIODS - 1))
+            for k in range(len(x)):
+                cosine[k] = np.cos(2.0 * np.pi * x[k] / period)
+                sine[k] = np.sin(2.0 * np.pi * x[k] / period)
+            best = min(best, _residual(w, rest, _across(w, x, cosine), _across(w, x, sine))[0])
+    return best
+
+
+@kernel
+def _across(w: Floats, x: Floats, v: Floats) -> Floats:
+    """Return what a straight line leaves of v."""
+    slope, mean_x, mean_v, _ = weighted_slope(w, x, v)
+    return v - mean_v - slope * (x - mean_x)
+
+
+@kernel
 def _limits(left: Floats, places: Floats, best: int, freedom: float) -> tuple[float, float]:
     """Return the first and last place whose mean square is not significantly above the best."""
     limit = left[best] * (1.0 + 3.84 / max(freedom, 1.0))
@@ -98,6 +136,21 @@ def _limits(left: Floats, places: Floats, best: int, freedom: float) -> tuple[fl
         if left[i] <= limit:
             low, high = min(low, i), max(high, i)
     return places[low], places[high]
+
+
+@kernel
+def _likely_place(left: Floats, places: Floats, best: int, freedom: float) -> float:
+    """Return halfway from the best place to the mean of all, each counted by how nearly it is as good.
+
+    A ripple that beats with the hinge leaves several places nearly as good as the best.
+    """
+    total, mean = 0.0, 0.0
+    for i in range(len(places)):
+        worse = left[i] / left[best] - 1.0 if left[best] > 0.0 else np.inf
+        likely = 1.0 if i == best else np.exp(-0.25 * max(freedom, 1.0) * worse)
+        total += likely
+        mean += likely * places[i]
+    return float(0.5 * (places[best] + mean / total))
 
 
 @kernel
@@ -132,7 +185,7 @@ def compare_models(
     """
     gap = row[DIMENSION] - 1.0
     threshold = c.threshold * (0.45 + min(max(gap - 0.05, 0.0) / 0.15, 1.0) * 0.55)
-    threshold += c.threshold * min(max(gap - 0.2, 0.0) / 0.3, 1.0) * 0.8
+    threshold += c.threshold * min(max(gap - 0.2, 0.0) / 0.3, c.rough_threshold) * 0.8
     threshold *= max(1.0, (x[-1] - x[0]) / 5.0) ** 0.7
     needed = threshold * threshold * unit
     row[EVIDENCE] = np.sqrt(residual / unit) / threshold
@@ -154,6 +207,8 @@ def compare_models(
     row[EVIDENCE] = np.sqrt(max(residual - best, 0.0) / unit) / threshold
     if np.isnan(bend) and (residual - best <= needed or best > c.ripple_share * residual):
         return
+    if best > NO_BREAK_SHARE * residual or _ripple_left(w, x, y) < best:
+        return
     freedom = span / 0.55 - 4.0
     row[VERDICT] = TWO_REGIME
     row[FINE_DIMENSION], row[COARSE_DIMENSION] = 1.0 - fine, 1.0 - coarse
@@ -165,7 +220,7 @@ def compare_models(
         row[BREAK_X], row[BREAK_LOW_X], row[BREAK_HIGH_X] = bend, bend - 0.5, bend + 0.5
     elif hinge_left[hinge] <= 3.0 * parabola:
         low, high = _limits(hinge_left, places, hinge, freedom)
-        row[BREAK_X] = places[hinge] + c.break_shift
+        row[BREAK_X] = _likely_place(hinge_left, places, hinge, freedom) + c.break_shift
         row[BREAK_LOW_X], row[BREAK_HIGH_X] = low + c.break_shift - 0.7, high + c.break_shift + 0.5
     else:
         row[VERDICT] = CURVED

@@ -6,8 +6,8 @@ Fit
     first 1.2 e-folds of the ladder weights rise from a fifth to one, so that the ripple which curves made
     of equal pieces carry does not leak into the slope. Two effects of a ladder's ends are taken out
     beforehand: what the source's own detail hides of a fine ruler's length, and the last partial step of
-    an open line. A ring closes, which its coarse rungs show: beyond the first decade they need 24 steps,
-    and what is left of it is added to the doubt.
+    a line or ring. A ring turns back, which shortens its coarse rungs: for rings drawn from open curves that
+    is taken out, beyond the first decade rungs need 24 steps, and what is left is added to the doubt.
 Two uncertainties
     `spread` is that of this line alone: starts, directions and where the rulers happen to lie.
     `low` and `high` are the 95 % interval for the process that made the line, the one to use when two
@@ -17,8 +17,9 @@ Two uncertainties
     Both were scaled once, by simulation; near dimension 1 the interval reaches farther upwards.
 Verdict
     A hinge, a step and a parabola are fitted beside the straight line. The straight line stands unless
-    one of them takes up more than a threshold, in units of the line's own noise, and leaves less than 56 %
-    of the mean square residual (so a ripple is no break). R2 decides nothing.
+    one of them takes up more than a threshold, in units of the line's own noise, leaves less than 66 % of
+    the mean square residual, and leaves less than a sine wave does that fits twice into the ladder: curves
+    made of equal pieces carry such a ripple, and it is no break. R2 decides nothing.
 """
 
 from __future__ import annotations
@@ -60,6 +61,7 @@ class Rungs:
     left_out : (q,) length of the parts that were too short for the rung, metres
     detail : (n,) vertex spacing in metres that hides detail from fine rulers; 0 where nothing is hidden
     open_parts : (n,) number of open lines in each feature; 0 where it is made of rings alone
+    rings : (n,) number of rings, whose turning back shortens the coarse rungs; None where it does not
     """
 
     lengths: Floats
@@ -69,6 +71,7 @@ class Rungs:
     left_out: Floats
     detail: Floats
     open_parts: Floats
+    rings: Floats | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,7 +92,8 @@ class Judgement:
     verdict : (n,) index into `VERDICTS`
     break_at, break_low, break_high : (n,) metres, under ``two-regime``
     fine_dimension, coarse_dimension : (n,) below and above the break, or at both ends where curved
-    evidence : (n,) how much better the best alternative is than a power law, in thresholds: 1 decides
+    evidence : (n,) how much better the best alternative is than a power law, in thresholds: at least 1
+        wherever a rough line is no power law
     content : (n,) prefactor of L(r) = content r^(1 - D), in m^D
     log10_content : (n,)
     used : (q,) whether a rung is one of those used; none is where there is no dimension
@@ -196,6 +200,7 @@ def judge(ladders: Ladders, rungs: Rungs, *, estimator: Literal["divider", "box"
         used,
         np.log(rungs.detail, where=rungs.detail > 0, out=np.full(len(rungs.detail), -np.inf)),
         rungs.open_parts,
+        np.zeros(len(rungs.open_parts)) if rungs.rings is None else rungs.rings,
         constants,
     )
     return _judgement(table, used, ladders.owners)
@@ -218,8 +223,12 @@ def divider_rungs(
     """
     scales = scales_of(lines) if scales is None else scales
     opens = np.concatenate(([0], np.cumsum(~lines.closed)))[lines.feature_offsets]
+    parts = np.diff(lines.feature_offsets)
     detail = np.where(scales[:, 3] > 0, 0.0, scales[:, 0])
-    return Rungs(length, steps, spread / np.sqrt(2), tallies, left_out, detail, np.diff(opens).astype(float))
+    open_parts = np.diff(opens).astype(float)
+    return Rungs(
+        length, steps, spread / np.sqrt(2), tallies, left_out, detail, open_parts, parts - open_parts
+    )
 
 
 def _whole_enough(ladders: Ladders, rungs: Rungs) -> Bools:
