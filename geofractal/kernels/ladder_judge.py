@@ -81,6 +81,7 @@ class Constants(NamedTuple):
     skew: float
     tilt: float
     tilt_fade: float
+    tilt_power: float
     lean: float
     ripple_share: float
     threshold: float
@@ -103,7 +104,8 @@ def _interval(row: Floats, c: Constants) -> None:
     tilt = min(max((gap - 0.35) / 0.3, 0.0), 1.0)
     short = min(3.0 / (row[LAST_X] - row[FIRST_X]), 1.0) ** c.tilt_fade
     row[LOW] = max(row[DIMENSION] - half * (1.0 - c.lean * tilt), 1.0)
-    row[HIGH] = max(row[DIMENSION] + half + c.tilt * tilt * short, 1.0 + gap * np.exp(reach))
+    above = (half**c.tilt_power + (c.tilt * tilt * short) ** c.tilt_power) ** (1.0 / c.tilt_power)
+    row[HIGH] = max(row[DIMENSION] + above, 1.0 + gap * np.exp(reach))
     if row[VERDICT] == TWO_REGIME or row[VERDICT] == CURVED:
         row[LOW] = max(min(row[LOW], row[FINE_DIMENSION], row[COARSE_DIMENSION]), 1.0)
         row[HIGH] = max(row[HIGH], row[FINE_DIMENSION], row[COARSE_DIMENSION])
