@@ -58,10 +58,9 @@ def without_bias(
     fine = c.fine_bias * gap**1.5
     coarse = c.coarse_bias * gap / (1.0 + gap) * (parts[0] + parts[1])
     coarse -= c.ring_turn * np.exp(-gap / 0.3) * min(gap / 0.05, 1.0) * parts[1]
-    crowding = c.crowding * gap**1.5 / (x[-1] - x[0]) ** 0.8
     z = np.empty(len(y))
     for k in range(len(y)):
-        z[k] = y[k] + fine * np.exp(detail - x[k]) - coarse / steps[k] - crowding * (x[k] - x[0])
+        z[k] = y[k] + fine * np.exp(detail - x[k]) - coarse / steps[k]
     return z
 
 

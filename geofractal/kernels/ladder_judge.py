@@ -66,7 +66,6 @@ class Constants(NamedTuple):
     fine_bias: float
     coarse_bias: float
     ring_turn: float
-    crowding: float
     own_least: float
     own_low: float
     own_long: float

@@ -19,7 +19,6 @@ DIVIDER = Constants(
     fine_bias=0.4,
     coarse_bias=1.2,
     ring_turn=1.15,
-    crowding=0.0,
     own_least=0.52,
     own_low=0.425,
     own_long=-0.4,
