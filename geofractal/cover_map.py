@@ -2,20 +2,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, fields, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from geofractal.errors import ConfigError
+from geofractal.held_patches import HeldPatches
 from geofractal.landcover.barriers import BARRIER, Barriers
-from geofractal.landcover.covers import Pack, pack_groups
+from geofractal.landcover.covers import Pack, asked_packs, pack_groups
+from geofractal.landcover.labelling import label_patches
+from geofractal.landcover.patch_sieve import Sieve
 from geofractal.landcover.perimeter import Perimeter
 from geofractal.landcover.strips import NOT_COVERED, Strip
 from geofractal.landcover.zones import ZonePainter, Zones
 from geofractal.measure import CoverPatches, Outline
-from geofractal.patches import patch_frames
+from geofractal.patches import patch_frame, patch_frames
 from geofractal.reader.raster import Raster
 from geofractal.reader.raster_classes import Legend
 
@@ -27,8 +30,6 @@ OWN_BARRIER = (
     f"{BARRIER!r} is what cells are called that barriers with a width take; a class or group of this name "
     "needs another one."
 )
-PLACE = ("zone", "first_row", "first_column")
-HELD = ("cells", "area_m2", "perimeter_m", "touches_edge", "filled_area_m2", "holes", *PLACE)
 
 
 @dataclass(frozen=True)
@@ -89,47 +90,60 @@ class RasterCover:
         return list(self.covers or (name for name in every if not (self.barred and name == BARRIER)))
 
     def patches(
-        self, *, neighbours: int = 8, perimeter: Outline = "cell-edges", map_edge: bool = True
+        self,
+        *,
+        neighbours: int = 8,
+        perimeter: Outline = "cell-edges",
+        map_edge: bool = True,
+        columns: Sequence[str] | None = None,
+        smallest_cells: int = 1,
+        smallest_area_m2: float = 0.0,
     ) -> Iterator[CoverPatches]:
         """Yield the patches of the covers asked for, once for each set of zones that share no cell."""
         convention = Perimeter(perimeter, map_edge)
         for members in (self.zones.sets if self.zones else ()) or ((),):
-            yield CoverPatches(self._table(members, convention, neighbours), members)
+            held = HeldPatches(columns)
+            for pack in asked_packs(self.covers, self.groups):
+                sieve = Sieve(self.raster.grid, smallest_cells, smallest_area_m2)
+                self._gather(held, pack, members, convention, neighbours, sieve)
+            yield held.result(self.names, members)
 
-    def _table(self, members: tuple[int, ...], convention: Perimeter, neighbours: int) -> pd.DataFrame:
-        import pandas as pd
+    def _gather(
+        self,
+        held: HeldPatches,
+        pack: Pack,
+        members: tuple[int, ...],
+        convention: Perimeter,
+        neighbours: int,
+        sieve: Sieve,
+    ) -> None:
+        """Read the map once, and hold the patches of a pack's covers that are asked for."""
+        raster, strips = self._named(pack), self._strips(pack, members)
+        outlines = convention.follows_outlines
+        for found in label_patches(strips, neighbours=neighbours, outlines=outlines):
+            frame = patch_frame(sieve(found.patches), raster, convention, zoned=bool(members))
+            asked = np.array([self._asks(pack, name) for name in frame["cover"].cat.categories], np.bool_)
+            held.add(frame if asked.all() else frame[asked[frame["cover"].cat.codes]])
+        for (zone, kind), count in sieve.counts.items():
+            if self._asks(pack, cover := raster.legend.names[kind]):
+                held.count(zone, cover, count)
 
-        columns: dict[str, list[Any]] = {}
-        numbers: dict[str, int] = {}
-        for frame in self.frames(convention, neighbours, members=members):
-            cover = frame["cover"].cat
-            of = np.array([numbers.setdefault(name, len(numbers)) for name in cover.categories], np.int16)
-            columns.setdefault("cover", []).append(of[cover.codes])
-            for name in (name for name in HELD if name in frame):  # copies: a frame's columns share memory
-                kind = np.int32 if name in PLACE else frame[name].dtype
-                columns.setdefault(name, []).append(frame[name].to_numpy(kind, copy=True))
-        table = {name: np.concatenate(columns.pop(name)) for name in [*columns]}
-        names = self.names
-        place = np.array([names.index(name) if name in names else -1 for name in numbers], np.int16)
-        cover = pd.Categorical.from_codes(place[table.pop("cover")], pd.Index(names, dtype=str))
-        return pd.DataFrame({"cover": cover, **table}, copy=False)
+    def _asks(self, pack: Pack, cover: str) -> bool:
+        """Return whether a class, or a cover of a pack of groups, is asked for."""
+        if self.barred and cover == BARRIER:
+            return False
+        wanted = pack.names or tuple(name for name in self.covers if name not in self.groups)
+        return not wanted or cover in wanted
 
-    def frames(
-        self, convention: Perimeter, neighbours: int, *, members: tuple[int, ...] = ()
-    ) -> Iterator[pd.DataFrame]:
-        """Yield patches while the map is read, once for its classes and once for each pack of groups."""
-        for pack in self._packs():
-            strips = pack.remap(self.raster.strips(), self.raster.legend.names)
-            if self.barriers is not None:
-                strips = self.barriers(strips)
-            if members:
-                assert self.zones is not None
-                strips = ZonePainter(self.zones, members, np.zeros(len(self.zones), np.int64))(strips)
-            wanted = pack.names or tuple(cover for cover in self.covers if cover not in self.groups)
-            for frame in patch_frames(self._named(pack), strips, convention, neighbours, zoned=bool(members)):
-                if self.barred:
-                    frame = frame[frame["cover"] != BARRIER]  # noqa: PLW2901 - what is left of it
-                yield frame[frame["cover"].isin(wanted)] if wanted else frame
+    def _strips(self, pack: Pack, members: tuple[int, ...]) -> Iterator[Strip]:
+        """Yield strips: covers in place of classes, with barriers and the zones of one set."""
+        strips = pack.remap(self.raster.strips(), self.raster.legend.names)
+        if self.barriers is not None:
+            strips = self.barriers(strips)
+        if members:
+            assert self.zones is not None
+            strips = ZonePainter(self.zones, members, np.zeros(len(self.zones), np.int64))(strips)
+        return strips
 
     def polygons(self, neighbours: int) -> Iterator[pd.DataFrame]:
         """Yield the patches of the covers asked for with their polygons; whatever else is left undrawn."""
@@ -143,12 +157,6 @@ class RasterCover:
     def _named(self, pack: Pack) -> Raster:
         """Return the raster under the names of a pack's covers."""
         return replace(self.raster, legend=Legend([*pack.names, OTHER], {})) if pack.names else self.raster
-
-    def _packs(self) -> tuple[Pack, ...]:
-        wanted = self.covers or tuple(self.groups)
-        packs = pack_groups({name: self.groups[name] for name in wanted if name in self.groups})
-        classes = not self.covers or any(name not in self.groups for name in self.covers)
-        return (Pack(), *packs) if classes else packs
 
 
 def _only(pack: Pack, strips: Iterator[Strip]) -> Iterator[Strip]:

@@ -9,7 +9,7 @@ zones and takes a table of figures.
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, ClassVar, Generic, Literal, Protocol, TypeVar
 
@@ -264,10 +264,13 @@ class CoverPatches:
         ``filled_area_m2`` and ``holes``; with zones ``zone``, the number of its zone, -1 in none, -2 in
         several. Of polygons, ``geometry`` in place of cells
     zones : numbers of the zones told apart; zones that overlap come one after the other
+    smaller : what the table leaves out because it is too small: ``cover``, with zones ``zone``, and
+        ``patches``, the number of them
     """
 
     table: pd.DataFrame
     zones: tuple[int, ...]
+    smaller: pd.DataFrame
 
 
 class CoverMap(Protocol):
@@ -299,8 +302,22 @@ class CoverMap(Protocol):
     @property
     def covers(self) -> tuple[str, ...]: ...  # noqa: D102 - told above
 
-    def patches(self, *, neighbours: int, perimeter: Outline, map_edge: bool) -> Iterator[CoverPatches]:
-        """Yield the patches of the covers asked for, whole, once for each set of zones without overlap."""
+    def patches(
+        self,
+        *,
+        neighbours: int,
+        perimeter: Outline,
+        map_edge: bool,
+        columns: Sequence[str] | None = None,
+        smallest_cells: int = 1,
+        smallest_area_m2: float = 0.0,
+    ) -> Iterator[CoverPatches]:
+        """Yield the patches of the covers asked for, whole, once for each set of zones without overlap.
+
+        Memory grows with the patches that are handed out: most of those of a large map are small. A measure
+        that has no use for patches of fewer cells or less area, or for some columns, says so; the small ones
+        are then counted, and no more. ``cover`` and ``zone`` are always there. Polygons have no cells.
+        """
 
 
 @dataclass(frozen=True, slots=True)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
@@ -14,6 +14,7 @@ import shapely
 from geofractal.cover_map import OWN_BARRIER
 from geofractal.errors import ConfigError, LayerError
 from geofractal.estimators.fragmentation_polygons import cover_faces
+from geofractal.held_patches import sifted
 from geofractal.landcover.barriers import BARRIER
 from geofractal.landcover.polygon_map import PolygonMap, polygon_map
 from geofractal.landcover.polygon_zones import PolygonBarriers, PolygonZones
@@ -104,6 +105,9 @@ class PolygonCover:
         neighbours: int = 8,
         perimeter: Outline = "cell-edges",
         map_edge: bool = True,  # noqa: ARG002 - polygons have none
+        columns: Sequence[str] | None = None,
+        smallest_cells: int = 1,  # noqa: ARG002 - polygons have none
+        smallest_area_m2: float = 0.0,
     ) -> Iterator[CoverPatches]:
         """Yield the patches of the covers asked for, once for each set of zones that share no area."""
         import pandas as pd
@@ -117,7 +121,7 @@ class PolygonCover:
         table["cover"] = pd.Categorical(table["cover"], pd.Index(names, dtype=str))
         for members in (() if self.zones is None else self.zones.sets) or ((),):
             told = table.assign(zone=self._zone_of(table, members)) if members else table
-            yield CoverPatches(told, members)
+            yield sifted(told, members, columns, smallest_area_m2)
 
     def _table(self, name: str, neighbours: int, perimeter: Outline) -> pd.DataFrame:
         """Return the patches of a cover; its polygons make them alone unless barriers cut these."""

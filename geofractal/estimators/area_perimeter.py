@@ -7,7 +7,7 @@ least squares of ln P on ln A, and the reduced major axis (Warton et al. 2006, B
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.errors import ConfigError
+from geofractal.estimators.patch_groups import patch_groups
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -71,6 +72,7 @@ def area_perimeter_dimension(
     smallest_area_m2: float = 0.0,
     edge_patches: bool = False,
     area: str = "area_m2",
+    smaller: pd.DataFrame | None = None,
 ) -> pd.DataFrame:
     """Return the area-perimeter dimension of each class.
 
@@ -83,6 +85,8 @@ def area_perimeter_dimension(
     smallest_area_m2 : smaller patches are left out; a common size for sources that differ in scale
     edge_patches : whether patches that touch the map's edge are used
     area : column of areas; ``filled_area_m2`` counts holes as part of the patch
+    smaller : further patches that are too small and were only counted: the columns of `by`, and ``patches``,
+        their number
 
     Returns
     -------
@@ -114,7 +118,7 @@ def area_perimeter_dimension(
     if "cells" in patches:
         small |= patches["cells"] < smallest_cells
     rows = []
-    for key, group, too_small in _groups(patches, by, small):
+    for key, group, too_small in patch_groups(patches, by, small, smaller):
         edge = group["touches_edge"] & (not edge_patches)
         astray = (group["perimeter_m"].isna() | ("zone" in by and group["zone"] < 0)) & ~edge
         used = group[~(edge | astray)]
@@ -125,39 +129,6 @@ def area_perimeter_dimension(
         note = figures.pop("area_perimeter_note")
         rows.append(dict(zip(by, key, strict=True)) | figures | left_out | {"area_perimeter_note": note})
     return pd.DataFrame(rows, columns=None if rows else [*by, *fit_patches(np.empty(0), np.empty(0), None)])
-
-
-def _groups(
-    patches: pd.DataFrame, by: Sequence[str], small: pd.Series[bool]
-) -> Iterator[tuple[tuple[Any, ...], pd.DataFrame, int]]:
-    """Yield each group's key, its patches that are large enough, and the number of those that are not.
-
-    Most patches of a large map are small: they are counted, and only the rest is sorted into groups.
-    """
-    large = patches[~small]
-    number, levels = _numbered(patches, by)
-    counts = np.bincount(number[small], minlength=1)
-    of_large = number[~small]
-    by_group = np.argsort(of_large, kind="stable")
-    bounds = np.searchsorted(of_large[by_group], np.arange(number.max(initial=-1) + 2))
-    for group in np.flatnonzero(np.bincount(number)):
-        place = np.unravel_index(group, [len(values) for values in levels]) if levels else ()
-        key = tuple(values[at] for values, at in zip(levels, place, strict=True))
-        rows = by_group[bounds[group] : bounds[group + 1]]
-        yield key, large.iloc[rows], int(counts[group]) if group < len(counts) else 0
-
-
-def _numbered(patches: pd.DataFrame, by: Sequence[str]) -> tuple[NDArray[np.int64], list[Any]]:
-    """Return the number of each patch's group, in the order of the keys, and the values of each key."""
-    import pandas as pd
-
-    number, levels = np.zeros(len(patches), np.int64), []
-    for name in by:
-        codes, values = pd.factorize(patches[name], sort=True)
-        number *= len(values)
-        number += codes
-        levels.append(values)
-    return number, levels
 
 
 def area_perimeter_residual(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
+from itertools import chain
 from typing import TYPE_CHECKING, Annotated, Any, ClassVar, Literal, Self
 
 import numpy as np
@@ -99,18 +100,24 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
         """Fit each class on the whole map, and within each zone the patches that lie in it alone."""
         area = "filled_area_m2" if options.filled else "area_m2"
 
-        def fit(patches: pd.DataFrame, by: Sequence[str]) -> pd.DataFrame:
+        def fit(found: CoverPatches, by: Sequence[str]) -> pd.DataFrame:
             return area_perimeter_dimension(
-                patches,
+                found.table,
                 by=by,
                 smallest_cells=options.smallest_cells,
                 smallest_area_m2=options.smallest_area_m2,
                 edge_patches=options.edge_patches,
                 area=area,
+                smaller=found.smaller,
             )
 
         found = cover.patches(
-            neighbours=options.neighbours, perimeter=options.perimeter, map_edge=options.map_edge
+            neighbours=options.neighbours,
+            perimeter=options.perimeter,
+            map_edge=options.map_edge,
+            columns=None if options.patches else ("cells", area, "perimeter_m", "touches_edge"),
+            smallest_cells=1 if options.patches else options.smallest_cells,
+            smallest_area_m2=0.0 if options.patches or options.filled else options.smallest_area_m2,
         )
         fits, patches = _fitted(cover, found, fit)
         if options.patches:
@@ -142,21 +149,28 @@ class NumberAreaExponent(CoverMeasure[PatchOptions]):
     def measure(self, cover: CoverMap, options: PatchOptions) -> CoverResult:
         """Fit each class on the whole map, and within each zone the patches that lie in it alone."""
 
-        def fit(patches: pd.DataFrame, by: Sequence[str]) -> pd.DataFrame:
+        def fit(found: CoverPatches, by: Sequence[str]) -> pd.DataFrame:
             return number_area_exponent(
-                patches,
+                found.table,
                 by=by,
                 smallest_area_m2=options.smallest_area_m2,
                 edge_patches=options.edge_patches,
+                smaller=found.smaller,
             )
 
-        found = cover.patches(neighbours=options.neighbours, perimeter="cell-edges", map_edge=True)
+        found = cover.patches(
+            neighbours=options.neighbours,
+            perimeter="cell-edges",
+            map_edge=True,
+            columns=("area_m2", "touches_edge"),
+            smallest_area_m2=options.smallest_area_m2,
+        )
         fits, _ = _fitted(cover, found, fit)
         said = [_joined(verdict, None) for verdict in fits["number_area_verdict"]]
         return CoverResult(_figures(fits, NUMBER_AREA, said, cover))
 
 
-Fit = Callable[["pd.DataFrame", Sequence[str]], "pd.DataFrame"]
+Fit = Callable[[CoverPatches, Sequence[str]], "pd.DataFrame"]
 
 
 def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -164,16 +178,22 @@ def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[p
     import pandas as pd
 
     first = next(found)
-    whole = first.table
-    wanted = cover.covers or tuple(whole["cover"].cat.remove_unused_categories().cat.categories)
+    wanted = cover.covers or _met(first)
+    last = 0 if cover.zones is None else len(cover.zones)
     rows = []
-    for part in (first, *found):
+    for part in chain([first], found):
         if part.zones:
             names = {zone: cover.zones.names[zone] for zone in part.zones}
-            rows.append(_complete(fit(part.table, ("zone", "cover")), names, wanted))
-    last = 0 if cover.zones is None else len(cover.zones)
-    rows.append(_complete(fit(whole, ("cover",)).assign(zone=last), {last: WHOLE_MAP}, wanted))
-    return pd.concat(rows, ignore_index=True).sort_values("zone", kind="stable", ignore_index=True), whole
+            rows.append(_complete(fit(part, ("zone", "cover")), names, wanted))
+    rows.append(_complete(fit(first, ("cover",)).assign(zone=last), {last: WHOLE_MAP}, wanted))
+    fits = pd.concat(rows, ignore_index=True).sort_values("zone", kind="stable", ignore_index=True)
+    return fits, first.table
+
+
+def _met(found: CoverPatches) -> list[str]:
+    """Return the covers that have patches, too small ones included."""
+    met = {*found.table["cover"].unique(), *found.smaller["cover"]}
+    return [name for name in found.table["cover"].cat.categories if name in met]
 
 
 def _complete(fits: pd.DataFrame, units: Mapping[int, str], wanted: Collection[str]) -> pd.DataFrame:

@@ -18,7 +18,7 @@ from geofractal.estimators.fragmentation_quantities import (
     quantities_of,
 )
 from geofractal.landcover.barriers import BARRIER
-from geofractal.landcover.covers import Pack, pack_groups
+from geofractal.landcover.covers import Pack, asked_packs
 from geofractal.landcover.patch_totals import Totals
 from geofractal.measure import ALL_COVERS, FIGURE_COLUMNS, WHOLE_MAP
 
@@ -64,11 +64,7 @@ class Reporting:
 
     def packs(self) -> tuple[Pack, ...]:
         """Return what is measured together: classes, then groups, as far as asked for."""
-        wanted = self.covers or tuple(self.groups)
-        classes = not self.covers or any(name not in self.groups for name in self.covers)
-        groups = {name: self.groups[name] for name in wanted if name in self.groups}
-        packs = pack_groups(groups | ({BARRIER: (BARRIER,)} if self.barred and not classes else {}))
-        return (Pack(), *packs) if classes else packs
+        return asked_packs(self.covers, self.groups, (BARRIER,) if self.barred else ())
 
     def wanted(self, pack: Pack) -> list[tuple[int, str]]:
         """Return number and name of the covers of a pack that are asked for."""

@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.errors import ConfigError
+from geofractal.estimators.patch_groups import patch_groups
 from geofractal.kernels.tails import best_cut
 
 if TYPE_CHECKING:
@@ -63,6 +64,7 @@ def number_area_exponent(
     smallest_area_m2: float = 0.0,
     edge_patches: bool = False,
     area: str = "area_m2",
+    smaller: pd.DataFrame | None = None,
 ) -> pd.DataFrame:
     """Return the number-area exponent of each class.
 
@@ -73,6 +75,8 @@ def number_area_exponent(
     smallest_area_m2 : smaller patches are left out before the cut is chosen
     edge_patches : whether patches that touch the map's edge are used; large ones do so more often
     area : column of areas
+    smaller : further patches that are too small and were only counted: the columns of `by`, and ``patches``,
+        their number
 
     Returns
     -------
@@ -101,13 +105,10 @@ def number_area_exponent(
             f"The patches lack the columns {', '.join(missing)}; they have {', '.join(patches)}."
         )
     rows = []
-    patches = patches[list(dict.fromkeys([*by, area, "touches_edge"]))]
-    groups = patches.groupby(list(by), observed=True, sort=True) if by else [((), patches)]
-    for key, group in groups:
-        small = group[area] < smallest_area_m2
-        edge = group["touches_edge"] & ~small & (not edge_patches)
-        figures = fit_areas(group.loc[~(small | edge), area].to_numpy(float))
-        left_out = {"patches_left_out_small": int(small.sum()), "patches_left_out_edge": int(edge.sum())}
+    for key, group, too_small in patch_groups(patches, by, patches[area] < smallest_area_m2, smaller):
+        edge = group["touches_edge"] & (not edge_patches)
+        figures = fit_areas(group.loc[~edge, area].to_numpy(float))
+        left_out = {"patches_left_out_small": too_small, "patches_left_out_edge": int(edge.sum())}
         rows.append(dict(zip(by, key, strict=True)) | figures | left_out)
     return pd.DataFrame(rows, columns=None if rows else [*by, *fit_areas(np.empty(0))])
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -63,3 +63,17 @@ def pack_groups(groups: Mapping[str, Iterable[str]]) -> tuple[Pack, ...]:
         else:
             free[name] = members
     return tuple(Pack(tuple(one), tuple(one.values())) for one in packs)
+
+
+def asked_packs(
+    covers: Collection[str], groups: Mapping[str, Iterable[str]], always: Collection[str] = ()
+) -> tuple[Pack, ...]:
+    """Return the packs of what is asked for: the classes, then groups; all of it where `covers` is empty.
+
+    Where no class is asked for, those that are `always` told apart are groups of their own.
+    """
+    classes = not covers or any(name not in groups for name in covers)
+    wanted = {name: groups[name] for name in covers or groups if name in groups}
+    if classes:
+        return (Pack(), *pack_groups(wanted))
+    return pack_groups(wanted | {name: (name,) for name in always})

@@ -30,7 +30,9 @@ SEVERAL_ZONES = OUTSIDE - 1
 UNKNOWN = -1
 """Value of outline sums where a patch was put together from pieces in several zones."""
 
-LABELS = 1 << 18
+LABELS = 1 << 16
+"""Pieces, unfinished ones included, after which finished patches are handed out: enough of them that this
+costs no time, and few enough to need no memory."""
 _AT = {name: i for i, name in enumerate(LINES)}
 _OUTLINE = [_AT[name] for name in ("corners", "outer_edge", "filled_area", "holes")]
 
