@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, fields, replace
-from typing import TYPE_CHECKING, Any
+from functools import partial
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from geofractal.errors import ConfigError
 from geofractal.held_patches import HeldPatches
+from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.barriers import BARRIER, Barriers
 from geofractal.landcover.covers import Pack, asked_packs, pack_groups
 from geofractal.landcover.labelling import label_patches
@@ -120,7 +122,9 @@ class RasterCover:
         """Read the map once, and hold the patches of a pack's covers that are asked for."""
         raster, strips = self._named(pack), self._strips(pack, members)
         outlines = convention.follows_outlines
-        for found in label_patches(strips, neighbours=neighbours, outlines=outlines):
+        for found in label_patches(
+            run_ahead(partial(iter, strips)), neighbours=neighbours, outlines=outlines
+        ):
             frame = patch_frame(sieve(found.patches), raster, convention, zoned=bool(members))
             asked = np.array([self._asks(pack, name) for name in frame["cover"].cat.categories], np.bool_)
             held.add(frame if asked.all() else frame[asked[frame["cover"].cat.codes]])

@@ -7,7 +7,7 @@ least squares of ln P on ln A, and the reduced major axis (Warton et al. 2006, B
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -279,22 +279,44 @@ def fit_break(x: Floats, y: Floats) -> Break | None:
     places = places[(places >= x[0] + reach) & (places <= x[-1] - reach)]
     if not len(places):
         return None
-    fits = [_hinge(x, y, float(at)) for at in places]
-    squares = np.array([fit[0] for fit in fits])
+    slopes, squares = _hinges(x, y, places)
     best = int(np.argmin(squares))
     allowed = squares[best] * (1 + _student(n - 4) ** 2 / (n - 4))
     inside = places[squares <= allowed]
-    _, below, above = fits[best]
-    return Break(float(places[best]), float(inside[0]), float(inside[-1]), below, above, float(squares[best]))
+    below, change = slopes[best].tolist()
+    ends = float(inside[0]), float(inside[-1])
+    return Break(float(places[best]), *ends, below, below + change, float(squares[best]))
 
 
-def _hinge(x: Floats, y: Floats, at: float) -> tuple[float, float, float]:
-    """Return squares left and the two slopes of lines that meet at a place."""
-    design = np.stack([np.ones_like(x), x - at, np.maximum(x - at, 0)], axis=1)
-    normal, right = design.T @ design, design.T @ y
+def _hinges(x: Floats, y: Floats, places: Floats) -> tuple[Floats, Floats]:
+    """Return, for lines that meet at each place, the slope below, what is added above, and squares left.
+
+    Squares are infinite where there are no such lines.
+    """
+    normal, right = np.empty((len(places), 3, 3)), np.empty((len(places), 3, 1))
+    for i, design in enumerate(_designs(x, places)):
+        normal[i], right[i, :, 0] = design.T @ design, design.T @ y
+    beta = _solved(normal, right)[:, :, 0]
+    squares = np.array(
+        [((y - design @ line) ** 2).sum() for design, line in zip(_designs(x, places), beta, strict=True)]
+    )
+    return beta[:, 1:], np.where(np.isfinite(squares), squares, np.inf)
+
+
+def _designs(x: Floats, places: Floats) -> Iterator[Floats]:
+    """Yield 1, x - place and what of that is positive, as columns of one array that is filled anew."""
+    design = np.ones((len(x), 3))
+    for place in places:
+        np.subtract(x, place, out=design[:, 1])
+        np.maximum(design[:, 1], 0, out=design[:, 2])
+        yield design
+
+
+def _solved(normal: Floats, right: Floats) -> Floats:
+    """Return the solutions of many systems; NaN where there is none."""
     try:
-        beta = np.linalg.solve(normal, right)
+        return np.asarray(np.linalg.solve(normal, right))
     except np.linalg.LinAlgError:
-        return np.inf, np.nan, np.nan
-    left = y - design @ beta
-    return float((left**2).sum()), float(beta[1]), float(beta[1] + beta[2])
+        if len(normal) == 1:
+            return np.full_like(right, np.nan)
+        return np.concatenate([_solved(normal[i : i + 1], right[i : i + 1]) for i in range(len(normal))])
