@@ -18,7 +18,7 @@ from geofractal.landcover.labelling import label_patches
 from geofractal.landcover.patch_sieve import Sieve
 from geofractal.landcover.perimeter import Perimeter
 from geofractal.landcover.strips import NOT_COVERED, Strip
-from geofractal.landcover.zones import ZonePainter, Zones
+from geofractal.landcover.zones import ZonePainter, Zones, zone_sets
 from geofractal.measure import CoverPatches, Outline
 from geofractal.patches import patch_frame, patch_frames
 from geofractal.reader.raster import Raster
@@ -103,7 +103,7 @@ class RasterCover:
     ) -> Iterator[CoverPatches]:
         """Yield the patches of the covers asked for, once for each set of zones that share no cell."""
         convention = Perimeter(perimeter, map_edge)
-        for members in (self.zones.sets if self.zones else ()) or ((),):
+        for members in zone_sets(self.zones):
             held = HeldPatches(columns)
             for pack in asked_packs(self.covers, self.groups):
                 sieve = Sieve(self.raster.grid, smallest_cells, smallest_area_m2)

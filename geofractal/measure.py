@@ -367,3 +367,7 @@ class CoverMeasure(ABC, Generic[O]):
 
         A figure that is not deserved is null and its note says why; that never raises.
         """
+
+    def readings(self, cover: CoverMap, options: O) -> int | None:  # noqa: ARG002 - for those that can tell
+        """Return how often the map will be read, for the time left to be told; None where nobody knows."""
+        return None

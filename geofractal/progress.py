@@ -29,7 +29,7 @@ class Stage:
     Attributes
     ----------
     layer, step : what is done, on what
-    total : how many there are to do, None where nobody knows
+    total : how many there are to do, None where nobody knows (yet)
     unit : of what, in the plural
     done : how many are done
     """
@@ -196,7 +196,8 @@ class TerminalProgress(Progress):
 
     def advanced(self, stage: Stage) -> None:
         """Move the bar."""
-        self._bars.update(self._tasks[id(stage)], completed=stage.done, state=state_text(stage))
+        task = self._tasks[id(stage)]
+        self._bars.update(task, total=stage.total, completed=stage.done, state=state_text(stage))
 
     def closed(self, stage: Stage) -> None:
         """Turn the bar into a plain line."""

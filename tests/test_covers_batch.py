@@ -548,6 +548,28 @@ def test_an_interrupted_run_goes_on_from_the_measures_that_are_done(site):
     assert len(figures(site))
 
 
+FINE = {"interior-depths-m": [100], "distances": True, "box-dimension": True}
+
+
+@pytest.mark.parametrize(
+    "options", [{"measure": "area-perimeter-dimension"}, {"measure": "fragmentation"}, FINE]
+)
+@pytest.mark.parametrize("covers", [[], ["pasture"], ["habitat", "pasture"]])
+def test_rows_of_all_readings_are_known_before_they_are_read(site, options, covers):
+    write_gpkg(site / "zones.gpkg", [*HALVES, cells(1, 1, 3, 3)], layer="zones")  # in two sets: they overlap
+    told = []
+
+    class Rows(Progress):
+        def advanced(self, stage):
+            told.append((stage.done, stage.total))
+
+    asked = {**FRAGMENTATION, **options, "zones": "zones", **({"covers": covers} if covers else {})}
+    run(site, {"cover": layer(), "zones": zones()}, [asked], progress=Rows())
+    told = [(done, total) for done, total in told if total != 3]  # the copy of the three zones
+    assert len({total for _, total in told}) == 1
+    assert told[-1][0] == told[-1][1]
+
+
 def test_refused_figures_fail_the_run_where_the_user_says_so(site):
     assert run(site, {"cover": layer()}, [DIMENSION], run={"refusals": "fail"})["exit_code"] == 1
 

@@ -154,6 +154,8 @@ def _measure(
     census = Census(stage)
     cover = open_cover(plan, work, census)
     measure = load_cover_measure(work.request.measure)
+    if plan.raster is not None and (readings := measure.readings(cover, work.request.options)) is not None:
+        stage.total = readings * plan.raster.grid.rows
     result = measure.measure(cover, work.request.options)
     confirm(prints)  # else the key would be that of other bytes
     if result.patches is not None:

@@ -17,6 +17,8 @@ from geofractal.estimators.area_perimeter import (
 )
 from geofractal.estimators.cover_quantities import AREA_PERIMETER, NUMBER_AREA, Figure
 from geofractal.estimators.number_area import number_area_exponent
+from geofractal.landcover.covers import asked_packs
+from geofractal.landcover.zones import zone_sets
 from geofractal.measure import (
     FIGURE_COLUMNS,
     WHOLE_MAP,
@@ -96,6 +98,10 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
         """Return the dimension, its verdict and break, and what the fit was made of."""
         return tuple(figure.quantity for figure in AREA_PERIMETER)
 
+    def readings(self, cover: CoverMap, options: AreaPerimeterOptions) -> int:  # noqa: ARG002 - the same for all
+        """Return how often the map is read."""
+        return _readings(cover)
+
     def measure(self, cover: CoverMap, options: AreaPerimeterOptions) -> CoverResult:
         """Fit each class on the whole map, and within each zone the patches that lie in it alone."""
         area = "filled_area_m2" if options.filled else "area_m2"
@@ -146,6 +152,10 @@ class NumberAreaExponent(CoverMeasure[PatchOptions]):
         """Return the exponent, how well it fits, and what the fit was made of."""
         return tuple(figure.quantity for figure in NUMBER_AREA)
 
+    def readings(self, cover: CoverMap, options: PatchOptions) -> int:  # noqa: ARG002 - the same for all
+        """Return how often the map is read."""
+        return _readings(cover)
+
     def measure(self, cover: CoverMap, options: PatchOptions) -> CoverResult:
         """Fit each class on the whole map, and within each zone the patches that lie in it alone."""
 
@@ -168,6 +178,11 @@ class NumberAreaExponent(CoverMeasure[PatchOptions]):
         fits, _ = _fitted(cover, found, fit)
         said = [_joined(verdict, None) for verdict in fits["number_area_verdict"]]
         return CoverResult(_figures(fits, NUMBER_AREA, said, cover))
+
+
+def _readings(cover: CoverMap) -> int:
+    """Return how often a map is read for its patches: for each pack of covers and each set of zones."""
+    return len(asked_packs(cover.covers, cover.groups)) * len(zone_sets(cover.zones))
 
 
 Fit = Callable[[CoverPatches, Sequence[str]], "pd.DataFrame"]

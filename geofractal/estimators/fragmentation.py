@@ -17,13 +17,13 @@ from geofractal.estimators.fragmentation_links import link_figures
 from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
 from geofractal.estimators.fragmentation_table import Figures, Reporting
 from geofractal.landcover.ahead import run_ahead
-from geofractal.landcover.covers import Pack
+from geofractal.landcover.covers import Pack, asked_packs
 from geofractal.landcover.edges import SharedEdges
 from geofractal.landcover.grid import Grid
 from geofractal.landcover.labelling import PatchTable, label_patches
 from geofractal.landcover.patch_totals import PatchTotals, Totals
 from geofractal.landcover.strips import Strip
-from geofractal.landcover.zones import ZonePainter, grid_area
+from geofractal.landcover.zones import ZonePainter, grid_area, zone_sets
 from geofractal.measure import CoverMap, CoverMeasure, CoverResult, Options, Quantity
 
 Metres = Annotated[float, Field(gt=0)]
@@ -77,6 +77,15 @@ class Fragmentation(CoverMeasure[FragmentationOptions]):
     def quantities(self, options: FragmentationOptions) -> tuple[Quantity, ...]:
         """Return the figures of amount, border and mesh size, and those asked for."""
         return words.quantities_of(options)
+
+    def readings(self, cover: CoverMap, options: FragmentationOptions) -> int:
+        """Return at most how often the map is read: distances are only looked at where patches are few."""
+        sizes = (*options.edge_cell_sizes_m, *options.interior_depths_m, *options.lacunarity_boxes_m)
+        cells = bool(sizes) or options.box_dimension
+        links = options.distances or options.dispersal_m is not None
+        return len(asked_packs(cover.covers, cover.groups)) * (
+            len(zone_sets(cover.zones)) * (1 + cells) + links
+        )
 
     def measure(self, cover: CoverMap, options: FragmentationOptions) -> CoverResult:
         """Measure classes in one reading for each set of zones, then what was asked for beyond."""
@@ -174,7 +183,7 @@ def count_patches(cover: CoverMap, pack: Pack, options: FragmentationOptions) ->
     grid, n = cover.raster.grid, 0 if cover.zones is None else len(cover.zones)
     smallest = int(np.ceil(options.smallest_patch_m2 / grid.area_unit_m2 * (1 - 1e-9)))
     totals, area, shared = PatchTotals(n + 1, smallest), np.zeros(n + 1, np.int64), SharedEdges(n)
-    for first, members in enumerate((cover.zones.sets if cover.zones else ()) or ((),)):
+    for first, members in enumerate(zone_sets(cover.zones)):
         strips = _weighed(map_strips(cover, pack), area if first == 0 else np.zeros(1, np.int64))
         if members:
             shared.begin()

@@ -13,7 +13,7 @@ from geofractal.landcover.coarse_edges import LagSums
 from geofractal.landcover.interior import Depth, InteriorSums
 from geofractal.landcover.lacunarity import MOST_CELLS, GlidingSums, boxes_of
 from geofractal.landcover.windows import windows
-from geofractal.landcover.zones import ZonePainter
+from geofractal.landcover.zones import ZonePainter, zone_sets
 
 if TYPE_CHECKING:
     from geofractal.estimators.fragmentation import FragmentationOptions, MapTotals
@@ -45,7 +45,7 @@ class CellFigures:
     def add_to(self, figures: Figures) -> None:
         """Add the rows of edges at stated cell sizes, interior area, lacunarity and box dimensions."""
         wanted = figures.about.wanted(self.pack)
-        for turn, members in enumerate((self.map.zones.sets if self.map.zones else ()) or ((),)):
+        for turn, members in enumerate(zone_sets(self.map.zones)):
             units = [
                 unit for unit in figures.measured() if unit in members or (turn == 0 and unit == self.zones)
             ]

@@ -71,6 +71,11 @@ class Zones:
         return np.ascontiguousarray(runs[runs[:, 3] > runs[:, 2]])
 
 
+def zone_sets(zones: Zones | None) -> tuple[tuple[int, ...], ...]:
+    """Return the sets of zones that a map is read for, one after the other; one empty set without zones."""
+    return (zones.sets if zones else ()) or ((),)
+
+
 def place_zones(grid: Grid, geometries: Sequence[Any], names: Sequence[Any], crs: CRS | None) -> Zones:
     """Return polygons as zones of a grid.
 
