@@ -262,6 +262,8 @@ def test_patches_leave_barriers_out_and_no_cover_is_named_so():
     assert found.table["cells"].tolist() == [10, 10]
     assert list(found.table["cover"].cat.categories) == ["1"]
     assert opened.legend.names == []  # the map itself learns of no barrier
+    (found,) = RasterCover(opened, None, barriers).patches(smallest_cells=100)
+    assert found.smaller.to_numpy().tolist() == [["1", 2]]  # the barrier is not even counted
 
 
 class TestRefused:
