@@ -8,12 +8,13 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from pandas.testing import assert_frame_equal
 
-from geofractal.cover_map import PolygonCover, RasterCover
+from geofractal.cover_map import RasterCover
 from geofractal.estimators.area_perimeter import area_perimeter_dimension
 from geofractal.estimators.number_area import number_area_exponent
 from geofractal.landcover.covers import Pack, asked_packs
 from geofractal.landcover.zones import place_zones
 from geofractal.patches import open_class_map
+from geofractal.polygon_cover import PolygonCover
 from geofractal.reader.raster import RasterOptions
 
 PLANE = 'LOCAL_CS["plane",UNIT["metre",1]]'
