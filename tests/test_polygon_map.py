@@ -1,5 +1,7 @@
 """Faces and edges of polygons that overlap, fail to meet, touch at a corner or are cut by lines."""
 
+import warnings
+
 import geopandas
 import numpy as np
 import pytest
@@ -231,6 +233,28 @@ class TestInterior:
         assert figure(found, "interior_area_at_1000m_depth", "both") == pytest.approx(10 * 3)
         assert figure(found, "interior_area_at_1000m_depth", "both", unit=1) == pytest.approx(2 * 3)
         assert figure(found, "interior_area_at_1000m_depth", "a") == pytest.approx(4 * 3)
+
+    @settings(max_examples=25, deadline=None)
+    @given(st.integers(0, 10**6), st.booleans())
+    def test_random_maps_against_what_is_left_of_whole_classes(self, seed, alike):
+        """A class less what is within each neighbour's depth of that neighbour, all taken whole."""
+        rng = np.random.default_rng(seed)
+        codes = rng.choice(list("abc "), (5, 5), p=[0.4, 0.3, 0.2, 0.1])
+        codes[0, 0] = "a"
+        squares = [(code, km(x, y, x + 1, y + 1)) for (x, y), code in np.ndenumerate(codes) if code != " "]
+        depth = {"b": 300.0, "c": 300.0} if alike else {"b": 300.0, "c": 1400.0}
+        left = shapely.union_all([square for code, square in squares if code == "a"])
+        for name, metres in depth.items():
+            others = shapely.union_all([square for code, square in squares if code == name])
+            left = left - shapely.buffer(others, metres, quad_segs=16)
+        far = {} if alike else {"depth_by_neighbour_m": {"c": 1400.0}}
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", GeofractalWarning)  # a map may lack c
+            found = measured(*squares, zones=[km(0, 0, 2, 5)], interior_depths_m=[300.0], **far)
+        name = "interior_area_at_300m_depth"
+        assert figure(found, name, "a") == pytest.approx(left.area / 1e6, rel=1e-6, abs=1e-9)
+        within = (left & km(0, 0, 2, 5)).area / 1e6
+        assert figure(found, name, "a", unit=1) == pytest.approx(within, rel=1e-6, abs=1e-9)
 
     def test_a_class_beyond_a_gap_bounds_too(self):
         found = measured(("a", km(0, 0, 4, 4)), ("b", km(5, 0, 6, 4)), interior_depths_m=[2000.0])

@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     from geofractal.landcover.covers import Pack
     from geofractal.landcover.planar import Geometries
     from geofractal.landcover.polygon_map import Bools, PolygonMap, Unit
-    from geofractal.measure import Floats
+    from geofractal.measure import Floats, Ints
 
 QUARTER_SEGMENTS = 16
 """Chords that a quarter circle about an end of an edge is drawn with; the depth is short of it by 0.12 %."""
@@ -70,21 +70,52 @@ class OnGround:
 
     def interior(self, members: frozenset[str], metres: float, options: FragmentationOptions) -> Floats:
         """Return (f,) the share of each face of a cover that is farther than its depth from other classes."""
-        kinds = self.map.kinds[:-1]
         pure = np.flatnonzero(self.map.member(members)[:-1] & ~self._others(members, None)[:-1])
-        left = self.faces[pure]
-        for depth, bounding in self._bounds(members, metres, options):
-            edges = np.flatnonzero(bounding)
-            if not len(edges) or not len(pure):
-                continue
-            face, edge = shapely.STRtree(self.edges[edges]).query(left, predicate="dwithin", distance=depth)
-            near, place = np.unique(face, return_inverse=True)
-            lines = shapely.multilinestrings(self.edges[edges[edge]], indices=place) if len(face) else []
-            strips = shapely.buffer(lines, depth, quad_segs=QUARTER_SEGMENTS)
-            left[near] = shapely.difference(left[near], strips)
-        share = np.zeros(len(kinds))
+        left, share = self.faces[pure], np.zeros(len(self.faces))
+        bounds = self._bounds(members, metres, options)
+        for k, (depth, bounding) in enumerate(bounds):
+            deeper = np.logical_or.reduce([edges for _, edges in bounds[k:]])
+            left = self._without(left, pure, depth, bounding, deeper, alone=len(bounds) == 1)
         share[pure] = shapely.area(left) / shapely.area(self.faces[pure])
         return share
+
+    def _without(
+        self, left: Geometries, faces: Ints, depth: float, bounding: Bools, deeper: Bools, *, alone: bool
+    ) -> Geometries:
+        """Return what is left of faces farther than a depth from bounding edges.
+
+        Where all edges of a face are bounding at this depth or a greater one, those behind them are farther
+        away and need no look; where all are at this one, alone, the face shrinks.
+        """
+        owner, own = self._own(faces)
+        count, here, there = (
+            np.bincount(owner[one[own]], minlength=len(faces))
+            for one in (np.ones(len(bounding), np.bool_), bounding, deeper)
+        )
+        shrinking, closed = (here == count) & alone, there == count
+        left = left.copy()
+        left[shrinking] = shapely.buffer(left[shrinking], -depth, quad_segs=QUARTER_SEGMENTS)
+        own_too = bounding[own] & (closed & ~shrinking)[owner]
+        edges, opened = np.flatnonzero(bounding), np.flatnonzero(~closed)
+        tree = shapely.STRtree(self.edges[edges])
+        face, edge = tree.query(self.faces[faces[opened]], predicate="dwithin", distance=depth)
+        face = np.concatenate([owner[own_too], opened[face]])
+        edge = np.concatenate([own[own_too], edges[edge]])
+        order = np.argsort(face, kind="stable")
+        near, place = np.unique(face[order], return_inverse=True)
+        if len(near):
+            lines = shapely.multilinestrings(self.edges[edge[order]], indices=place)
+            strips = shapely.buffer(lines, depth, quad_segs=QUARTER_SEGMENTS)
+            left[near] = shapely.difference(left[near], strips)
+        return left
+
+    def _own(self, faces: Ints) -> tuple[Ints, Ints]:
+        """Return place in `faces` and edge, of each edge of some faces."""
+        place = np.full(len(self.map.kinds), -1)
+        place[faces] = np.arange(len(faces))
+        sides = place[self.map.planar.sides]
+        edge, side = np.nonzero((sides >= 0) & (sides[:, :1] != sides[:, 1:]))
+        return sides[edge, side], edge
 
     def _others(self, members: frozenset[str], wanted: frozenset[str] | None) -> Bools:
         """Return which faces (f + 1,) a class covers that is no member; and is wanted, if any are named."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING
 
@@ -23,7 +23,7 @@ if TYPE_CHECKING:
     from geofractal.landcover.polygon_map import PolygonMap
     from geofractal.measure import Floats
 
-PAIRS_AT_ONCE = 500
+PATCHES_AT_ONCE = 500
 """Patches whose pairs are looked for together; each may have all others within reach."""
 
 
@@ -76,6 +76,7 @@ class PolygonDistances:
     """
 
     outlines: Geometries
+    _rows: dict[int, tuple[Ints, Floats]] = field(default_factory=dict)
 
     @cached_property
     def _tree(self) -> shapely.STRtree:
@@ -101,16 +102,26 @@ class PolygonDistances:
 
     def costs(self, chosen: Ints, dispersal_m: float) -> Floats:
         """Return -ln p between every two chosen patches, p = 1/2 at the median dispersal distance."""
-        outlines = self.outlines[chosen]
+        most = reach(dispersal_m)
+        self._look(np.array([one for one in chosen.tolist() if one not in self._rows], np.int64), most)
         found = np.full((len(chosen), len(chosen)), np.inf)
-        tree = shapely.STRtree(outlines)
-        for begin in range(0, len(chosen), PAIRS_AT_ONCE):
-            some = outlines[begin : begin + PAIRS_AT_ONCE]
-            first, second = tree.query(some, predicate="dwithin", distance=reach(dispersal_m))
-            first += begin
-            first, second = first[first < second], second[first < second]
-            gaps = shapely.distance(outlines[first], outlines[second])
-            gaps[gaps >= reach(dispersal_m)] = np.inf
-            found[first, second] = found[second, first] = gaps * math.log(2) / dispersal_m
-        np.fill_diagonal(found, 0.0)
-        return found
+        place = np.full(len(self.outlines), -1)
+        place[chosen] = np.arange(len(chosen))
+        for row, one in enumerate(chosen.tolist()):
+            others, gaps = self._rows[one]
+            mine = place[others] >= 0
+            found[row, place[others[mine]]] = gaps[mine]
+        found[found >= most] = np.inf
+        return found * (math.log(2) / dispersal_m)
+
+    def _look(self, wanted: Ints, most: float) -> None:
+        """Remember the gaps from patches to all that are within reach, themselves included."""
+        for begin in range(0, len(wanted), PATCHES_AT_ONCE):
+            some = wanted[begin : begin + PATCHES_AT_ONCE]
+            first, second = self._tree.query(self.outlines[some], predicate="dwithin", distance=most)
+            order = np.argsort(first, kind="stable")
+            first, second = some[first[order]], second[order]
+            gaps = shapely.distance(self.outlines[first], self.outlines[second])
+            stops = np.flatnonzero(np.diff(first)) + 1
+            parts = zip(np.split(second, stops), np.split(gaps, stops), strict=True)
+            self._rows.update(zip(some.tolist(), parts, strict=True))

@@ -1,6 +1,7 @@
 """Print the speed and memory of fragmentation by zone, one reading and figures of cells apart.
 
     python tests/benchmarks/fragmentation.py --side 32768
+    python tests/benchmarks/fragmentation.py --polygons 200000
 
 The map is that of ``raster.py``: 8 classes, mean run length 6 cells, half a million patches in 100 million
 cells. Each line is a process of its own.
@@ -34,6 +35,12 @@ CASES = {
         "box_dimension": True,
     },
     "+ edge density at 40 m": {"covers": ["1"], "edge_cell_sizes_m": [40.0]},
+}
+POLYGON_CASES = {
+    "polygons, whole map": {},
+    "polygons, 100 zones": {"zones": 100},
+    "+ interior area at 20 m": {"zones": 100, "interior_depths_m": [20.0]},
+    "+ distances and connected area": {"zones": 100, "distances": True, "dispersal_m": 100.0},
 }
 
 
@@ -71,13 +78,68 @@ def work(path: str, side: int, case: dict, results: multiprocessing.Queue) -> No
     results.put((took, caller, peak_mb(), rows))
 
 
+def net(number: int, pieces: int) -> tuple[np.ndarray, int]:
+    """Return about so many polygons of 4 sides that neighbours share, wavy with some pieces each."""
+    side, rng = int(np.sqrt(number)), np.random.default_rng(1)
+    steps = 200 * np.arange(side + 1.0)
+    corners = np.stack(np.meshgrid(steps, steps), axis=-1)
+    corners += rng.uniform(-40, 40, corners.shape)
+
+    def sides(begin: np.ndarray, end: np.ndarray) -> np.ndarray:
+        share = np.linspace(0, 1, pieces + 1)[:, None]
+        along = begin[:, :, None] + share * (end - begin)[:, :, None]
+        along[:, :, 1:-1] += rng.uniform(-4, 4, along[:, :, 1:-1].shape)
+        return along
+
+    level, upright = sides(corners[:, :-1], corners[:, 1:]), sides(corners[:-1], corners[1:])
+    parts = [level[:-1], upright[:, 1:], level[1:, :, ::-1], upright[:, :-1, ::-1]]
+    rings = np.concatenate(parts, axis=2).reshape(side * side, -1, 2) + (LEFT, TOP - 200 * side)
+    return shapely.remove_repeated_points(shapely.polygons(rings)), side
+
+
+def work_polygons(number: int, case: dict, results: multiprocessing.Queue) -> None:
+    """Measure one case of polygons after a warm-up on few."""
+    import geopandas
+
+    from geofractal.cover_api import fragmentation
+
+    given = {name: value for name, value in case.items() if name != "zones"}
+    for count in (400, number):
+        polygons, side = net(count, 8)
+        kinds = np.random.default_rng(2).integers(0, 8, len(polygons)).astype(str)
+        frame = geopandas.GeoDataFrame({"kind": kinds}, geometry=polygons, crs=32632)
+        if "zones" in case:
+            given["zones"] = wavy_zones(round(200 * side / CELL_M), case["zones"], 0.0)
+        held, start = peak_mb(), time.perf_counter()
+        rows = len(fragmentation(frame, cover="kind", **given))
+        took = time.perf_counter() - start
+    results.put((took, held, peak_mb(), rows))
+
+
+def main_polygons(number: int) -> None:
+    """Print what a layer of polygons of 32 vertices takes."""
+    spawn = multiprocessing.get_context("spawn")
+    print(f"{'':44}{'seconds':>9}{'held MB':>9}{'peak MB':>9}{'rows':>8}")
+    for title, case in POLYGON_CASES.items():
+        results = spawn.Queue()
+        one = spawn.Process(target=work_polygons, args=(number, case, results))
+        one.start()
+        took, held, peak, rows = results.get()
+        one.join()
+        print(f"{title:44}{took:9.1f}{held:9.0f}{peak:9.0f}{rows:8}", flush=True)
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(
         description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
     )
     parser.add_argument("--side", type=int, default=8192, help="cells a side; 32768 is 1.07 gigapixels")
     parser.add_argument("--folder", type=Path, help="where the map is kept; a temporary folder unless given")
+    parser.add_argument("--polygons", type=int, help="measure so many polygons, and no raster")
     asked = parser.parse_args()
+    if asked.polygons:
+        main_polygons(asked.polygons)
+        return
     spawn = multiprocessing.get_context("spawn")
     with tempfile.TemporaryDirectory() as temporary:
         folder = asked.folder or Path(temporary)
