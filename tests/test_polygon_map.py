@@ -11,11 +11,13 @@ from hypothesis import strategies as st
 from pyproj import CRS, Geod
 from test_fragmentation import ALL_EDGES, CHANGES, CUT, PLANE, figure
 
+from geofractal.api import box_dimension
 from geofractal.cover_api import fragmentation
 from geofractal.errors import ConfigError, GeofractalWarning
 from geofractal.landcover.planar import lay_over
 from geofractal.landcover.polygon_map import polygon_map
 from geofractal.reader.ground import GroundPlane
+from geofractal.synthetic.koch import koch
 
 METRES = CRS.from_wkt(PLANE)
 BOUNDS, OPEN = "map edge bounds", "map edge is open"
@@ -278,6 +280,25 @@ class TestWhatNeedsCells:
         ):
             assert np.isnan(figure(found, name, "a"))
             assert "needs cells: rasterise" in figure(found, name, "a", column="note")
+
+
+class TestBoxDimensionOfEdges:
+    def test_it_is_that_of_the_boundary_as_a_line(self):
+        """A Koch snowflake in a square: the box dimension of its outline as a line is what the edge has."""
+        flake = shapely.Polygon(koch(level=6, island=True).xy * 9000)
+        square = shapely.buffer(shapely.box(*flake.bounds), 9000, join_style="mitre")
+        found = measured(("lake", flake), ("land", square - flake), box_dimension=True)
+        alone = box_dimension([flake.exterior], crs=PLANE)
+        for cover in ("lake", "land"):
+            estimate = figure(found, "edge_box_dim", cover)
+            assert estimate == pytest.approx(float(alone["box_dim"].iloc[0]), abs=0.02)
+            assert figure(found, "edge_box_dim", cover, column="low") < np.log(4) / np.log(3)
+            assert figure(found, "edge_box_dim", cover, column="high") > np.log(4) / np.log(3)
+        assert "of boundaries as lines" in figure(found, "edge_box_dim", "lake", column="note")
+
+    def test_a_class_without_an_edge_has_none_and_says_so(self):
+        found = measured(("a", km(0, 0, 1, 1)), box_dimension=True)
+        assert figure(found, "edge_box_dim", "a", column="note") == "no edge to another class"
 
 
 class TestOnTheGlobe:

@@ -11,6 +11,7 @@ import numpy as np
 
 from geofractal.estimators import fragmentation_quantities as words
 from geofractal.estimators.fragmentation_table import Figures, Reporting
+from geofractal.estimators.polygon_boxes import add_boxes
 from geofractal.estimators.polygon_interior import add_interior
 from geofractal.estimators.polygon_links import add_links
 from geofractal.landcover.patch_totals import Totals
@@ -83,6 +84,7 @@ def polygon_fragmentation(layer: PolygonLayer, options: FragmentationOptions) ->
         _add_cells(pack, options, figures)
         add_interior(layer, pack, units, options, figures)
         add_links(layer, pack, totals, options, figures)
+        add_boxes(layer, pack, totals, options, figures)
     return figures.table()
 
 
@@ -103,8 +105,8 @@ def _add_cells(pack: Pack, options: FragmentationOptions, figures: Figures) -> N
         (words.coarse(size).name, words.CHANGES, size) for size in options.edge_cell_sizes_m
     ]
     nulls += [(one.name, words.CUT, None) for size in sizes for one in words.lacunarity(size)]
-    for edge in (False, True) if options.box_dimension else ():
-        nulls += [(one.name, "", None) for one in words.box_quantities(edge=edge) if one.kind == "number"]
+    boxes = words.box_quantities(edge=False) if options.box_dimension else ()
+    nulls += [(one.name, "", None) for one in boxes if one.kind == "number"]
     for unit in figures.measured():
         for _, name in figures.about.wanted(pack):
             for quantity, rule, cell in nulls:

@@ -172,7 +172,9 @@ CONNECTED = (
 
 def box_quantities(*, edge: bool) -> tuple[Quantity, ...]:
     """Return the figures of box counting of a class, or of its edge."""
-    what = "the cells of the class that another class touches by a side" if edge else "the cells of the class"
+    what = "the cells of the class"
+    if edge:
+        what = "the cells of the class that another class touches by a side, or of its edge to other polygons"
     name, short = ("edge_box", "ebx") if edge else ("box", "box")
     scale = partial(Quantity, group="scaling")
     found = (

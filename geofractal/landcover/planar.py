@@ -1,7 +1,7 @@
 """Outlines and lines laid over each other: faces that nothing crosses, and the edges between them.
 
 Boundaries that several outlines share are one edge, whatever vertex each begins with. Memory holds the
-outlines twice and the faces: about 250 bytes a vertex at its most.
+outlines twice and the faces: about 300 bytes a vertex at its most.
 """
 
 from __future__ import annotations

@@ -93,7 +93,8 @@ def net(number: int, pieces: int) -> tuple[np.ndarray, int]:
 
     level, upright = sides(corners[:, :-1], corners[:, 1:]), sides(corners[:-1], corners[1:])
     parts = [level[:-1], upright[:, 1:], level[1:, :, ::-1], upright[:, :-1, ::-1]]
-    rings = np.concatenate(parts, axis=2).reshape(side * side, -1, 2) + (LEFT, TOP - 200 * side)
+    rings = np.concatenate(parts, axis=2).reshape(side * side, -1, 2)
+    rings += np.array([LEFT, TOP - 200 * side])
     return shapely.remove_repeated_points(shapely.polygons(rings)), side
 
 
