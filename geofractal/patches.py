@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -191,12 +192,13 @@ def warping_effect(
         each with ``_source`` and ``_warped``, and ``_change`` = warped / source - 1. A class that one
         grid lacks has zeros there. Patches on the source's own grid have their true, ellipsoidal sizes.
     """
-    sums = []
-    for grid in ("source", "warp"):
-        opened = open_class_map(
-            raster, options, {**reading, "grid": grid, **_size_for(grid, options, reading)}
-        )
-        sums.append(_class_sums(opened, neighbours))
+
+    def sums_on(grid: str) -> pd.DataFrame:
+        size = _size_for(grid, options, reading)
+        return _class_sums(open_class_map(raster, options, {**reading, "grid": grid, **size}), neighbours)
+
+    with ThreadPoolExecutor(2) as pool:  # warping keeps one core busy, labelling another
+        sums = [*pool.map(sums_on, ("source", "warp"))]
     joined = sums[0].add_suffix("_source").join(sums[1].add_suffix("_warped"), how="outer").fillna(0)
     for name in ("patches", "area_km2", "perimeter_km"):
         joined[f"{name}_change"] = joined[f"{name}_warped"] / joined[f"{name}_source"] - 1
