@@ -28,6 +28,9 @@ FEWEST = 16
 ALIGNED = 0.1
 """Share of segments within 1.5 degrees of one direction, or square to it, from which that one is tried."""
 
+FEWEST_ALIGNED = 6
+"""Such segments at least: in a short line three or four agree by chance."""
+
 OFF_GRID = 0.05
 """Distance from whole steps, in steps, up to which a coordinate difference counts as whole."""
 
@@ -220,7 +223,7 @@ def _run_cell(moves: Floats) -> float:
             near = counts[a - 1] + counts[a] + counts[(a + 1) % 90]
             if near > most:
                 best, most = a, near
-        if most < ALIGNED * n:
+        if most < max(FEWEST_ALIGNED, ALIGNED * n):
             return 0.0
         total, near = 0.0, 0
         for k in range(n):
