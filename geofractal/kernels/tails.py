@@ -34,6 +34,8 @@ def best_cut(logs: NDArray[np.float64], first: NDArray[np.int64]) -> tuple[int, 
         for i in range(start, n):
             share = 1.0 - np.exp(-exponent * (logs[i] - logs[start]))
             distance = max(distance, abs(share - (i - start) / count), abs(share - (i - start + 1) / count))
+            if distance >= best_distance:
+                break
         if distance < best_distance:
             best, best_exponent, best_distance = start, exponent, distance
     return best, best_exponent, best_distance
