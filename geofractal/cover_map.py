@@ -13,14 +13,15 @@ from geofractal.errors import ConfigError
 from geofractal.held_patches import HeldPatches
 from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.barriers import BARRIER, Barriers
-from geofractal.landcover.covers import Pack, asked_packs, pack_groups
-from geofractal.landcover.labelling import label_patches
+from geofractal.landcover.covers import Pack, asked_packs
+from geofractal.landcover.labelling import Finished, label_patches
+from geofractal.landcover.outlines import patch_polygons
 from geofractal.landcover.patch_sieve import Sieve
 from geofractal.landcover.perimeter import Perimeter
-from geofractal.landcover.strips import NOT_COVERED, Strip
+from geofractal.landcover.strips import Strip
 from geofractal.landcover.zones import ZonePainter, Zones, zone_sets
-from geofractal.measure import CoverPatches, Outline
-from geofractal.patches import patch_frame, patch_frames
+from geofractal.measure import Bools, CoverPatches, Ints, Outline, PatchRule
+from geofractal.patches import patch_frame
 from geofractal.reader.raster import Raster
 from geofractal.reader.raster_classes import Legend
 
@@ -125,12 +126,18 @@ class RasterCover:
         for found in label_patches(
             run_ahead(partial(iter, strips)), neighbours=neighbours, outlines=outlines
         ):
-            frame = patch_frame(sieve(found.patches), raster, convention, zoned=bool(members))
-            asked = np.array([self._asks(pack, name) for name in frame["cover"].cat.categories], np.bool_)
-            held.add(frame if asked.all() else frame[asked[frame["cover"].cat.codes]])
+            large = sieve(found.patches)
+            asked = self._asked(pack, raster, large["class"])
+            patches = large if asked.all() else large.take(asked)
+            held.add(patch_frame(patches, raster, convention, zoned=bool(members)))
         for (zone, kind), count in sieve.counts.items():
             if self._asks(pack, cover := raster.legend.names[kind]):
                 held.count(zone, cover, count)
+
+    def _asked(self, pack: Pack, raster: Raster, classes: Ints) -> Bools:
+        """Tell of which of these classes, or covers of a pack, patches are asked for."""
+        asked = np.array([self._asks(pack, name) for name in raster.legend.names], np.bool_)
+        return np.asarray(asked[classes], np.bool_)
 
     def _asks(self, pack: Pack, cover: str) -> bool:
         """Return whether a class, or a cover of a pack of groups, is asked for."""
@@ -149,22 +156,36 @@ class RasterCover:
             strips = ZonePainter(self.zones, members, np.zeros(len(self.zones), np.int64))(strips)
         return strips
 
-    def polygons(self, neighbours: int) -> Iterator[pd.DataFrame]:
-        """Yield the patches of the covers asked for with their polygons; whatever else is left undrawn."""
-        names = self.names
-        for pack in pack_groups({name: self.groups.get(name, (name,)) for name in names}):
-            strips = _only(pack, pack.remap(self.raster.strips(), self.raster.legend.names))
-            if self.barriers is not None:
-                strips = self.barriers(strips)
-            yield from patch_frames(self._named(pack), strips, Perimeter(), neighbours, geometry=True)
+    def polygons(self, rule: PatchRule) -> Iterator[pd.DataFrame]:
+        """Yield the patches of the covers asked for with their polygons, while the map is read.
+
+        Classes come first, then groups, read again for each pack that shares no class; within a reading
+        patches follow each other by their last row, then by their first cell. Memory holds the runs of the
+        patches that the present row has not finished.
+        """
+        convention = Perimeter(rule.perimeter, rule.map_edge)
+        for pack in asked_packs(self.covers, self.groups):
+            raster, strips = self._named(pack), self._strips(pack, ())
+            asked = partial(self._asked, pack, raster)
+            for found in label_patches(
+                run_ahead(partial(iter, strips)),
+                neighbours=rule.neighbours,
+                outlines=convention.follows_outlines,
+                runs=True,
+                runs_of=asked,
+            ):
+                yield _drawn(found, np.flatnonzero(asked(found.patches["class"])), raster, convention)
 
     def _named(self, pack: Pack) -> Raster:
         """Return the raster under the names of a pack's covers."""
         return replace(self.raster, legend=Legend([*pack.names, OTHER], {})) if pack.names else self.raster
 
 
-def _only(pack: Pack, strips: Iterator[Strip]) -> Iterator[Strip]:
-    """Yield strips in which cells of no cover are not covered."""
-    for strip in strips:
-        other = strip.codes == len(pack.names)
-        yield replace(strip, codes=np.where(other, np.int16(NOT_COVERED), strip.codes))
+def _drawn(found: Finished, wanted: Ints, raster: Raster, convention: Perimeter) -> pd.DataFrame:
+    """Return the wanted patches, the only ones with runs, as a table with their polygons."""
+    assert found.runs is not None
+    runs = found.runs.copy()
+    runs[:, 0] = np.searchsorted(wanted, runs[:, 0])
+    frame = patch_frame(found.patches.take(wanted), raster, convention)
+    frame["geometry"] = patch_polygons(runs, len(frame), raster.grid.transform)
+    return frame

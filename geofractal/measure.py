@@ -254,6 +254,18 @@ Outline = Literal["cell-edges", "outer-cell-edges", "smoothed"]
 
 
 @dataclass(frozen=True, slots=True)
+class PatchRule:
+    """By how many neighbours cells are joined to patches, and what their perimeter is.
+
+    `map_edge` is whether edges to the map's edge and to cells without data count.
+    """
+
+    neighbours: int = 8
+    perimeter: Outline = "cell-edges"
+    map_edge: bool = True
+
+
+@dataclass(frozen=True, slots=True)
 class CoverPatches:
     """Patches of a class map, and the zones that were told apart while they were found.
 
@@ -319,6 +331,13 @@ class CoverMap(Protocol):
         are then counted, and no more. ``cover`` and ``zone`` are always there. Polygons have no cells.
         """
 
+    def polygons(self, rule: PatchRule) -> Iterator[pd.DataFrame]:
+        """Yield all patches of the covers asked for with their polygons, table after table.
+
+        They are those of the whole map, whatever its zones, in the columns of `CoverPatches.table`; of a
+        raster while it is read once more.
+        """
+
 
 @dataclass(frozen=True, slots=True)
 class CoverResult:
@@ -327,14 +346,9 @@ class CoverResult:
     Attributes
     ----------
     figures : columns `FIGURE_COLUMNS`
-    patches : one row a patch, as `CoverMap.patches` gave them and with further columns; None where none were
-        asked for
-    neighbours : by how many neighbours cells were joined to those patches
     """
 
     figures: pd.DataFrame
-    patches: pd.DataFrame | None = None
-    neighbours: int = 8
 
 
 class CoverMeasure(ABC, Generic[O]):
@@ -371,3 +385,15 @@ class CoverMeasure(ABC, Generic[O]):
     def readings(self, cover: CoverMap, options: O) -> int | None:  # noqa: ARG002 - for those that can tell
         """Return how often the map will be read, for the time left to be told; None where nobody knows."""
         return None
+
+    def patch_rule(self, options: O) -> PatchRule | None:  # noqa: ARG002 - for those that have a layer
+        """Return by which rule patches are to be written as a layer; None where none are asked for."""
+        return None
+
+    def patch_columns(self, patches: pd.DataFrame, figures: pd.DataFrame, options: O) -> pd.DataFrame:  # noqa: ARG002 - for those that have a layer
+        """Return some rows of the layer of patches with further columns of numbers, NaN where null.
+
+        Called once the figures are known, with table after table of `CoverMap.polygons`, so that no map's
+        patches need be held. What stands in a row follows from that row and the figures alone.
+        """
+        return patches

@@ -19,7 +19,7 @@ from geofractal.landcover.barriers import BARRIER
 from geofractal.landcover.polygon_map import PolygonMap, polygon_map
 from geofractal.landcover.polygon_zones import PolygonBarriers, PolygonZones
 from geofractal.landcover.polygons import Geometries, measured_patches, unusable
-from geofractal.measure import Bools, CoverPatches, Ints, Outline
+from geofractal.measure import Bools, CoverPatches, Ints, Outline, PatchRule
 from geofractal.patches import polygon_patches, polygon_table
 from geofractal.reader.ground import GroundPlane
 
@@ -58,6 +58,7 @@ class PolygonCover:
     budget: float = 0.005
     left_out: dict[str, int] = field(default_factory=dict)
     raster: None = None
+    _made: dict[tuple[int, Outline], pd.DataFrame] = field(default_factory=dict, init=False, repr=False)
 
     def __post_init__(self) -> None:
         """Refuse classes and groups with the name of what barriers take."""
@@ -110,18 +111,30 @@ class PolygonCover:
         smallest_area_m2: float = 0.0,
     ) -> Iterator[CoverPatches]:
         """Yield the patches of the covers asked for, once for each set of zones that share no area."""
+        table = self._every(neighbours, perimeter)
+        for members in (() if self.zones is None else self.zones.sets) or ((),):
+            told = table.assign(zone=self._zone_of(table, members)) if members else table
+            yield sifted(told, members, columns, smallest_area_m2)
+
+    def polygons(self, rule: PatchRule) -> Iterator[pd.DataFrame]:
+        """Yield the patches of the covers asked for with their polygons: one table, cover after cover."""
+        yield self._every(rule.neighbours, rule.perimeter)
+
+    def _every(self, neighbours: int, perimeter: Outline) -> pd.DataFrame:
+        """Return the patches of the covers asked for; they are made once."""
         import pandas as pd
 
         if perimeter == "smoothed":
             raise LayerError("perimeter: smoothed is for class maps; polygons have no cells to smooth.")
+        if (found := self._made.get((neighbours, perimeter))) is not None:
+            return found
         classes = dict.fromkeys(str(name) for name in self._names[self._usable])
         names = self.covers or (*classes, *self.groups)
         tables = [self._table(name, neighbours, perimeter).assign(cover=name) for name in names]
         table = pd.concat(tables, ignore_index=True)
         table["cover"] = pd.Categorical(table["cover"], pd.Index(names, dtype=str))
-        for members in (() if self.zones is None else self.zones.sets) or ((),):
-            told = table.assign(zone=self._zone_of(table, members)) if members else table
-            yield sifted(told, members, columns, smallest_area_m2)
+        self._made[neighbours, perimeter] = table
+        return table
 
     def _table(self, name: str, neighbours: int, perimeter: Outline) -> pd.DataFrame:
         """Return the patches of a cover; its polygons make them alone unless barriers cut these."""

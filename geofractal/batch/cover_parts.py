@@ -6,16 +6,19 @@ import hashlib
 import json
 import os
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 
 from geofractal.batch.cover_plan import CoverPlan, CoverWork, class_values
+from geofractal.batch.patch_layers import draw_patches
 from geofractal.batch.zone_layers import (
     barriers_of,
     polygon_barriers_of,
@@ -25,22 +28,16 @@ from geofractal.batch.zone_layers import (
 )
 from geofractal.cover_map import RasterCover
 from geofractal.kernels.codes import count_codes
+from geofractal.landcover.covers import asked_packs
 from geofractal.landcover.strips import Strip
 from geofractal.measure import FIGURE_COLUMNS, CoverMap, Ints
 from geofractal.polygon_cover import PolygonCover
-from geofractal.progress import Stage
+from geofractal.progress import Progress, Stage
 from geofractal.reader.raster import Raster
 from geofractal.registry import load_cover_measure
 from geofractal.versions import code_digest
 from geofractal.writer.commit import flush, in_plain_words
 from geofractal.writer.sources import Fingerprint, check_unchanged
-from geofractal.writer.tables import GEOMETRY
-
-if TYPE_CHECKING:
-    from collections.abc import Iterator
-
-    import pandas as pd
-
 
 Prints = Mapping[Path, Fingerprint]
 """Fingerprints of the files that a batch reads."""
@@ -60,8 +57,7 @@ class CoverPart:
     Attributes
     ----------
     figures : columns `FIGURE_COLUMNS`
-    patches : file of the patches asked for, None where there are none
-    neighbours : by how many neighbours their cells were joined
+    patches : file of the patches asked for, with their polygons; None where there are none
     zone_problems : name of each zone that could not be measured, and why
     zone_overlaps : name of each zone that shares cells with others, and those
     barriers_left_out, polygons_left_out : why geometries are no barrier or patch, and how many
@@ -71,7 +67,6 @@ class CoverPart:
 
     figures: pa.Table
     patches: Path | None
-    neighbours: int
     zone_problems: dict[str, str]
     zone_overlaps: dict[str, list[str]]
     barriers_left_out: dict[str, int]
@@ -111,17 +106,38 @@ class Census:
             self.first = not strip.last
 
 
-def cover_part(plan: CoverPlan, work: CoverWork, prints: Prints, folder: Path, stage: Stage) -> CoverPart:
+@dataclass
+class Opening:
+    """The map of a part, opened once it is needed, and what is told of its readings."""
+
+    plan: CoverPlan
+    work: CoverWork
+    census: Census
+
+    @cached_property
+    def cover(self) -> CoverMap:
+        """Return the map as its measure gets it."""
+        return open_cover(self.plan, self.work, self.census)
+
+
+def cover_part(
+    plan: CoverPlan, work: CoverWork, prints: Prints, folder: Path, progress: Progress
+) -> CoverPart:
     """Return what a measure of a class map gives, from an earlier run where that is kept in `folder`."""
     key = part_key(plan, work, prints)
     kept, patches = folder / f"{key}.figures.parquet", folder / f"{key}.patches.parquet"
-    if not kept.exists():
-        _measure(plan, work, prints, stage, kept, patches)
+    with progress.stage(plan.name, work.request.measure, None, "rows") as stage:
+        opening = Opening(plan, work, Census(stage))
+        if not kept.exists():
+            _measure(opening, prints, kept)
     table = pq.read_table(kept)
     told = json.loads(table.schema.metadata[b"geofractal"])
-    return CoverPart(
-        table.replace_schema_metadata(None), patches if told.pop("has_patches") else None, **told
-    )
+    figures = table.replace_schema_metadata(None)
+    if work.request.patch_rule() is None:
+        return CoverPart(figures, None, **told)
+    if not patches.exists():
+        _draw(opening, prints, figures, patches, progress)
+    return CoverPart(figures, patches, **told)
 
 
 def part_key(plan: CoverPlan, work: CoverWork, prints: Prints) -> str:
@@ -146,25 +162,18 @@ def confirm(prints: Prints) -> None:
         check_unchanged(path, before)
 
 
-def _measure(
-    plan: CoverPlan, work: CoverWork, prints: Prints, stage: Stage, kept: Path, patches: Path
-) -> None:
-    """Measure, and keep the results: the figures last, since they tell that the part is whole."""
+def _measure(opening: Opening, prints: Prints, kept: Path) -> None:
+    """Measure, and keep the figures."""
     begun = time.monotonic()
-    census = Census(stage)
-    cover = open_cover(plan, work, census)
+    work, census, cover = opening.work, opening.census, opening.cover
     measure = load_cover_measure(work.request.measure)
-    if plan.raster is not None and (readings := measure.readings(cover, work.request.options)) is not None:
-        stage.total = readings * plan.raster.grid.rows
+    if cover.raster is not None and (readings := measure.readings(cover, work.request.options)) is not None:
+        census.stage.total = readings * cover.raster.grid.rows
     result = measure.measure(cover, work.request.options)
     confirm(prints)  # else the key would be that of other bytes
-    if result.patches is not None:
-        keep(_patch_table(result.patches), patches)
     names = cover.raster.legend.names if cover.raster else []
     zones = cover.zones
     told = {
-        "has_patches": result.patches is not None,
-        "neighbours": result.neighbours,
         "zone_problems": _named(zones, "problems"),
         "zone_overlaps": {
             name: [zones.names[other] for other in others]
@@ -177,6 +186,21 @@ def _measure(
     }
     table = pa.Table.from_pandas(result.figures[list(FIGURE_COLUMNS)], FIGURES, preserve_index=False)
     keep(table.replace_schema_metadata({"geofractal": json.dumps(told)}), kept)
+
+
+def _draw(opening: Opening, prints: Prints, figures: pa.Table, drawn: Path, progress: Progress) -> None:
+    """Draw the patches of a measure into a file that is kept; of a raster this takes a further reading."""
+    cover = opening.cover
+    total = None
+    if cover.raster is not None:
+        total = len(asked_packs(cover.covers, cover.groups)) * cover.raster.grid.rows
+    unit = "patches" if total is None else "rows"
+    with progress.stage(opening.plan.name, "draw patches", total, unit) as stage, being_kept(drawn) as part:
+        opening.census.stage = stage
+        for count in draw_patches(cover, opening.work, figures, part):
+            if total is None:
+                stage.advance(count)
+        confirm(prints)  # else the polygons would not be those of the figures
 
 
 def _named(zones: Any, what: str) -> dict[str, Any]:
@@ -224,20 +248,17 @@ def _polygons(plan: CoverPlan, work: CoverWork) -> PolygonCover:
     )
 
 
-def _patch_table(patches: pd.DataFrame) -> pa.Table:
-    """Return patches as Arrow, polygons as WKB."""
-    import shapely
-
-    table = patches.astype({"cover": str})
-    if GEOMETRY in table:
-        table[GEOMETRY] = shapely.to_wkb(table[GEOMETRY].to_numpy())
-    return pa.Table.from_pandas(table, preserve_index=False)
-
-
 def keep(table: pa.Table, kept: Path) -> None:
-    """Write a table beside its place and rename it into it when whole."""
+    """Write a table that is kept."""
+    with being_kept(kept) as part:
+        pq.write_table(table, part)
+
+
+@contextmanager
+def being_kept(kept: Path) -> Iterator[Path]:
+    """Give a file to write beside its place, and rename it into it when whole."""
     unfinished = kept.with_suffix(f".{os.getpid()}.part")
     with in_plain_words(kept):
-        pq.write_table(table, unfinished)
+        yield unfinished
         flush(unfinished)
         unfinished.replace(kept)

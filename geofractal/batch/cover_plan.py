@@ -110,7 +110,7 @@ class CoverPlan:
         ]
         files += [self.warping_file(folder)] if self.warped else []
         for work, stem in zip(self.works, self.stems, strict=True):
-            if getattr(work.request.options, "patches", False):
+            if work.request.patch_rule() is not None:
                 files += self.patch_files(batch, stem).values()
         return files
 

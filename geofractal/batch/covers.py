@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections import Counter, defaultdict
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -13,23 +13,15 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
-from geofractal.batch.cover_parts import CoverPart, confirm, cover_part, keep, open_cover, part_key
+from geofractal.batch.cover_parts import CoverPart, confirm, cover_part, keep, part_key
 from geofractal.batch.cover_plan import CoverPlan, CoverWork
+from geofractal.batch.patch_layers import write_patches
 from geofractal.config.models import Batch
-from geofractal.cover_map import RasterCover
 from geofractal.measure import Column
 from geofractal.patches import warping_effect
 from geofractal.progress import Progress
 from geofractal.writer.sources import Fingerprint, fingerprint
-from geofractal.writer.tables import GEOMETRY, write_patch_layer, write_table
-
-PLACE = ["cover", "first_row", "first_column"]
-"""Columns that name a patch: no two patches of a class begin with the same cell."""
-
-INNER = {"zone", "first_row", "first_column", "last_row", "left_column", "right_column"}
-"""Columns of patches that speak of the grid and stay out of the layer of patches."""
-
-PATCHES_PER_BATCH = 5_000
+from geofractal.writer.tables import write_table
 
 
 @dataclass
@@ -90,10 +82,7 @@ def measure_cover(plan: CoverPlan, folder: Path, progress: Progress) -> Measured
     begun = time.monotonic()
     paths = {*plan.files, *(layer.info.path for work in plan.works for layer in work.layers)}
     prints = {path: fingerprint(path) for path in sorted(paths)}
-    parts = []
-    for work in plan.works:
-        with progress.stage(plan.name, work.request.measure, None, "rows") as stage:
-            parts.append(cover_part(plan, work, prints, folder, stage))
+    parts = [cover_part(plan, work, prints, folder, progress) for work in plan.works]
     warping = _warping(plan, folder, prints, progress) if plan.warped else None
     confirm(prints)
     return MeasuredCover(plan, tuple(parts), prints, warping, time.monotonic() - begun)
@@ -126,59 +115,12 @@ def write_cover(found: MeasuredCover, batch: Batch, progress: Progress) -> None:
             write_table(table, found.plan.table(folder, stem, word))
     if found.warping is not None:
         write_table(found.warping, found.plan.warping_file(folder))
-    for (work, part), stem in zip(found.works, found.plan.stems, strict=True):
+    for part, stem in zip(found.parts, found.plan.stems, strict=True):
         if part.patches is not None:
             targets = found.plan.patch_files(batch, stem).values()
-            _write_patches(found.plan, work, part, targets, progress)
+            write_patches(found.plan, part.patches, targets, progress)
     found.files = found.plan.targets(batch)
     found.writing_s = time.monotonic() - begun
-
-
-def _write_patches(
-    plan: CoverPlan, work: CoverWork, part: CoverPart, targets: Iterable[Path], progress: Progress
-) -> None:
-    """Write the patches of a measure in each format; polygons of cells are drawn once, and kept."""
-    from pyproj import CRS
-
-    assert part.patches is not None
-    if plan.raster is None:
-        assert plan.polygons is not None
-        drawn, crs = part.patches, CRS.from_user_input(plan.polygons.info.crs)
-    else:
-        drawn, crs = part.patches.with_suffix(".polygons.parquet"), plan.raster.grid.crs
-        if not drawn.exists():
-            _draw(plan, work, part, drawn, progress)
-    for target in targets:
-        with pq.ParquetFile(drawn) as file:
-            rows = file.metadata.num_rows
-            shown = [name for name in file.schema_arrow.names if name not in INNER]
-            with progress.stage(plan.name, f"write {target.name}", rows, "patches") as stage:
-                batches = file.iter_batches(PATCHES_PER_BATCH, columns=shown)
-                write_patch_layer(batches, file.schema_arrow, shown, crs, target, stage.advance)
-
-
-def _draw(plan: CoverPlan, work: CoverWork, part: CoverPart, drawn: Path, progress: Progress) -> None:
-    """Keep the patches with their polygons, which takes a further reading of the map."""
-    import pandas as pd
-    import shapely
-
-    assert part.patches is not None
-    cover = open_cover(plan, work, lambda _: None)
-    assert isinstance(cover, RasterCover)
-    table = pq.read_table(part.patches)
-    known, schema = table.to_pandas(), table.schema.append(pa.field(GEOMETRY, pa.binary()))
-    unfinished = drawn.with_suffix(".part")
-    with (
-        progress.stage(plan.name, "draw patches", len(known), "patches") as stage,
-        pq.ParquetWriter(unfinished, schema) as writer,
-    ):
-        for frame in cover.polygons(part.neighbours):
-            wkb = shapely.to_wkb(frame[GEOMETRY].to_numpy(object))
-            found = pd.DataFrame({**frame[PLACE].astype({"cover": str}), GEOMETRY: wkb})
-            joined = found.merge(known, on=PLACE, how="left", validate="1:1")
-            writer.write_table(pa.Table.from_pandas(joined[schema.names], schema, preserve_index=False))
-            stage.advance(len(frame))
-    unfinished.replace(drawn)
 
 
 def cover_tally(work: CoverWork, part: CoverPart) -> dict[str, Any]:

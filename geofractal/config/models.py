@@ -27,7 +27,7 @@ from pydantic_core import PydanticCustomError
 from geofractal.config.columns import ZoneColumn, prefixed, zone_columns
 from geofractal.config.yaml_tree import KeyPath, YamlTree
 from geofractal.errors import LayerError, Problem
-from geofractal.measure import Column, LadderMeasure, LadderOptions, Options, Quantity
+from geofractal.measure import Column, LadderMeasure, LadderOptions, Options, PatchRule, Quantity
 from geofractal.registry import columns_of, load_cover_measure, load_measure, quantities_of
 
 RASTER_ENDINGS = (".tif", ".tiff", ".vrt")
@@ -313,6 +313,10 @@ class CoverRequest(CoverHead):
             where the measure cannot be loaded or its quantities break the contract
         """
         return quantities_of(load_cover_measure(self.measure), self.options)
+
+    def patch_rule(self) -> PatchRule | None:
+        """Return by which rule patches are to be written as a layer; None where none are asked for."""
+        return load_cover_measure(self.measure).patch_rule(self.options)
 
     def zone_columns(self) -> tuple[ZoneColumn, ...]:
         """Return the columns that the zones' copy gains, prefix included; none unless covers are named."""

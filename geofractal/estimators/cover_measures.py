@@ -28,6 +28,7 @@ from geofractal.measure import (
     CoverResult,
     Floats,
     Options,
+    PatchRule,
     Quantity,
 )
 
@@ -104,7 +105,7 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
 
     def measure(self, cover: CoverMap, options: AreaPerimeterOptions) -> CoverResult:
         """Fit each class on the whole map, and within each zone the patches that lie in it alone."""
-        area = "filled_area_m2" if options.filled else "area_m2"
+        area = _area(options)
 
         def fit(found: CoverPatches, by: Sequence[str]) -> pd.DataFrame:
             return area_perimeter_dimension(
@@ -121,20 +122,35 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
             neighbours=options.neighbours,
             perimeter=options.perimeter,
             map_edge=options.map_edge,
-            columns=None if options.patches else ("cells", area, "perimeter_m", "touches_edge"),
-            smallest_cells=1 if options.patches else options.smallest_cells,
-            smallest_area_m2=0.0 if options.patches or options.filled else options.smallest_area_m2,
+            columns=("cells", area, "perimeter_m", "touches_edge"),
+            smallest_cells=options.smallest_cells,
+            smallest_area_m2=0.0 if options.filled else options.smallest_area_m2,
         )
-        fits, patches = _fitted(cover, found, fit)
-        if options.patches:
-            whole = fits[fits["unit"] == WHOLE_MAP]
-            residual = area_perimeter_residual(patches, whole, area=area)
-            patches = patches.assign(residual=residual)
+        fits = _fitted(cover, found, fit)
         verdicts = fits["area_perimeter_verdict"].to_numpy(object)
         limits = fits["area_perimeter_note"].to_numpy(object)
         said = [_joined(verdict, limit) for verdict, limit in zip(verdicts, limits, strict=True)]
-        figures = _figures(fits, AREA_PERIMETER, said, cover)
-        return CoverResult(figures, patches if options.patches else None, options.neighbours)
+        return CoverResult(_figures(fits, AREA_PERIMETER, said, cover))
+
+    def patch_rule(self, options: AreaPerimeterOptions) -> PatchRule | None:
+        """Return the rule of the patches that were measured, where they are to be written."""
+        if not options.patches:
+            return None
+        return PatchRule(options.neighbours, options.perimeter, options.map_edge)
+
+    def patch_columns(
+        self, patches: pd.DataFrame, figures: pd.DataFrame, options: AreaPerimeterOptions
+    ) -> pd.DataFrame:
+        """Return patches with the residual of each from the line of its class on the whole map."""
+        import pandas as pd
+
+        whole = figures[figures["reporting_unit"] == WHOLE_MAP]
+        lines = {
+            name: whole[whole["quantity"] == name].set_index("cover")["estimate"]
+            for name in ("area_perimeter_dim", "area_perimeter_prefactor")
+        }
+        table = pd.DataFrame(lines).rename_axis("cover").reset_index()
+        return patches.assign(residual=area_perimeter_residual(patches, table, area=_area(options)))
 
 
 class NumberAreaExponent(CoverMeasure[PatchOptions]):
@@ -175,9 +191,14 @@ class NumberAreaExponent(CoverMeasure[PatchOptions]):
             columns=("area_m2", "touches_edge"),
             smallest_area_m2=options.smallest_area_m2,
         )
-        fits, _ = _fitted(cover, found, fit)
+        fits = _fitted(cover, found, fit)
         said = [_joined(verdict, None) for verdict in fits["number_area_verdict"]]
         return CoverResult(_figures(fits, NUMBER_AREA, said, cover))
+
+
+def _area(options: AreaPerimeterOptions) -> str:
+    """Return the column of areas that perimeters are held against."""
+    return "filled_area_m2" if options.filled else "area_m2"
 
 
 def _readings(cover: CoverMap) -> int:
@@ -188,8 +209,8 @@ def _readings(cover: CoverMap) -> int:
 Fit = Callable[[CoverPatches, Sequence[str]], "pd.DataFrame"]
 
 
-def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Return the fits of every zone and, last, the whole map, one row a unit and class; and the patches."""
+def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> pd.DataFrame:
+    """Return the fits of every zone and, last, the whole map, one row a unit and class."""
     import pandas as pd
 
     first = next(found)
@@ -201,8 +222,7 @@ def _fitted(cover: CoverMap, found: Iterator[CoverPatches], fit: Fit) -> tuple[p
             names = {zone: cover.zones.names[zone] for zone in part.zones}
             rows.append(_complete(fit(part, ("zone", "cover")), names, wanted))
     rows.append(_complete(fit(first, ("cover",)).assign(zone=last), {last: WHOLE_MAP}, wanted))
-    fits = pd.concat(rows, ignore_index=True).sort_values("zone", kind="stable", ignore_index=True)
-    return fits, first.table
+    return pd.concat(rows, ignore_index=True).sort_values("zone", kind="stable", ignore_index=True)
 
 
 def _met(found: CoverPatches) -> list[str]:

@@ -7,7 +7,7 @@ only: patches follow each other by their last row, then by their first cell.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -23,6 +23,7 @@ from geofractal.landcover.grid import CellSizes
 from geofractal.landcover.strips import NOT_COVERED, OUTSIDE, Strip
 
 Ints = NDArray[np.int64]
+Bools = NDArray[np.bool_]
 
 SEVERAL_ZONES = OUTSIDE - 1
 """Zone of a patch that lies in more than one zone."""
@@ -66,6 +67,10 @@ class PatchTable:
         """Return the number of patches."""
         return len(self.values)
 
+    def take(self, lines: Ints | Bools) -> PatchTable:
+        """Return the patches of those lines, numbers or flags."""
+        return PatchTable(self.values[lines])
+
 
 @dataclass(frozen=True, slots=True)
 class Finished:
@@ -89,7 +94,12 @@ class Finished:
 
 
 def label_patches(
-    strips: Iterable[Strip], *, neighbours: int = 8, outlines: bool = False, runs: bool = False
+    strips: Iterable[Strip],
+    *,
+    neighbours: int = 8,
+    outlines: bool = False,
+    runs: bool = False,
+    runs_of: Callable[[Ints], Bools] | None = None,
 ) -> Iterator[Finished]:
     """Yield the patches of a class map, exactly as labelling the whole map would find them.
 
@@ -100,13 +110,14 @@ def label_patches(
     outlines : whether to follow outlines, for holes and filled areas; costs about a third more time
     runs : whether to hand out the cells of patches as runs, for polygons; memory then holds those of all
         unfinished patches, 16 bytes a run. Not with zones.
+    runs_of : tells by their classes which patches these are wanted of; those of others are soon forgotten
     """
     if neighbours not in {4, 8}:
         raise ConfigError(f"neighbours is {neighbours}; allowed are 4 and 8.")
     labeller: _Labeller | None = None
     for strip in strips:
         if labeller is None:
-            labeller = _Labeller(strip, eight=neighbours == 8, outlines=outlines, runs=runs)
+            labeller = _Labeller(strip, eight=neighbours == 8, outlines=outlines, runs=runs, runs_of=runs_of)
         yield from labeller.push(strip)
     if labeller is not None:
         yield from labeller.finish()
@@ -124,8 +135,17 @@ _TABLES = {
 class _Labeller:
     """Tables of one run of the kernels, and what is between two strips."""
 
-    def __init__(self, strip: Strip, *, eight: bool, outlines: bool, runs: bool) -> None:
+    def __init__(
+        self,
+        strip: Strip,
+        *,
+        eight: bool,
+        outlines: bool,
+        runs: bool,
+        runs_of: Callable[[Ints], Bools] | None,
+    ) -> None:
         columns = strip.codes.shape[1]
+        self.runs_of = runs_of
         self.reach, self.outlines, self.zoned = int(eight), outlines, strip.zones is not None
         self.upper = np.zeros((tables.RUN, columns + 1), np.int64)
         self.lower, self.pairs = self.upper.copy(), np.zeros((2 * columns + 2, 2), np.int64)
@@ -215,6 +235,8 @@ class _Labeller:
         if self.zoned:
             group[: len(self.group)] = self.group
             group_pieces(self.parent, n, group, len(self.group), self.links, n_links)
+        if len(self.kept) and self.runs_of is not None:
+            self._forget_runs(self.runs_of(self.labels[:n, _AT["class"]]))
         roots = self.parent[:n].copy() if len(self.kept) else self.parent
         done, done_labels, kept = retire(self.labels, self.parent, self.upper, self.rings, self.state)
         if not self.zoned:
@@ -223,6 +245,13 @@ class _Labeller:
             runs = self._finished_runs(roots, done_labels[order], kept) if len(self.kept) else None
             return Finished(table, table, table, lines, runs)
         return self._join_pieces(done, group[done_labels], group[kept], group)
+
+    def _forget_runs(self, wanted: Bools) -> None:
+        """Drop the runs of labels that are not wanted."""
+        runs = self.kept[: self.state[tables.N_KEPT]]
+        runs = runs[wanted[runs[:, 3]]]
+        self.state[tables.N_KEPT] = len(runs)
+        self.kept[: len(runs)] = runs
 
     def _finished_runs(self, roots: Ints, done_labels: Ints, kept: Ints) -> Ints:
         """Return the runs of finished patches, by line of the patch; hold back the others."""

@@ -42,4 +42,4 @@ class Sieve:
         )
         for key, count in zip(keys.tolist(), counts.tolist(), strict=True):
             self.counts[divmod(key, CLASSES)] += count
-        return PatchTable(patches.values[~small])
+        return patches.take(~small)

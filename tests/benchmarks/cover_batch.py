@@ -2,6 +2,7 @@
 
     python tests/benchmarks/cover_batch.py --side 32768           # 1.07 gigapixels
     python tests/benchmarks/cover_batch.py --side 32768 --grid warp
+    python tests/benchmarks/cover_batch.py --side 16384 --patches   # their layer is written, too
 
 The map is that of ``raster.py``, the zones are 100 with wavy borders. Each line is a process of its own that
 runs the batch from its YAML file to its tables after a warm-up on a small map.
@@ -20,6 +21,7 @@ from fragmentation import wavy_zones
 from raster import CRS, peak_mb, write_map
 
 ZONES = 100
+LAYERED = "area-perimeter-dimension"
 CASES: dict[str, tuple[dict[str, Any], ...]] = {
     "fragmentation": ({"measure": "fragmentation"},),
     "area-perimeter dimension": ({"measure": "area-perimeter-dimension"},),
@@ -53,6 +55,15 @@ def write_batch(folder: Path, side: int, measures: tuple[dict[str, Any], ...], g
     return batch
 
 
+def layered() -> dict[str, tuple[dict[str, Any], ...]]:
+    """Return the cases that have a layer of patches, with it."""
+    return {
+        title: tuple({**one, "patches": True} for one in measures)
+        for title, measures in CASES.items()
+        if all(one["measure"] == LAYERED for one in measures)
+    }
+
+
 def work(batches: tuple[Path, Path], results: multiprocessing.Queue) -> None:
     """Run a small batch, then the one that is timed."""
     from geofractal.batch.run import run_batch
@@ -74,12 +85,13 @@ def main() -> None:
     parser.add_argument("--folder", type=Path, help="where maps are kept; a temporary folder unless given")
     parser.add_argument("--grid", default="source", choices=("source", "warp"))
     parser.add_argument("--cases", default="", help="only those whose names hold this")
+    parser.add_argument("--patches", action="store_true", help="write layers of patches, too")
     parser.add_argument("--zones", type=int, default=1, choices=(0, 1), help="0 measures the whole map alone")
     asked = parser.parse_args()
     with tempfile.TemporaryDirectory() as temporary:
         folder = asked.folder or Path(temporary)
         print(f"{'':32}{'seconds':>10}{'M cells/s':>11}{'rows':>9}{'peak MB':>9}")
-        for title, measures in CASES.items():
+        for title, measures in (layered() if asked.patches else CASES).items():
             if asked.cases not in title:
                 continue
             batches = tuple(
