@@ -166,7 +166,8 @@ def check_cover_measure(measure_class: type[CoverMeasure[Any]], options: Options
 
     Checked are: its class and quantities, that it pickles, that it is pure, that the height of strips does
     not change a result, that the table has its columns and only the quantities, units and border rules
-    that were announced, that an estimate lies in its interval, and that a figure that is missing has a note.
+    that were announced, that an estimate lies in its interval, that a figure that is missing has a note, and
+    that columns of the layer of patches, where there is one, do not depend on which patches come together.
 
     Parameters and errors as of `check_measure`.
     """
@@ -186,6 +187,25 @@ def check_cover_measure(measure_class: type[CoverMeasure[Any]], options: Options
         }.items():
             if not figures.equals(again.figures):
                 raise AssertionError(f"{name}, {how}: the figures differ")
+        _check_patch_columns(name, measure, options, cover, figures)
+
+
+def _check_patch_columns(
+    name: str, measure: CoverMeasure[Any], options: Options, cover: CoverMap, figures: pd.DataFrame
+) -> None:
+    rule = measure.patch_rule(options)
+    for patches in () if rule is None else cover.polygons(rule):
+        whole = measure.patch_columns(patches, figures, options)
+        for row in range(len(patches)):
+            alone = measure.patch_columns(patches.iloc[[row]].reset_index(drop=True), figures, options)
+            for column in whole:
+                at = f"{name}, patch {row}: {column}"
+                if column in patches and alone[column][0] != patches[column].iloc[row]:
+                    raise AssertionError(f"{at} is no longer that of the patch")
+                if column not in patches and alone[column].dtype.kind not in "fib":
+                    raise AssertionError(f"{at} holds no numbers")
+                if not alone[column].equals(whole[column].iloc[[row]].reset_index(drop=True)):
+                    raise AssertionError(f"{at} depends on the patches beside it")
 
 
 def _check_figures(name: str, figures: pd.DataFrame, quantities: dict[str, Quantity]) -> None:

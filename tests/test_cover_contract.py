@@ -13,7 +13,15 @@ from geofractal.config.columns import zone_columns
 from geofractal.describe import as_dict, as_lines
 from geofractal.errors import MeasureError
 from geofractal.kernels.codes import count_codes
-from geofractal.measure import FIGURE_COLUMNS, WHOLE_MAP, CoverMeasure, CoverResult, Options, Quantity
+from geofractal.measure import (
+    FIGURE_COLUMNS,
+    WHOLE_MAP,
+    CoverMeasure,
+    CoverResult,
+    Options,
+    PatchRule,
+    Quantity,
+)
 from geofractal.registry import (
     COVER_KEYS,
     check_measure_class,
@@ -111,6 +119,11 @@ def test_the_shipped_measures_pass_the_kit(name):
     check_cover_measure(type(load_cover_measure(name)))
 
 
+def test_residuals_of_patches_pass_the_kit():
+    measure = type(load_cover_measure("area-perimeter-dimension"))
+    check_cover_measure(measure, measure.options(patches=True, smallest_cells=2))
+
+
 def test_a_good_measure_passes_the_kit():
     check_cover_measure(Cells, CellsOptions(at_least=10))
 
@@ -151,6 +164,35 @@ def test_the_kit_finds_what_breaks_the_contract(change, words, monkeypatch):
     monkeypatch.setitem(globals(), "Cells", broken)  # so that it pickles
     with pytest.raises(AssertionError, match=words):
         check_cover_measure(broken)
+
+
+class Ranked(Cells):
+    """A measure with a layer of patches."""
+
+    ranks: ClassVar = staticmethod(lambda patches: patches["cells"] + 0.5)
+
+    def patch_rule(self, options):  # noqa: ARG002 - the same for all
+        return PatchRule(4)
+
+    def patch_columns(self, patches, figures, options):  # noqa: ARG002 - those of cells alone
+        return patches.assign(rank=type(self).ranks(patches))
+
+
+def test_a_measure_with_a_layer_of_patches_passes_the_kit():
+    check_cover_measure(Ranked)
+
+
+@pytest.mark.parametrize(
+    ("ranks", "words"),
+    [
+        (lambda patches: patches["cells"].rank(), "rank depends on the patches beside it"),
+        (lambda patches: patches["cells"].astype(str), "rank holds no numbers"),
+    ],
+)
+def test_the_kit_finds_columns_of_patches_that_are_not_their_own(ranks, words, monkeypatch):
+    monkeypatch.setattr(Ranked, "ranks", staticmethod(ranks))
+    with pytest.raises(AssertionError, match=words):
+        check_cover_measure(Ranked)
 
 
 def test_the_specimens_have_zones_that_overlap_and_one_that_is_off_the_map():

@@ -149,7 +149,7 @@ class AreaPerimeterDimension(CoverMeasure[AreaPerimeterOptions]):
             name: whole[whole["quantity"] == name].set_index("cover")["estimate"]
             for name in ("area_perimeter_dim", "area_perimeter_prefactor")
         }
-        table = pd.DataFrame(lines).rename_axis("cover").reset_index()
+        table = pd.DataFrame(lines, dtype=np.float64).rename_axis("cover").reset_index()
         return patches.assign(residual=area_perimeter_residual(patches, table, area=_area(options)))
 
 
