@@ -1,5 +1,7 @@
 """Polygons of patches cover exactly the cells of their patches."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 import rasterio.features
@@ -14,7 +16,7 @@ from geofractal.kernels import outlines as kernels
 from geofractal.kernels import patches
 from geofractal.landcover import labelling
 from geofractal.landcover.labelling import label_patches
-from geofractal.landcover.outlines import patch_polygons, split_at_repeats
+from geofractal.landcover.outlines import patch_polygons
 from geofractal.patches import raster_patches
 
 UNIT = (1.0, 0.0, 0.0, 0.0, 1.0, 0.0)
@@ -46,6 +48,20 @@ def test_polygons_cover_their_cells(codes, rows, neighbours):
     assert np.array_equal(covered >= 0, codes >= 0)
 
 
+@pytest.mark.parametrize("seed", range(4))
+def test_parts_that_lie_in_holes_of_other_parts_keep_their_own_holes(seed):
+    codes = (np.random.default_rng(seed).random((40, 45)) < 0.5).astype(np.int16)
+    numbers = components(codes, 8)
+    found = polygons(codes, 7, 8)
+    holed = [sum(len(part.interiors) > 0 for part in one.geoms) for one in found if hasattr(one, "geoms")]
+    assert max(holed) > 1
+    for one in found:
+        row, column = np.argwhere(shapely.contains_xy(one, *(np.indices(codes.shape)[::-1] + 0.5)))[0]
+        rows, columns = np.nonzero(numbers == numbers[row, column])
+        assert one.is_valid
+        assert one.equals(shapely.union_all(shapely.box(columns, rows, columns + 1, rows + 1)))
+
+
 @given(small_maps)
 def test_polygons_equal_gdals(codes):
     """Cells of 4 neighbours: one polygon a patch, as GDAL traces them on the whole map."""
@@ -69,6 +85,12 @@ def test_compiled_kernels_equal_their_interpreted_twins(codes):
     following = np.random.default_rng(0).permutation(9)
     for one, other in zip(kernels.rings_of(following), kernels.rings_of.py_func(following), strict=True):
         assert np.array_equal(one, other)
+    assert np.array_equal(kernels.pieces_of_runs.py_func(runs), kernels.pieces_of_runs(runs))
+    begins, before = np.array([0, 6, 12]), np.array([-1, -1, -1, -1, 1, 0, -1, -1, 7, -1, -1, 6])
+    for one, other in zip(
+        kernels.cut_at_repeats(begins, before), kernels.cut_at_repeats.py_func(begins, before), strict=True
+    ):
+        assert np.array_equal(one, other)
 
 
 def test_full_tables_change_nothing(monkeypatch):
@@ -82,12 +104,9 @@ def test_full_tables_change_nothing(monkeypatch):
 
 
 def test_a_walk_that_touches_itself_is_cut():
-    eight = np.array([[0, 0], [1, 0], [1, 1], [2, 1], [2, 2], [1, 2], [1, 1], [0, 1]])
-    loops = split_at_repeats(eight)
-    assert [loop.tolist() for loop in loops] == [
-        [[1, 1], [2, 1], [2, 2], [1, 2]],
-        [[0, 0], [1, 0], [1, 1], [0, 1]],
-    ]
+    """An eight: its sixth corner is its second; what lies between is a ring, and what is left another."""
+    order, begins = kernels.cut_at_repeats(np.array([0, 8]), np.array([-1] * 6 + [2, -1]))
+    assert [order[first:stop].tolist() for first, stop in pairwise(begins)] == [[2, 3, 4, 5], [0, 1, 2, 7]]
 
 
 def test_a_table_with_polygons():

@@ -6,6 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from geofractal.kernels.jit import kernel
+from geofractal.kernels.patch_tables import find, join
 
 Ints = NDArray[np.int64]
 
@@ -118,3 +119,69 @@ def rings_of(following: Ints) -> tuple[Ints, Ints]:
             edge = following[edge]
     begins[rings] = m
     return order, begins[: rings + 1]
+
+
+@kernel
+def cut_at_repeats(begins: Ints, before: Ints) -> tuple[Ints, Ints]:
+    """Cut closed walks into rings that touch no corner twice.
+
+    Parameters
+    ----------
+    begins : (w + 1,) where each walk begins, with the end
+    before : (m,) the corner at which the walk touched the same point before, -1 where it did not
+
+    Returns
+    -------
+    The corners in the order of rings, and where each ring begins (with the end appended).
+    """
+    m, n, rings = len(before), 0, 0
+    order, found = np.empty(m, np.int64), np.empty(m + 1, np.int64)
+    path, place = np.empty(m, np.int64), np.full(m, -1, np.int64)  # walked and not cut off; where in it
+    for walk in range(len(begins) - 1):
+        depth = 0
+        for corner in range(begins[walk], begins[walk + 1]):
+            start = place[before[corner]] if before[corner] >= 0 else -1
+            if start < 0:
+                place[corner], path[depth] = depth, corner
+                depth += 1
+                continue
+            found[rings] = n
+            rings += 1
+            for k in range(start, depth):
+                order[n] = path[k]
+                n += 1
+                if k > start:
+                    place[path[k]] = -1
+            depth = start + 1
+        found[rings] = n
+        rings += 1
+        order[n : n + depth] = path[:depth]
+        n += depth
+    found[rings] = n
+    return order, found[: rings + 1]
+
+
+@kernel
+def pieces_of_runs(runs: Ints) -> Ints:
+    """Return a number for each run, equal for those of a patch that hang together by sides of cells.
+
+    Parameters
+    ----------
+    runs : as of `row_edges`
+    """
+    parent, above = np.arange(len(runs)), 0
+    for run in range(len(runs)):
+        patch, row, first, stop = runs[run, 0], runs[run, 1], runs[run, 2], runs[run, 3]
+        while above < run and (
+            runs[above, 0] != patch
+            or runs[above, 1] < row - 1
+            or (runs[above, 1] == row - 1 and runs[above, 3] <= first)
+        ):
+            above += 1
+        at = above
+        while at < run and runs[at, 1] == row - 1 and runs[at, 2] < stop:
+            join(parent, at, run)
+            at += 1
+    for run in range(len(runs)):
+        parent[run] = find(parent, run)
+    return parent

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-from itertools import pairwise
-from typing import Any
-
 import numpy as np
 import shapely
 from numpy.typing import NDArray
@@ -16,6 +13,8 @@ from geofractal.kernels.outlines import (
     PATCH,
     ROW,
     TO,
+    cut_at_repeats,
+    pieces_of_runs,
     rings_of,
     row_edges,
 )
@@ -27,7 +26,8 @@ Ints = NDArray[np.int64]
 def patch_polygons(runs: Ints, count: int, transform: Affine) -> NDArray[np.object_]:
     """Return the polygon of each patch, along cell edges, in the coordinates of its grid.
 
-    Parts that meet in corners only are parts of a multipolygon; so every polygon is valid.
+    Parts that meet in corners only are parts of a multipolygon; so every polygon is valid. A hole belongs to
+    the part whose cell lies beside it.
 
     Parameters
     ----------
@@ -40,16 +40,38 @@ def patch_polygons(runs: Ints, count: int, transform: Affine) -> NDArray[np.obje
     >>> patch_polygons(np.array([[0, 0, 0, 2]]), 1, (1, 0, 0, 0, -1, 0))[0].wkt
     'POLYGON ((0 0, 2 0, 2 -1, 0 -1, 0 0))'
     """
-    edges = row_edges(np.ascontiguousarray(runs))
+    found = np.empty(count, dtype=object)
+    if not len(runs):
+        return found
+    runs = np.ascontiguousarray(runs)
+    corners, patch, begins = _closed_walks(row_edges(runs))
+    order, begins = cut_at_repeats(begins, _visited_before(corners, begins))
+    corners, patch = corners[order], patch[order[begins[:-1]]]
+    outer = _signed_areas(corners, begins) > 0
+    part_of_piece = np.full(len(runs), -1)
+    piece = pieces_of_runs(runs)[_runs_beside(corners, begins, patch, runs)]
+    part_of_piece[piece[outer]] = np.arange(outer.sum())
+    part = part_of_piece[piece]
+    a, b, c, d, e, f = transform
+    x, y = corners.T
+    xy = np.column_stack([a * x + b * y + c, d * x + e * y + f])
+    rings = shapely.linearrings(xy, indices=np.repeat(np.arange(len(patch)), np.diff(begins)))
+    shells_first = np.lexsort((~outer, part))
+    parts = shapely.polygons(rings[shells_first], indices=part[shells_first])
+    several = np.bincount(patch[outer], minlength=count)[patch[outer]] > 1
+    found[patch[outer][~several]] = parts[~several]
+    if several.any():
+        split, of = np.unique(patch[outer][several], return_inverse=True)
+        found[split] = shapely.multipolygons(parts[several], indices=of)
+    return found
+
+
+def _closed_walks(edges: Ints) -> tuple[Ints, Ints, Ints]:
+    """Return the corners of outlines, walk after walk, the patch of each, and where each walk begins."""
     order, begins = rings_of(_following(edges))
     walked = edges[order]
     corners = np.stack([walked[:, [FROM, TO]], walked[:, [ROW, ROW]]], axis=-1).reshape(-1, 2)
-    rings: list[list[Ints]] = [[] for _ in range(count)]
-    for first, stop in pairwise(begins):
-        rings[walked[first, PATCH]] += split_at_repeats(corners[2 * first : 2 * stop])
-    found = np.empty(count, dtype=object)
-    found[:] = [_polygon(one, transform) for one in rings]
-    return found
+    return corners, np.repeat(walked[:, PATCH], 2), 2 * begins
 
 
 def _following(edges: Ints) -> Ints:
@@ -67,56 +89,35 @@ def _following(edges: Ints) -> Ints:
     return following
 
 
-def split_at_repeats(ring: Ints) -> list[Ints]:
-    """Cut a closed walk into rings that touch no corner twice."""
-    keys = ring[:, 0] * (ring[:, 1].max() + 1) + ring[:, 1]
-    if len(np.unique(keys)) == len(keys):
-        return [ring]
-    found: list[Ints] = []
-    path: list[int] = []
-    place: dict[int, int] = {}
-    for i, key in enumerate(keys.tolist()):
-        if key in place:
-            start = place[key]
-            loop = path[start:]
-            found.append(ring[loop])
-            for j in loop[1:]:
-                del place[int(keys[j])]
-            del path[start + 1 :]
-        else:
-            place[key] = len(path)
-            path.append(i)
-    found.append(ring[path])
-    return found
+def _visited_before(corners: Ints, begins: Ints) -> Ints:
+    """Return for each corner where its walk touched the same point before, -1 where it did not.
+
+    A walk touches a point at most twice, since four edges meet there.
+    """
+    walk = np.repeat(np.arange(len(begins) - 1), np.diff(begins))
+    order = np.lexsort((corners[:, 0], corners[:, 1], walk))
+    again = (np.diff(corners[order], axis=0) == 0).all(axis=1) & (np.diff(walk[order]) == 0)
+    before = np.full(len(corners), -1)
+    before[order[1:][again]] = order[:-1][again]
+    return before
 
 
-def _polygon(rings: list[Ints], transform: Affine) -> Any:
-    """Return a polygon of rings in cells: outer ones have a positive area, holes a negative one."""
-    a, b, c, d, e, f = transform
-    areas = [_signed_area(ring) for ring in rings]
-    shapes = [np.column_stack([a * x + b * y + c, d * x + e * y + f]) for x, y in (ring.T for ring in rings)]
-    outer = [i for i, area in enumerate(areas) if area > 0]
-    inner = [i for i, area in enumerate(areas) if area < 0]
-    holes: dict[int, list[Any]] = {i: [] for i in outer}
-    for hole in inner:
-        holes[_owner(rings[hole], rings, outer, areas)].append(shapes[hole])
-    parts = [shapely.Polygon(shapes[i], holes[i]) for i in outer]
-    return parts[0] if len(parts) == 1 else shapely.MultiPolygon(parts)
+def _signed_areas(corners: Ints, begins: Ints) -> Ints:
+    """Return twice the area of each ring: positive of outer ones, negative of holes."""
+    x, y = corners.T
+    following = np.arange(1, len(corners) + 1)
+    following[begins[1:] - 1] = begins[:-1]
+    areas: Ints = np.add.reduceat(x * y[following] - x[following] * y, begins[:-1])
+    return areas
 
 
-def _signed_area(ring: Ints) -> int:
-    x, y = ring.T
-    return int((x * np.roll(y, -1) - np.roll(x, -1) * y).sum())
-
-
-def _owner(hole: Ints, rings: list[Ints], outer: list[int], areas: list[int]) -> int:
-    """Return the smallest outer ring round the patch's cell beside a hole's first edge along a row."""
-    if len(outer) == 1:
-        return outer[0]
-    (x0, y0), (x1, y1) = hole[0], hole[1]
-    beside = (min(x0, x1) + 0.5, y0 + (0.5 if x1 > x0 else -0.5)) if y0 == y1 else None
-    if beside is None:
-        beside = (x0 + (0.5 if y1 < y0 else -0.5), min(y0, y1) + 0.5)
-    point = shapely.Point(beside)
-    round_it = [i for i in outer if shapely.Polygon(rings[i]).contains(point)]
-    return min(round_it, key=areas.__getitem__)
+def _runs_beside(corners: Ints, begins: Ints, patch: Ints, runs: Ints) -> Ints:
+    """Return the run of cells beside the first edge of each ring, on its right hand."""
+    (x, y), (ahead_x, ahead_y) = corners[begins[:-1]].T, corners[begins[:-1] + 1].T
+    along = y == ahead_y
+    column = np.where(along, np.minimum(x, ahead_x), np.where(ahead_y < y, x, x - 1))
+    row = np.where(along, np.where(ahead_x > x, y, y - 1), np.minimum(y, ahead_y))
+    rows, columns = runs[:, 1].max() + 1, runs[:, 3].max() + 1
+    known = (runs[:, 0] * rows + runs[:, 1]) * columns + runs[:, 2]
+    beside: Ints = np.searchsorted(known, (patch * rows + row) * columns + column, side="right") - 1
+    return beside
