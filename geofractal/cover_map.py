@@ -28,7 +28,9 @@ from geofractal.reader.raster_classes import Legend
 if TYPE_CHECKING:
     import pandas as pd
 
-OTHER = "other"
+REST = "\0"
+"""Name of what is of no cover of a pack; no group can have it."""
+
 OWN_BARRIER = (
     f"{BARRIER!r} is what cells are called that barriers with a width take; a class or group of this name "
     "needs another one."
@@ -178,7 +180,7 @@ class RasterCover:
 
     def _named(self, pack: Pack) -> Raster:
         """Return the raster under the names of a pack's covers."""
-        return replace(self.raster, legend=Legend([*pack.names, OTHER], {})) if pack.names else self.raster
+        return replace(self.raster, legend=Legend([*pack.names, REST], {})) if pack.names else self.raster
 
 
 def _drawn(found: Finished, wanted: Ints, raster: Raster, convention: Perimeter) -> pd.DataFrame:

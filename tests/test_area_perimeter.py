@@ -211,6 +211,14 @@ class TestBreaks:
         assert fit_break(np.arange(50.0), np.arange(50.0)) is None
 
 
+def test_a_patch_without_perimeter_has_no_residual():
+    patches = table(np.array([4.0, 4.0]), np.array([8.0, 0.0]))
+    line = pd.DataFrame({"cover": ["reed"], "area_perimeter_dim": [1.0], "area_perimeter_prefactor": [2.0]})
+    found = area_perimeter_residual(patches, line)
+    assert found[0] == pytest.approx(np.log(8 / (2 * 4 ** (1 / 2))))
+    assert np.isnan(found[1])
+
+
 def test_residuals_say_who_has_more_edge_than_the_class():
     side = np.geomspace(1, 100, 40)
     patches = table(side**2, 4 * side)

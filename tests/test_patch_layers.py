@@ -129,6 +129,13 @@ def polygons(raster, covers=()):
     return pd.concat(RasterCover(raster, None, None, groups, covers).polygons(PatchRule()), ignore_index=True)
 
 
+def test_a_group_may_have_any_name():
+    cover = RasterCover(opened(), None, None, {"other": ("1", "2")}, ("other",))
+    alone = RasterCover(opened(), None, None, {"low": ("1", "2")}, ("low",))
+    found, expected = (pd.concat(one.polygons(PatchRule())) for one in (cover, alone))
+    assert found["area_m2"].tolist() == expected["area_m2"].tolist()
+
+
 @pytest.mark.parametrize("rows", [1, 7, 64])
 def test_strips_change_neither_rows_nor_their_order(rows):
     assert_frame_equal(polygons(opened(rows)), polygons(opened()))

@@ -73,7 +73,7 @@ def write_patches(plan: CoverPlan, drawn: Path, targets: Iterable[Path], progres
     else:
         crs = plan.raster.grid.crs
     for target in targets:
-        with pq.ParquetFile(drawn) as file:
+        with pq.ParquetFile(drawn, pre_buffer=False) as file:  # else all of it is held
             names, rows = file.schema_arrow.names, file.metadata.num_rows
             with progress.stage(plan.name, f"write {target.name}", rows, "patches") as stage:
                 batches = file.iter_batches(PATCHES_PER_BATCH)

@@ -136,6 +136,7 @@ def area_perimeter_residual(
 ) -> Floats:
     """Return, patch by patch, ln P less what the line of its class says; NaN where that has no dimension.
 
+    It is NaN, too, of a patch without perimeter: one that touches nothing but the map's edge, left out.
     A patch has no dimension of its own: it would depend on the unit of length. Positive values are
     patches with more edge than the class's patches of that size have.
     """
@@ -144,7 +145,8 @@ def area_perimeter_residual(
     joined = patches[[*keys, area, "perimeter_m"]].astype({"cover": str} if "cover" in keys else {})
     joined = joined.merge(lines.astype({"cover": str} if "cover" in keys else {}), on=keys, how="left")
     expected = joined["area_perimeter_prefactor"] * joined[area] ** (joined["area_perimeter_dim"] / 2)
-    return np.asarray(np.log(joined["perimeter_m"] / expected), np.float64)
+    perimeter = joined["perimeter_m"].where(joined["perimeter_m"] > 0)
+    return np.asarray(np.log(perimeter / expected), np.float64)
 
 
 def fit_patches(area: Floats, perimeter: Floats, smallest_cells: int | None) -> dict[str, Any]:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import shapely
 from numpy.typing import NDArray
@@ -22,6 +24,9 @@ from geofractal.landcover.grid import Affine
 
 Ints = NDArray[np.int64]
 
+LOT_RUNS = 30_000
+"""Runs of cells that are traced together: enough of them that this costs no time."""
+
 
 def patch_polygons(runs: Ints, count: int, transform: Affine) -> NDArray[np.object_]:
     """Return the polygon of each patch, along cell edges, in the coordinates of its grid.
@@ -41,9 +46,24 @@ def patch_polygons(runs: Ints, count: int, transform: Affine) -> NDArray[np.obje
     'POLYGON ((0 0, 2 0, 2 -1, 0 -1, 0 0))'
     """
     found = np.empty(count, dtype=object)
-    if not len(runs):
-        return found
-    runs = np.ascontiguousarray(runs)
+    for first, stop in pairwise(_lots(runs[:, 0])):
+        lot = np.ascontiguousarray(runs[first:stop])
+        begin, end = lot[0, 0], lot[-1, 0] + 1
+        lot[:, 0] -= begin
+        found[begin:end] = _traced(lot, int(end - begin), transform)
+    return found
+
+
+def _lots(patch: Ints) -> Ints:
+    """Return where the runs of lots of whole patches begin, with the end: a lot at a time needs memory."""
+    begins = np.flatnonzero(np.r_[True, np.diff(patch) != 0])[: len(patch)]
+    first_of_lot = np.diff(begins // LOT_RUNS, prepend=-1) != 0
+    return np.append(begins[first_of_lot], len(patch))
+
+
+def _traced(runs: Ints, count: int, transform: Affine) -> NDArray[np.object_]:
+    """Return the polygons of patches that are traced together; there is one at least."""
+    found = np.empty(count, dtype=object)
     corners, patch, begins = _closed_walks(row_edges(runs))
     order, begins = cut_at_repeats(begins, _visited_before(corners, begins))
     corners, patch = corners[order], patch[order[begins[:-1]]]
