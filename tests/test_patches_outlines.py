@@ -14,7 +14,7 @@ from hypothesis.extra import numpy as arrays
 
 from geofractal.kernels import outlines as kernels
 from geofractal.kernels import patches
-from geofractal.landcover import labelling
+from geofractal.landcover import labelling, outlines
 from geofractal.landcover.labelling import label_patches
 from geofractal.landcover.outlines import patch_polygons
 from geofractal.patches import raster_patches
@@ -101,6 +101,13 @@ def test_full_tables_change_nothing(monkeypatch):
     monkeypatch.setattr(labelling, "LABELS", 40)
     for one, other in zip(calm, polygons(codes, 7, 8), strict=True):
         assert one.equals(other)
+
+
+def test_patches_traced_in_lots_are_the_same(monkeypatch):
+    codes = np.random.default_rng(2).integers(-1, 3, (30, 20)).astype(np.int16)
+    together = polygons(codes, 30, 8)
+    monkeypatch.setattr(outlines, "LOT_RUNS", 4)
+    assert [one.wkt for one in polygons(codes, 30, 8)] == [one.wkt for one in together]
 
 
 def test_a_walk_that_touches_itself_is_cut():
