@@ -6,10 +6,13 @@ import shapely
 from class_maps import PLANE, components, plane_grid, strips
 from hypothesis import given
 from hypothesis import strategies as st
+from pyproj import CRS
 from scipy import ndimage
 
 from geofractal.kernels import barrier_cuts
 from geofractal.landcover.barriers import place_barriers
+from geofractal.landcover.grid import Grid
+from geofractal.landcover.polygon_zones import place_polygon_barriers
 from geofractal.landcover.strips import CUT_DOWN, CUT_DOWN_LEFT, CUT_DOWN_RIGHT, CUT_RIGHT
 
 
@@ -67,6 +70,21 @@ class TestLinks:
         barriers = place_barriers(plane_grid(np.zeros((2, 2))), rows, PLANE)
         assert barriers.left_out == {"missing geometry": 1, "Point, not a line": 1, "empty geometry": 1}
         assert len(barriers.segments) == 0
+
+    def test_points_drawn_as_lines_are_left_out_whatever_the_crs(self):
+        """Edges are divided on the way to another CRS, which a line of one place has none of."""
+        point = [(9.0, 54.0), (9.0, 54.0)]
+        rows = [shapely.LineString(point), shapely.LineString([(np.nan, 54), (9, 54)])]
+        rows.append(shapely.MultiLineString([point, [(9, 54), (9.001, 54)]]))
+        left_out = {"zero length": 1, "coordinates that are not numbers": 1}
+        barriers = place_barriers(
+            Grid(2, 2, (10.0, 0, 5e5, 0, -10.0, 6e6), CRS("EPSG:32632")), rows, CRS("EPSG:4326")
+        )
+        assert barriers.left_out == left_out
+        assert np.hypot(*(barriers.segments[:, 2:] - barriers.segments[:, :2]).T).all()
+        placed = place_polygon_barriers(rows, CRS("EPSG:4326"), CRS("EPSG:32632"))
+        assert placed.left_out == left_out
+        assert len(placed.lines) == 1
 
 
 def test_a_diagonal_barrier_holds_under_eight_neighbours():

@@ -101,7 +101,7 @@ def place_barriers(
     parts, owners, reasons = [np.empty((0, 4))], [np.empty(0)], []
     for geometry, width in zip(geometries, widths, strict=True):
         reason = unusable_line(geometry)
-        placed = None if reason else placer(shapely.force_2d(geometry))
+        placed = None if reason else placer(shapely.multilinestrings(line_parts(geometry)))
         if placed is not None and not np.isfinite(shapely.get_coordinates(placed)).all():
             reason, placed = "reaches where the raster's CRS is not defined", None
         reasons.append(reason)
@@ -193,4 +193,14 @@ def unusable_line(geometry: Any) -> str:
         return "missing geometry"
     if geometry.geom_type not in {"LineString", "MultiLineString", "LinearRing"}:
         return f"{geometry.geom_type}, not a line"
-    return "empty geometry" if geometry.is_empty else ""
+    if geometry.is_empty:
+        return "empty geometry"
+    if not np.isfinite(shapely.get_coordinates(geometry)).all():
+        return "coordinates that are not numbers"
+    return "" if len(line_parts(geometry)) else "zero length"
+
+
+def line_parts(geometry: Any) -> Any:
+    """Return the parts of a line in two dimensions, without those that are one point and so no barrier."""
+    parts = shapely.get_parts(shapely.force_2d(geometry))
+    return parts[shapely.length(parts) > 0]

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import shapely
 
-from geofractal.landcover.barriers import Widths, barrier_widths, unusable_line
+from geofractal.landcover.barriers import Widths, barrier_widths, line_parts, unusable_line
 from geofractal.landcover.grid import Floats, is_engineering, lon_lat, plane_by_ground, radii
 from geofractal.landcover.polygon_map import metres_a_unit
 from geofractal.landcover.polygons import Geometries, unusable
@@ -116,7 +116,7 @@ def place_polygon_barriers(
     lines, widths, reasons = [], [], []
     for geometry, width in zip(geometries, barrier_widths(width_m, len(geometries)), strict=True):
         reason = unusable_line(geometry)
-        moved = None if reason else _moved(geometry, crs, own)
+        moved = None if reason else _moved(shapely.multilinestrings(line_parts(geometry)), crs, own)
         reason = reason or _astray(moved)
         reasons.append(reason)
         if not reason:
