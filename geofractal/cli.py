@@ -262,14 +262,24 @@ def _summary(record: dict[str, Any]) -> Iterator[str]:
     """Yield what came of each measure, and of each layer that could not be read."""
     for name, layer in record["layers"].items():
         for tally in layer["measures"]:
-            reasons = [f"{reason} ({count:,})" for reason, count in tally["refused_by_reason"].items()]
-            refused = f"; without figure: {'; '.join(reasons[:3])}" if reasons else ""
-            more = f"; and {len(reasons) - 3} other reasons" if len(reasons) > 3 else ""
             asked = tally["rows"] - tally["left_out_by_where"]
-            answered = f"{tally['answered']:,} of {asked:,} rows have figures"
-            yield f"{name}: {tally['measure']}: {answered}{refused}{more}"
+            said = f"{tally['answered']:,} of {asked:,} rows have figures"
+            if tally["refused_by_reason"]:
+                said += f"; without figure: {_reasons(tally['refused_by_reason'])}"
+            for what in ("polygons", "barriers"):
+                if left_out := tally.get(f"{what}_left_out"):
+                    said += f"; {what} left out: {_reasons(left_out)}"
+            prefix = f" ({tally['prefix']})" if tally["prefix"] else ""
+            yield f"{name}: {tally['measure']}{prefix}: {said}"
     for name, reason in record["failed_layers"].items():
         yield f"{name}: not measured: {reason}"
+
+
+def _reasons(counts: dict[str, int]) -> str:
+    reasons = [f"{reason} ({count:,})" for reason, count in counts.items()]
+    further = len(reasons) - 3
+    more = [f"and {further} other reason{'s' * (further > 1)}"] if further > 0 else []
+    return "; ".join(reasons[:3] + more)
 
 
 def _json(value: Any) -> str:

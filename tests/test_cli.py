@@ -64,7 +64,7 @@ def record(exit_code=0, refused=None, failed=None):
     reasons = refused or {}
     answered = 10 - sum(reasons.values())
     counts = {"rows": 10, "left_out_by_where": 0, "answered": answered}
-    tally = {"measure": "vertex-spacing", **counts, "refused_by_reason": reasons}
+    tally = {"measure": "vertex-spacing", "prefix": None, **counts, "refused_by_reason": reasons}
     return {
         "exit_code": exit_code,
         "layers": {"shore": {"measures": [tally]}},
@@ -128,6 +128,19 @@ def test_run_says_what_came_of_each_measure_and_layer(call, folder, monkeypatch)
         "rivers: not measured: rivers.gpkg is cut off",
         f"Results and run record: {folder / 'out'}",
     ]
+
+
+def test_run_tells_requests_apart_and_what_they_left_out(call, monkeypatch):
+    ended = record()
+    (tally,) = ended["layers"]["shore"]["measures"]
+    many = {"empty geometry": 1200, "no class": 3, "missing geometry": 2, "zero length": 1}
+    tally |= {"prefix": "winter", "polygons_left_out": many, "barriers_left_out": {"zero length": 2}}
+    stand_in(monkeypatch, "run", run_batch=lambda batch, *, progress: ended)  # noqa: ARG005 - its shape
+    assert call("run", "batch.yaml").stdout.splitlines()[0] == (
+        "shore: vertex-spacing (winter): 10 of 10 rows have figures; polygons left out:"
+        " empty geometry (1,200); no class (3); missing geometry (2); and 1 other reason;"
+        " barriers left out: zero length (2)"
+    )
 
 
 def test_quiet_runs_say_nothing(call, monkeypatch):

@@ -574,6 +574,14 @@ def test_a_prefix_goes_before_names_and_keeps_short_names_short_and_apart():
     assert prefixed(columns, None) == tuple(columns)
 
 
+def test_prefixed_meanings_name_the_prefixed_columns():
+    columns = [
+        Column("a_dim", "a_dim", "number", "", "dimension"),
+        Column("note", "note", "text", "", "logarithm of a_dim, not of a_dim_low; a note"),
+    ]
+    assert prefixed(columns, "winter")[1].meaning == "logarithm of winter_a_dim, not of a_dim_low; a note"
+
+
 @given(
     st.lists(st.text("abc", min_size=1, max_size=10), unique=True, max_size=30),
     st.text("wxyz", min_size=1, max_size=9),

@@ -238,6 +238,10 @@ class TestClassNames:
         with pytest.raises(ConfigError, match="no class called 'reeds'; it names: reedbed, carr woodland"):
             read(path, classes={"habitat": "reeds"})
 
+    def test_a_code_before_its_name(self, tmp_path):
+        with pytest.raises(ConfigError, match=r"Names stand before codes: reeds: \[2\]"):
+            read(write(tmp_path / "a.tif"), classes={"2": "reeds"})
+
 
 class TestReferences:
     def test_no_crs_names_the_key(self, tmp_path):

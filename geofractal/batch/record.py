@@ -97,6 +97,7 @@ class MeasureTally:
             reasons["other reasons"] = sum(count for _, count in kept[REASONS_KEPT:])
         return {
             "measure": self.request.measure,
+            "prefix": self.request.prefix,
             "version": load_measure(self.request.measure).version,
             "options": self.request.options.model_dump(mode="json", by_alias=True),
             "rows": self.rows,

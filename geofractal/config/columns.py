@@ -91,7 +91,7 @@ def _slug(text: str) -> str:
 
 
 def prefixed(columns: Sequence[Column], prefix: str | None) -> tuple[Column, ...]:
-    """Return the columns with ``<prefix>_`` before their names.
+    """Return the columns with ``<prefix>_`` before their names, also where meanings say these.
 
     Short names take the prefix's first two letters and keep as much of themselves as ten bytes hold;
     where two become one, the later ends in a number. Without a prefix nothing changes.
@@ -100,10 +100,12 @@ def prefixed(columns: Sequence[Column], prefix: str | None) -> tuple[Column, ...
         return tuple(columns)
     taken: set[str] = set()
     renamed = []
+    said = "|".join(column.name for column in columns if "_" in column.name)  # others are ordinary words
     for column in columns:
         short = _free(prefix[:2] + column.short, taken, _SHORT_BYTES)
         taken.add(short)
-        renamed.append(replace(column, name=f"{prefix}_{column.name}", short=short))
+        meaning = re.sub(rf"\b({said})\b", rf"{prefix}_\1", column.meaning) if said else column.meaning
+        renamed.append(replace(column, name=f"{prefix}_{column.name}", short=short, meaning=meaning))
     return tuple(renamed)
 
 

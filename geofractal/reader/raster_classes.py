@@ -118,8 +118,9 @@ def _member_codes(name: str, members: Members, own_names: Mapping[int, str]) -> 
     for member in [members] if isinstance(members, int | str) else members:
         if isinstance(member, str) and member not in by_name:
             given = ", ".join(by_name) or "none"
+            turned = f" Names stand before codes: {member}: [{name}]." if name.isdigit() else ""
             raise ConfigError(
-                f"Class {name!r}: the raster has no class called {member!r}; it names: {given}."
+                f"Class {name!r}: the raster has no class called {member!r}; it names: {given}.{turned}"
             )
         found += by_name[member] if isinstance(member, str) else [int(member)]
     return list(dict.fromkeys(found))
