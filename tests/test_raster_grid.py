@@ -155,6 +155,14 @@ class TestProjected:
         with pytest.raises(SourceError, match="outside the area where its CRS"):
             _ = one.distortion
 
+    @pytest.mark.parametrize("unit_m", [1000.0, 1609.344, 0.001])
+    def test_cells_are_as_large_in_any_unit(self, unit_m):
+        def utm(unit_m):
+            crs = f"+proj=utm +zone=32 +datum=WGS84 +to_meter={unit_m}"
+            return grid(crs, tuple(part / unit_m for part in (30.0, 0.0, 5e5, 0.0, -30.0, 6e6)))
+
+        assert cell(utm(unit_m), 7, 9) == pytest.approx(cell(utm(1.0), 7, 9), rel=1e-9)
+
     def test_a_local_plane_is_measured_as_it_is(self):
         feet = CRS.from_wkt('LOCAL_CS["site",UNIT["foot",0.3048]]')
         one = Grid(2, 2, (10.0, 0.0, 0.0, 0.0, -20.0, 0.0), feet)

@@ -336,6 +336,7 @@ def plane_by_ground(crs: CRS, lon: Floats, lat: Floats) -> Floats:
     east, north = radii(crs, np.radians(lat))
     per = 2 * math.radians(step)
     slope = np.stack([by_lon / (per * east), by_lat / (per * north)]).transpose(2, 1, 0)
-    size = np.abs(np.linalg.det(np.nan_to_num(slope, posinf=0, neginf=0)))
+    metres = float(crs.axis_info[0].unit_conversion_factor)
+    size = np.abs(np.linalg.det(np.nan_to_num(slope * metres, posinf=0, neginf=0)))
     slope[~((size > 1e-4) & (size < 1e4))] = np.nan  # also across the seam of a world map
     return np.asarray(slope)
