@@ -15,6 +15,7 @@ from geofractal.errors import ConfigError, GeofractalWarning, LayerError
 from geofractal.estimators.fragmentation import Fragmentation, FragmentationOptions
 from geofractal.landcover.barriers import BARRIER, place_barriers
 from geofractal.landcover.polygon_zones import place_polygon_barriers, place_polygon_zones
+from geofractal.landcover.polygons import class_name
 from geofractal.landcover.zones import place_zones
 from geofractal.patches import open_class_map
 from geofractal.polygon_cover import PolygonCover
@@ -176,7 +177,8 @@ def _polygon_layer(
         placed = place_polygon_zones(_geometries(zones), names, _crs(zones, own), polygons, own)
     if barriers is not None:
         lines = place_polygon_barriers(_geometries(barriers), _crs(barriers, own), own, width)
-    classes = np.array([*(None if pd.isna(name) else str(name) for name in column), None], object)[:-1]
+    told = [None if pd.isna(value) else class_name(value) for value in column]
+    classes = np.array([*told, None], object)[:-1]
     return PolygonCover(polygons, classes, own, zones=placed, barriers=lines)
 
 

@@ -9,6 +9,7 @@ from hypothesis import strategies as st
 from pyproj import CRS
 from scipy import ndimage
 
+from geofractal.cover_api import fragmentation
 from geofractal.kernels import barrier_cuts
 from geofractal.landcover.barriers import place_barriers
 from geofractal.landcover.grid import Grid
@@ -118,3 +119,8 @@ def test_compiled_kernels_equal_their_interpreted_twins(seed):
             patch.setattr(barrier_cuts, name, getattr(barrier_cuts, name).py_func)
         barrier_cuts.cut_links.py_func(segments, 1, twin)
     assert (compiled == twin).all()
+
+
+def test_barriers_left_out_are_told_beside_the_area_of_the_map():
+    found = fragmentation((np.ones((2, 2), int), (1, 0, 0, 0, -1, 0), PLANE), barriers=[shapely.Point(1, -1)])
+    assert found["note"][0] == "barriers left out: Point, not a line (1)"

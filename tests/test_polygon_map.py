@@ -20,6 +20,7 @@ from geofractal.reader.ground import GroundPlane
 from geofractal.synthetic.koch import koch
 
 METRES = CRS.from_wkt(PLANE)
+KILOMETRES = "+proj=utm +zone=33 +datum=WGS84 +units=km"
 BOUNDS, OPEN = "map edge bounds", "map edge is open"
 
 
@@ -166,6 +167,31 @@ class TestBarriers:
         assert figure(found, "largest_patch", "wood") == pytest.approx(largest)
 
 
+class TestWhatIsLeftOut:
+    def test_polygons_and_barriers_left_out_are_told_beside_the_area_of_the_map(self):
+        bow_tie = shapely.Polygon([(0, 0), (1, 1), (1, 0), (0, 1)])
+        point = shapely.LineString([(5, 5), (5, 5)])
+        asked = {"zones": [km(0, 0, 1, 1)], "barriers": [point]}
+        rows = [("a", km(0, 0, 1, 1)), ("a", bow_tie), (None, km(1, 0, 2, 1)), ("a", None)]
+        found = measured(*rows, **asked)
+        notes = found[(found["quantity"] == "area") & (found["cover"] == "all covers")]["note"].tolist()
+        said = "polygons left out: invalid: Self-intersection (1), no class (1), missing geometry (1)"
+        assert isinstance(notes[0], float)  # NaN: the zone has all of its polygons
+        assert notes[1].endswith(f"; {said}; barriers left out: zero length (1)")
+
+    @pytest.mark.parametrize("crs", [32632, 4326, PLANE])
+    def test_no_polygon_at_all(self, crs):
+        found = measured(("a", None), crs=crs)
+        assert found["estimate"].fillna(0).eq(0).all()
+        assert "missing geometry (1)" in found["note"][0]
+
+    def test_whole_numbers_name_classes_whatever_the_columns_type(self):
+        """A column of whole numbers holds decimals once a value is missing."""
+        rows = layer(("a", km(0, 0, 1, 1)), ("b", km(1, 0, 2, 1)), ("c", km(2, 0, 3, 1)))
+        found = fragmentation(rows, cover=[1.0, np.nan, 2.5])
+        assert set(found["cover"]) == {"all covers", "1", "2.5"}
+
+
 class TestBarriersWithAWidth:
     def test_the_strip_is_no_wood_but_stays_in_the_area(self):
         """A road of 200 m across a wood of 4 by 4 km, and what is 500 m from its sides."""
@@ -188,7 +214,7 @@ class TestBarriersWithAWidth:
         found = measured(("wood", km(0, 0, 4, 4)), depth_by_neighbour_m={"barrier": 1000.0}, **asked)
         assert figure(found, "interior_area_at_500m_depth", "wood") == pytest.approx(4 * (4 - 0.2 - 2))
 
-    @pytest.mark.parametrize("crs", [4326, 32632, 3035])
+    @pytest.mark.parametrize("crs", [4326, 32632, 3035, KILOMETRES])
     def test_widths_are_true_on_the_ground(self, crs):
         """A road of 100 m and 20 km, and its round ends."""
         geod = Geod(ellps="WGS84")

@@ -15,6 +15,7 @@ from geofractal.config.yaml_tree import KeyPath
 from geofractal.cover_map import OWN_BARRIER
 from geofractal.errors import ConfigError, GeofractalWarning, LayerError, Problem, SourceError
 from geofractal.landcover.barriers import BARRIER
+from geofractal.landcover.polygons import class_name
 from geofractal.reader.ground import GroundPlane
 from geofractal.reader.layers import LayerInfo, allowed
 from geofractal.reader.raster import Raster, RasterOptions, open_raster
@@ -228,7 +229,7 @@ def class_values(info: LayerInfo, column: str) -> Iterator[str | None]:
     """Yield the class of each polygon of a layer; None where it has none."""
     for part in stream(info, columns=[column]):
         held = part.attributes.column(column).to_pylist()
-        yield from (None if value is None else str(value) for value in held)
+        yield from map(class_name, held)
 
 
 def _class_problems(batch: Batch, plan: CoverPlan) -> Iterator[Problem]:

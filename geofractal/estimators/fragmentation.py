@@ -15,7 +15,7 @@ from geofractal.estimators import fragmentation_quantities as words
 from geofractal.estimators.fragmentation_cells import CellFigures
 from geofractal.estimators.fragmentation_links import link_figures
 from geofractal.estimators.fragmentation_polygons import PolygonLayer, polygon_fragmentation
-from geofractal.estimators.fragmentation_table import Figures, Reporting
+from geofractal.estimators.fragmentation_table import Figures, Reporting, told_barriers
 from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.covers import Pack, asked_packs
 from geofractal.landcover.edges import SharedEdges
@@ -121,6 +121,7 @@ def about(cover: CoverMap) -> Reporting:
         grid.area_unit_m2,
         grid.length_unit_m,
         barred=cover.barriers is not None and cover.barriers.wide,
+        said=[""] * (0 if zones is None else len(zones)) + [told_barriers(cover.barriers)],
         **told,
     )
 

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any, Protocol
 import numpy as np
 
 from geofractal.estimators import fragmentation_quantities as words
-from geofractal.estimators.fragmentation_table import Figures, Reporting
+from geofractal.estimators.fragmentation_table import Figures, Reporting, told_barriers, told_left_out
 from geofractal.estimators.polygon_boxes import add_boxes
 from geofractal.estimators.polygon_interior import add_interior
 from geofractal.estimators.polygon_links import add_links
@@ -45,6 +45,10 @@ class PolygonLayer(Protocol):
     def covers(self) -> tuple[str, ...]: ...  # noqa: D102 - as of geofractal.measure.CoverMap
 
     @property
+    def left_out(self) -> dict[str, int]:
+        """Return why geometries are in no patch, and how many; known once faces were asked for."""
+
+    @property
     def faces(self) -> PolygonMap:
         """Return the map that the polygons make."""
 
@@ -75,7 +79,7 @@ def polygon_fragmentation(layer: PolygonLayer, options: FragmentationOptions) ->
         () if zones is None else zones.overlaps,
         [0.0] * len(problems),
         layer.barriers is not None and layer.barriers.wide,
-        [_said(found, units.get(k), k == len(problems)) for k in range(len(problems) + 1)],
+        [*(_said_of_zone(found, units.get(k)) for k in range(len(problems))), _said_of_map(layer)],
     )
     figures = Figures(about, options)
     for pack in about.packs():
@@ -88,14 +92,21 @@ def polygon_fragmentation(layer: PolygonLayer, options: FragmentationOptions) ->
     return figures.table()
 
 
-def _said(found: PolygonMap, unit: Unit | None, whole: bool) -> str:  # noqa: FBT001 - told where it is called
-    """Return what is to be said beside the area of a unit."""
+def _said_of_map(layer: PolygonLayer) -> str:
+    """Return what is to be said beside the area of the whole map."""
+    edge = EDGE_UNKNOWN if layer.faces.extent_faces is None else ""
+    overlap = _said_of_zone(layer.faces, layer.faces.whole)
+    left_out = told_left_out("polygons", layer.left_out)
+    return "; ".join(filter(None, (edge, overlap, left_out, told_barriers(layer.barriers))))
+
+
+def _said_of_zone(found: PolygonMap, unit: Unit | None) -> str:
+    """Return what is to be said beside the area of a zone, None for one that cannot be measured."""
     if unit is None:
         return ""
     several = np.array([len(one) > 1 for one in found.sets], np.bool_)[found.kinds[unit.faces]]
     twice = int(found.area[unit.faces[several]].sum()) * AREA_UNIT_M2 / 1e6
-    said = f"polygons of different classes overlap on {twice:.6g} km2, which each has" if twice else ""
-    return "; ".join(filter(None, (EDGE_UNKNOWN if whole and found.extent_faces is None else "", said)))
+    return f"polygons of different classes overlap on {twice:.6g} km2, which each has" if twice else ""
 
 
 def _add_cells(pack: Pack, options: FragmentationOptions, figures: Figures) -> None:

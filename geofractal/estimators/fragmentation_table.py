@@ -31,6 +31,17 @@ NO_DATA = "no data in this zone"
 ABSENT = "no patch of this class"
 
 
+def told_left_out(what: str, counts: Mapping[str, int]) -> str:
+    """Return how many geometries were left out and why; empty where none was."""
+    reasons = ", ".join(f"{reason} ({count})" for reason, count in counts.items())
+    return f"{what} left out: {reasons}" if reasons else ""
+
+
+def told_barriers(barriers: Any) -> str:
+    """Return how many barriers, None where there are none, were left out and why."""
+    return told_left_out("barriers", {} if barriers is None else barriers.left_out)
+
+
 @dataclass(frozen=True)
 class Reporting:
     """What the rows of the table are about.

@@ -317,7 +317,7 @@ def lon_lat(crs: CRS, x: Floats, y: Floats) -> tuple[Floats, Floats]:
     project = Proj(crs)
     lon, lat = project(x, y, inverse=True)
     back = np.stack(project(lon, lat))
-    span = max(1.0, float(np.ptp(x)), float(np.ptp(y)))
+    span = max([1.0, *(float(np.ptp(part)) for part in (x, y) if len(part))])
     good = np.abs(back - np.stack([x, y])).max(axis=0) < 1e-3 * span
     return np.where(good, lon, np.nan), np.where(good, lat, np.nan)
 

@@ -93,6 +93,17 @@ def _as_array(geometries: list[Any]) -> Geometries:
     return out
 
 
+def class_name(value: Any) -> str | None:
+    """Return the name of a class; None for one that is missing.
+
+    Columns of whole numbers become ones of decimals where values are missing: class 1 stays '1'.
+    """
+    if value is None or value != value:  # noqa: PLR0124 - NaN alone is unlike itself
+        return None
+    whole = isinstance(value, float) and value.is_integer()
+    return str(int(value) if whole else value)
+
+
 def unusable(geometry: Any) -> str:
     """Return why a geometry is no sound polygon; empty where it is one."""
     if geometry is None:
