@@ -1,5 +1,7 @@
 """The row spool gives back, for any order of parts, what was written."""
 
+import os
+
 import numpy as np
 import pyarrow as pa
 import pytest
@@ -7,6 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from geofractal.batch.spool import FID, ROW, RowSpool
+from geofractal.errors import OutputError
 from geofractal.measure import Column
 
 COLUMNS = (
@@ -65,3 +68,23 @@ def test_a_column_of_nulls_stays_a_column_of_nulls(tmp_path, kind):
     with RowSpool(tmp_path / "rows", (column,), 3) as spool:
         spool.write(_part([0, 1, 2], [3, 4, 5], *nulls.columns, names=["empty"]))
         assert spool.read(0, 3).equals(nulls)
+
+
+@pytest.mark.skipif(os.name != "posix", reason="file size limits are POSIX")
+@pytest.mark.parametrize("rows", [300, 30_000])
+def test_a_full_disk_is_told_when_rows_are_written_and_nothing_stays(tmp_path, rows):
+    """However few they are: what waits in memory would fail when it is read back, or at the end."""
+    import resource
+
+    column = Column("ratio", "ratio", "number", "", "a number")
+    path, places = tmp_path / "rows", np.arange(rows)
+    soft, hard = resource.getrlimit(resource.RLIMIT_FSIZE)
+    with RowSpool(path, (column,), rows) as spool:
+        figures = _part(places, places, pa.array(places / 2), names=["ratio"])
+        resource.setrlimit(resource.RLIMIT_FSIZE, (1000, hard))
+        try:
+            with pytest.raises(OutputError, match="rows: cannot be written: the disk is full"):
+                spool.write(figures)
+        finally:
+            resource.setrlimit(resource.RLIMIT_FSIZE, (soft, hard))
+    assert not path.exists()

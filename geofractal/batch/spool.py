@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import Any, Self
 
@@ -56,6 +57,7 @@ class RowSpool:
                 with in_plain_words(self._path):
                     self._file.seek(int(run_rows[0]) * self._record.itemsize)
                     self._file.write(run.tobytes())
+                    self._file.flush()  # a full disk is told here, not when the file is read or closed
         self.rows_written += len(rows)
 
     def read(self, start: int, stop: int) -> pa.RecordBatch:
@@ -75,7 +77,8 @@ class RowSpool:
 
     def __exit__(self, *_: object) -> None:
         """Close the file and remove it."""
-        self._file.close()
+        with suppress(OSError):  # what could not be written was told when it was to be
+            self._file.close()
         self._path.unlink(missing_ok=True)
 
     def _records(self, start: int, stop: int) -> Any:

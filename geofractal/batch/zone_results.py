@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -54,7 +55,7 @@ def zone_spool(layer: LayerPlan, covers: Sequence[MeasuredCover], folder: Path) 
         for work, part in found.works:
             if work.zones is not None and work.zones.name == layer.name:
                 arrays |= _filled(work.request.zone_columns(), part, rows.names, rows.wanted)
-    spool = RowSpool(folder / f"{layer.name}.zones", layer.zone_columns, n)
+    spool = RowSpool(folder / f"{layer.name}.{os.getpid()}.zones", layer.zone_columns, n)
     fids = pa.nulls(n, pa.int64()) if rows.fids is None else pa.array(rows.fids)
     names = [column.name for column in layer.zone_columns]
     held = [pa.array(arrays[c.name], ARROW_TYPES[c.kind], from_pandas=True) for c in layer.zone_columns]
