@@ -165,6 +165,12 @@ def test_a_class_that_no_polygon_has_is_warned_of_and_has_no_area(site):
     assert estimates(site, "area", name="habitats")[WHOLE_MAP, "reedbad"] == 0
 
 
+def test_a_class_that_no_polygon_has_bounds_no_interior_and_is_warned_of(site):
+    asked = {**POLYGONS, "interior-depths-m": [10], "depth-by-neighbour-m": {"pastur": 20}}
+    with pytest.warns(GeofractalWarning, match=r"depth-by-neighbour-m.*'pastur'.*did you mean 'pasture'"):
+        run(site, {"habitats": habitats()}, [asked])
+
+
 def test_check_tells_plane_groups_and_zones_beforehand(site):
     asked = {**POLYGONS, "zones": "zones", "covers": ["habitat"]}
     batch = load_config(write_batch(site, {"habitats": habitats(), "zones": zones()}, [asked]))

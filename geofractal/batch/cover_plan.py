@@ -282,3 +282,6 @@ def _classes_named(batch: Batch, plan: CoverPlan) -> Iterator[tuple[KeyPath, str
             for place, cover in enumerate(request.covers):
                 if cover not in plan.groups:
                     yield ("measures", index, "covers", place), cover
+            for neighbour in getattr(request.options, "depth_by_neighbour_m", ()):
+                if neighbour != BARRIER or not any(one.width_m for one in request.barriers):
+                    yield ("measures", index, "depth-by-neighbour-m", neighbour), neighbour
