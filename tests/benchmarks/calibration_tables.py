@@ -67,32 +67,26 @@ def show(row: CalibrationRow) -> None:
     )
 
 
-def affordable(curves: int, size: int) -> int:
-    return min(curves, 60) if size > 50_000 else curves
-
-
 def random_families(curves: int, sizes: list[int]) -> None:
     print("\nRandom families, true D known\n" + HEAD)
     for size in sizes:
-        some = affordable(curves, size)
         for name, draw in SET_ON.items():
             for d in DIMENSIONS:
-                show(summarise(name, d, size, judged(partial(draw, d, size), some, size)))
+                show(summarise(name, d, size, judged(partial(draw, d, size), curves, size)))
         for name, (d, single) in ONE_DIMENSION.items():
             if name.startswith("loop-erased") and size > 50_000:
                 continue  # needs 16 bytes times the square of the radius
-            show(summarise(name, d, size, judged(partial(single, size), some, size)))
+            show(summarise(name, d, size, judged(partial(single, size), curves, size)))
 
 
 def rings(curves: int, sizes: list[int]) -> None:
     print("\nRings\n" + HEAD)
     for size in sizes:
-        some = affordable(curves, size)
         for name, draw in RINGS.items():
             for d in DIMENSIONS:
-                show(summarise(name, d, size, judged(partial(draw, d, size), some, size)))
+                show(summarise(name, d, size, judged(partial(draw, d, size), curves, size)))
         for name, (d, single) in RINGS_OF_ONE_DIMENSION.items():
-            show(summarise(name, d, size, judged(partial(single, size), some, size)))
+            show(summarise(name, d, size, judged(partial(single, size), curves, size)))
 
 
 def mapped(curves: int, sizes: list[int]) -> None:
