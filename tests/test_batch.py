@@ -3,6 +3,8 @@
 import os
 import shutil
 import sqlite3
+import subprocess
+import sys
 from dataclasses import replace
 from pathlib import Path
 
@@ -291,6 +293,18 @@ def test_a_stopped_run_keeps_its_parts_and_the_next_goes_on_from_them(tmp_path, 
     run(tmp_path, layers, [DIVIDER], run={"workers": 1})
     assert (tmp_path / "out" / "in.gpkg").read_bytes() == resumed
     assert not (tmp_path / "out" / ".geofractal-parts").exists()
+
+
+def test_a_run_leaves_the_kept_parts_to_another_that_is_at_work(tmp_path):
+    folder = tmp_path / "out" / ".geofractal-parts"
+    folder.mkdir(parents=True)
+    with subprocess.Popen([sys.executable, "-c", "input()"], stdin=subprocess.PIPE) as other:
+        (folder / f"{other.pid}.run").touch()
+        run_rivers(tmp_path, [wiggle(0)])
+        assert any(folder.glob("*.arrow"))
+        other.kill()
+    run_rivers(tmp_path, [wiggle(0)])
+    assert not folder.exists()
 
 
 @pytest.mark.parametrize("left", [b"", b"not whole", None])

@@ -28,7 +28,7 @@ from geofractal.config.models import Batch
 from geofractal.errors import GeofractalError, LayerError, SourceError
 from geofractal.progress import Progress
 from geofractal.writer.attach import Addition
-from geofractal.writer.commit import in_plain_words, publish
+from geofractal.writer.commit import alive, in_plain_words, publish
 from geofractal.writer.dictionary import write_data_dictionary
 from geofractal.writer.layer import Written, write_layer
 from geofractal.writer.rows import Results
@@ -92,6 +92,9 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
     with ExitStack() as stack:
         with in_plain_words(folder):
             folder.mkdir(parents=True, exist_ok=True)
+            here = folder / f"{os.getpid()}.run"
+            here.touch()
+        stack.callback(here.unlink, missing_ok=True)
         interrupt.set_kept(f"Measured parts are kept in {folder}; run the batch again to go on from there.")
         for cover in plan.covers:
             try:
@@ -122,7 +125,8 @@ def run_batch(batch: Batch, *, progress: Progress | None = None) -> dict[str, An
         record = run_record(batch, whole, covers, failed, started)
         with publish(batch.outputs.folder / RECORD) as part:
             part.write_text(json.dumps(record, indent=1, ensure_ascii=False), encoding="utf-8")
-    shutil.rmtree(folder, ignore_errors=True)
+    if not any(alive(int(other.stem)) for other in folder.glob("*.run")):
+        shutil.rmtree(folder, ignore_errors=True)
     return record
 
 

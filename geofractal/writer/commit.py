@@ -132,11 +132,11 @@ def _left_by_dead_runs(target: Path) -> Iterator[Path]:
     pattern = re.compile(re.escape(f".{target.name}.") + r"(\d+)\.part")
     for path in _starting(target.parent, f".{target.name}."):
         found = pattern.match(path.name)
-        if found and not _alive(int(found[1])):
+        if found and not alive(int(found[1])):
             yield path
 
 
-def _alive(pid: int) -> bool:
+def alive(pid: int) -> bool:
     """Tell whether another process of this number runs; in containers a new run often has the old one's."""
     if (
         pid == os.getpid() or os.name != "posix"
