@@ -1,5 +1,6 @@
 """Layers of polygons through the batch: fragmentation and patches with zones, groups and barriers."""
 
+import json
 import re
 
 import geopandas as gpd
@@ -169,6 +170,16 @@ def test_a_class_that_no_polygon_has_bounds_no_interior_and_is_warned_of(site):
     asked = {**POLYGONS, "interior-depths-m": [10], "depth-by-neighbour-m": {"pastur": 20}}
     with pytest.warns(GeofractalWarning, match=r"depth-by-neighbour-m.*'pastur'.*did you mean 'pasture'"):
         run(site, {"habitats": habitats()}, [asked])
+
+
+def test_the_record_of_polygons_measured_both_ways_tells_of_rows_and_of_classes(site):
+    run(site, {"habitats": habitats()}, [POLYGONS, {"measure": "box-dimension", "of": "habitats"}])
+    record = json.loads((site / "out" / "run_record.json").read_text(encoding="utf-8"))
+    told = record["layers"]["habitats"]
+    assert {one["measure"] for one in told["measures"]} == {"box-dimension", "fragmentation"}
+    assert told["copies"]
+    assert told["files"]
+    assert told["rows"] == CODES.size
 
 
 def test_check_tells_plane_groups_and_zones_beforehand(site):

@@ -122,6 +122,7 @@ def run_record(
     started: datetime,
 ) -> dict[str, Any]:
     """Return the record of a run that has ended."""
+    layers = {found.plan.name: layer_record(found, batch) for found in measured}
     maps = {found.plan.name: cover_record(found) for found in covers}
     refused = sum(tally.refused for found in measured for tally in found.tallies)
     refused += sum(tally["refused"] for told in maps.values() for tally in told["measures"])
@@ -140,11 +141,19 @@ def run_record(
             {"path": str(path), "size_bytes": before.size, "sha256": before.sha256}
             for path, before in sorted(inputs.items())
         ],
-        "layers": {found.plan.name: layer_record(found, batch) for found in measured} | maps,
+        "layers": layers | {name: _joined(layers.get(name), told) for name, told in maps.items()},
         "failed_layers": {name: str(error) for name, error in failed.items()},
         "versions": show_versions(),
         "cautions": CAUTIONS,
     }
+
+
+def _joined(layer: dict[str, Any] | None, cover: dict[str, Any]) -> dict[str, Any]:
+    """Return the record of a class map; with that of its rows, where polygons were measured both ways."""
+    if layer is None:
+        return cover
+    seconds = {step: round(layer["seconds"][step] + cover["seconds"][step], 3) for step in cover["seconds"]}
+    return cover | layer | {"measures": [*layer["measures"], *cover["measures"]], "seconds": seconds}
 
 
 def layer_record(found: Measured, batch: Batch) -> dict[str, Any]:
