@@ -341,4 +341,4 @@ def test_an_error_in_the_middle_ends_the_reading_thread(tmp_path):
     strips = open_raster(path, RasterOptions(strip_rows=1)).strips()
     assert next(strips).codes[0, 0] != NOT_COVERED
     strips.close()
-    assert not [thread for thread in threading.enumerate() if thread.name == "raster-reader"]
+    assert not [thread for thread in threading.enumerate() if thread.name == "strips-ahead"]

@@ -7,13 +7,12 @@ strips and GDAL's block cache, which is set here since its default is a share of
 from __future__ import annotations
 
 import math
-import queue
-import threading
-from collections.abc import Callable, Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import AbstractContextManager
 from dataclasses import dataclass
 from typing import Any
 
+from geofractal.landcover.ahead import run_ahead
 from geofractal.landcover.grid import Grid
 from geofractal.landcover.strips import Strip
 from geofractal.reader.raster_classes import Legend, Members, Remapper, make_legend, own_names
@@ -87,7 +86,7 @@ class Raster:
 
     def strips(self) -> Iterator[Strip]:
         """Yield the raster's strips from the top, without gaps, read by a thread of their own."""
-        return _read_ahead(self._read)
+        return run_ahead(self._read, AHEAD)
 
     def _band(self) -> AbstractContextManager[Band]:
         warped_to = None if self.grid is self.source_grid else self.grid
@@ -144,38 +143,3 @@ def strip_rows(columns: int, block_rows: int) -> int:
     if 2 * rows > block_rows:
         return round(rows / block_rows) * block_rows
     return math.ceil(block_rows / math.ceil(block_rows / rows))
-
-
-def _read_ahead(read: Callable[[], Iterator[Strip]]) -> Iterator[Strip]:
-    """Run `read` in a thread and yield what it yields; an error there is raised here."""
-    waiting: queue.Queue[Strip | BaseException | None] = queue.Queue(AHEAD)
-    stopped = threading.Event()
-
-    def offer(item: Strip | BaseException | None) -> None:
-        while not stopped.is_set():
-            try:
-                waiting.put(item, timeout=0.1)
-            except queue.Full:
-                continue
-            return
-
-    def work() -> None:
-        try:
-            for strip in read():
-                offer(strip)
-                if stopped.is_set():
-                    return
-            offer(None)
-        except BaseException as error:  # noqa: BLE001 - raised again in the caller's thread
-            offer(error)
-
-    reader = threading.Thread(target=work, name="raster-reader", daemon=True)
-    reader.start()
-    try:
-        while (item := waiting.get()) is not None:
-            if isinstance(item, BaseException):
-                raise item
-            yield item
-    finally:
-        stopped.set()
-        reader.join()
